@@ -1,0 +1,1 @@
+"""Turns to answers: the statistics of turns, in numpy and scipy alone."""

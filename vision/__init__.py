@@ -1,0 +1,1 @@
+"""Pixels to turns: everything that looks at a clip, and nothing that knows about trials or files."""
