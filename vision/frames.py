@@ -1,0 +1,329 @@
+"""The only module that opens a clip: frames with luma, true presentation time, upright.
+
+Nothing is copied that need not be: `Frame.luma` is a view into the decoder's own buffer wherever the pixel
+format keeps luma in its first plane. Rotation and mirror flags of the container are applied as array views.
+A decoder thread runs ahead of the caller by a few frames, so decoding overlaps with tracking.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import queue
+import threading
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from types import TracebackType
+from typing import Any, Self
+
+import av
+import numpy as np
+from av.sidedata.sidedata import Type as SideDataType
+from numpy.typing import NDArray
+
+from vision.errors import ClipError
+from vision.records import ClipInfo
+
+LumaImage = NDArray[np.uint8] | NDArray[np.uint16]
+
+FRAMES_AHEAD = 6
+"""Decoded frames that may wait for the tracker: enough to overlap, little memory even in 4K."""
+
+MAX_PIXELS = 64_000_000
+"""A larger picture is refused: no phone makes it, and a forged header could exhaust the memory."""
+
+_LUMA_FIRST = ("yuv", "nv12", "nv21", "nv16", "p010", "p016", "gray")
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Frame:
+    """One decoded picture.
+
+    Parameters
+    ----------
+    index : int
+        Count of frames decoded so far, from 0.
+    time_s : float
+        Presentation time, counted from the first frame of the clip.
+    luma : ndarray, shape (height, width), uint8 or uint16
+        Brightness, upright; read only, and possibly strided.
+    is_key : bool
+        Whether the picture was coded without reference to others.
+    """
+
+    index: int
+    time_s: float
+    luma: LumaImage
+    is_key: bool
+
+
+@dataclass(frozen=True, slots=True)
+class _Upright:
+    """How to turn a stored picture upright: quarter turns counter-clockwise, after an optional flip."""
+
+    quarter_turns: int
+    flip: bool
+
+    def apply(self, image: LumaImage) -> LumaImage:
+        """Return an upright view of `image`."""
+        if self.flip:
+            image = image[:, ::-1]
+        return np.rot90(image, self.quarter_turns) if self.quarter_turns else image
+
+
+class Clip:
+    """A clip opened for reading; use it as a context manager.
+
+    Parameters
+    ----------
+    path : path-like
+        Any container and codec that FFmpeg reads.
+
+    Raises
+    ------
+    ClipError
+        If the file is missing, holds no video, or cannot be decoded at all.
+    """
+
+    def __init__(self, path: str | Path) -> None:
+        self.path = Path(path)
+        self._container = _open_container(self.path)
+        try:
+            self._stream = _video_stream(self._container, self.path)
+            self._upright = _upright_of(self.path)
+        except BaseException:
+            self._container.close()
+            raise
+        self.info = _clip_info(self._container, self._stream, self._upright)
+        self.problems: list[str] = []
+        """What went wrong while reading, a sentence each; complete once `frames` is exhausted."""
+        self._stop = threading.Event()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Stop the decoder thread and close the file."""
+        self._stop.set()
+        self._container.close()
+
+    def frames(self) -> Iterator[Frame]:
+        """Yield the frames in presentation order, decoding ahead in a thread of its own.
+
+        Raises
+        ------
+        ClipError
+            If not a single frame can be decoded.
+        """
+        waiting: queue.Queue[Frame | BaseException | None] = queue.Queue(maxsize=FRAMES_AHEAD)
+        worker = threading.Thread(target=self._decode_into, args=(waiting,), name="decode", daemon=True)
+        worker.start()
+        try:
+            n_frames = 0
+            while (item := waiting.get()) is not None:
+                if isinstance(item, BaseException):
+                    raise item
+                n_frames += 1
+                yield item
+            if n_frames == 0:
+                raise ClipError(f"{self.path.name}: no picture in it can be decoded; is the file complete?")
+        finally:
+            self._stop.set()
+            with contextlib.suppress(queue.Empty):
+                while True:
+                    waiting.get_nowait()
+            worker.join()
+            self._stop.clear()
+
+    def _decode_into(self, waiting: queue.Queue[Frame | BaseException | None]) -> None:
+        try:
+            for frame in self._decode():
+                if not self._put(waiting, frame):
+                    return
+            self._put(waiting, None)
+        except BaseException as error:  # handed to the caller's thread, never lost
+            self._put(waiting, error)
+
+    def _put(
+        self, waiting: queue.Queue[Frame | BaseException | None], item: Frame | BaseException | None
+    ) -> bool:
+        while not self._stop.is_set():
+            with contextlib.suppress(queue.Full):
+                waiting.put(item, timeout=0.1)
+                return True
+        return False
+
+    def _decode(self) -> Iterator[Frame]:
+        clock = _Clock(self._stream)
+        n_frames = 0
+        for picture in self._pictures(clock):
+            yield Frame(n_frames, clock.time_s(picture), self._luma(picture), bool(picture.key_frame))
+            n_frames += 1
+
+    def _pictures(self, clock: _Clock) -> Iterator[Any]:
+        """Yield decoded pictures, stepping over packets that cannot be decoded."""
+        packets = self._container.demux(self._stream)
+        n_bad = 0
+        while True:
+            try:
+                packet = next(packets)
+            except StopIteration:
+                break
+            except (av.error.FFmpegError, EOFError) as error:
+                self._note(f"the file breaks off or is damaged after {clock.last_s:.2f} s ({_reason(error)})")
+                break
+            try:
+                yield from packet.decode()
+            except (av.error.FFmpegError, EOFError):
+                n_bad += 1
+        if n_bad:
+            self._note(f"{n_bad} damaged packets could not be decoded")
+
+    def _note(self, problem: str) -> None:
+        self.problems.append(f"{self.path.name}: {problem}")
+
+    def _luma(self, picture: Any) -> LumaImage:
+        if picture.width * picture.height > MAX_PIXELS:
+            raise ClipError(_too_large(self.path, picture.width, picture.height))
+        return self._upright.apply(_luma_plane(picture))
+
+
+class _Clock:
+    """Presentation times from the first frame on, never running backwards."""
+
+    def __init__(self, stream: Any) -> None:
+        self._base = float(stream.time_base) if stream.time_base else 0.0
+        rate = stream.average_rate or stream.base_rate
+        self._step_s = 1.0 / float(rate) if rate else 1.0 / 30.0
+        self._first_s: float | None = None
+        self.last_s = 0.0
+
+    def time_s(self, picture: Any) -> float:
+        if picture.pts is None or not self._base:
+            now_s = self.last_s + self._step_s if self._first_s is not None else 0.0
+            self._first_s = 0.0 if self._first_s is None else self._first_s
+        else:
+            stamp_s = picture.pts * self._base
+            self._first_s = stamp_s if self._first_s is None else self._first_s
+            now_s = stamp_s - self._first_s
+        self.last_s = max(self.last_s, now_s)
+        return self.last_s
+
+
+def _open_container(path: Path) -> Any:
+    if path.is_dir():
+        raise ClipError(f"{path}: is a folder, not a clip; give the clip files in it")
+    if not path.exists():
+        raise ClipError(f"{path}: no such file; check the path of the clip")
+    try:
+        return av.open(str(path), mode="r", metadata_errors="replace")
+    except (av.error.FFmpegError, OSError, ValueError) as error:
+        raise ClipError(
+            f"{path.name}: cannot be read as a clip ({_reason(error)}); accepted: mp4, mov, mkv, webm, avi"
+        ) from error
+
+
+def _video_stream(container: Any, path: Path) -> Any:
+    if not container.streams.video:
+        raise ClipError(f"{path.name}: holds no video; accepted: mp4, mov, mkv, webm, avi with a picture")
+    stream = container.streams.video[0]
+    if "image2" in container.format.name or container.format.name.endswith("_pipe"):
+        raise ClipError(f"{path.name}: is a still picture, not a clip; film the turns")
+    try:
+        width, height = stream.codec_context.width, stream.codec_context.height
+    except AttributeError:
+        raise ClipError(f"{path.name}: the codec of its video is not known here") from None
+    if width * height > MAX_PIXELS:
+        raise ClipError(_too_large(path, width, height))
+    stream.thread_type = "AUTO"
+    return stream
+
+
+def _too_large(path: Path, width_px: int, height_px: int) -> str:
+    return (
+        f"{path.name}: pictures of {width_px} x {height_px} px; accepted up to {MAX_PIXELS // 10**6} million "
+        "pixels; film in 4K at the most"
+    )
+
+
+def _upright_of(path: Path) -> _Upright:
+    """Read the display matrix off the first frame that decodes, through a container of its own."""
+    matrix = None
+    with _open_container(path) as container, contextlib.suppress(av.error.FFmpegError, EOFError):
+        for picture in container.decode(container.streams.video[0]):
+            matrix = _display_matrix(picture)
+            break
+    return upright_from_matrix(matrix) if matrix is not None else _Upright(0, flip=False)
+
+
+def _display_matrix(picture: Any) -> NDArray[np.float64] | None:
+    for item in picture.side_data:
+        if item.type == SideDataType.DISPLAYMATRIX:
+            raw = np.frombuffer(bytes(item), dtype=np.int32, count=9).reshape(3, 3)
+            return raw[:2, :2] / 65536.0
+    return None
+
+
+def upright_from_matrix(matrix: NDArray[np.float64]) -> _Upright:
+    """Return the views that show a picture as its display matrix asks.
+
+    Parameters
+    ----------
+    matrix : ndarray, shape (2, 2)
+        Upper left of the container's matrix: the row vector (x, y) of a stored pixel, times this, is where
+        it is shown (x right, y down).
+
+    Notes
+    -----
+    Only quarter turns and mirrors are honoured; any other matrix is rounded to the nearest.
+    """
+    flip = bool(np.linalg.det(matrix) < 0)
+    if flip:
+        matrix = np.diag([-1.0, 1.0]) @ matrix
+    # Stored +x is shown along (matrix[0, 0], matrix[0, 1]); y points down, hence the minus.
+    angle_rad = np.arctan2(-matrix[0, 1], matrix[0, 0])
+    return _Upright(int(np.round(angle_rad / (np.pi / 2))) % 4, flip)
+
+
+def _clip_info(container: Any, stream: Any, upright: _Upright) -> ClipInfo:
+    width, height = stream.codec_context.width, stream.codec_context.height
+    if upright.quarter_turns % 2:
+        width, height = height, width
+    rate = stream.average_rate
+    duration_s = container.duration / 1e6 if container.duration else None
+    return ClipInfo(
+        width_px=width,
+        height_px=height,
+        codec=stream.codec_context.name,
+        pixel_format=stream.codec_context.pix_fmt or "unknown",
+        rotation_deg=90 * upright.quarter_turns,
+        mirrored=upright.flip,
+        nominal_rate_hz=float(rate) if rate else None,
+        duration_s=duration_s,
+    )
+
+
+def _luma_plane(picture: Any) -> LumaImage:
+    name = picture.format.name
+    if not name.startswith(_LUMA_FIRST) or name.endswith("be"):
+        picture = picture.reformat(format="gray")
+        name = "gray"
+    plane = picture.planes[0]
+    if name.startswith(("yuyv", "yvyu", "uyvy")):
+        picture = picture.reformat(format="gray")
+        plane = picture.planes[0]
+    wide = picture.format.components[0].bits > 8
+    dtype = np.uint16 if wide else np.uint8
+    rows = np.frombuffer(plane, dtype=dtype).reshape(plane.height, plane.line_size // dtype().itemsize)
+    luma: LumaImage = rows[:, : plane.width]
+    return luma
+
+
+def _reason(error: BaseException) -> str:
+    text = getattr(error, "strerror", None) or str(error) or type(error).__name__
+    return str(text).strip().rstrip(".").lower()

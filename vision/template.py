@@ -1,0 +1,99 @@
+"""A printed marker as a camera sees it: grey values and their slopes, blurred, ready to be sampled.
+
+A marker is a sum of black squares, so its picture under a Gaussian point spread is a product of sums of error
+functions along the two axes: exact at any point, slopes included. Sharpening inside the camera adds a halo; it is
+modelled as the unsharp mask that cameras use, a difference of two such pictures.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import ndtr
+
+from vision.records import FloatArray
+
+QUIET_MODULES = 0.8
+"""Width of the white surround that is compared with the picture, in modules."""
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Optics:
+    """How the camera renders an edge.
+
+    Parameters
+    ----------
+    blur_px : float
+        Standard deviation of the point spread, pixel box included, in image pixels.
+    halo : float
+        Strength of the unsharp mask; 0 for none.
+    halo_px : float
+        Its radius (standard deviation).
+    """
+
+    blur_px: float
+    halo: float = 0.0
+    halo_px: float = 2.0
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Template:
+    """A marker's picture on a fine grid.
+
+    Parameters
+    ----------
+    channels : ndarray, shape (S, S, 4), float32
+        White (1) to black (0), its slopes per unit of side along x and y, and 1 where the template is valid.
+    sample_from_unit : ndarray, shape (3, 3)
+        Map from marker coordinates (units of side, centre at 0, y down) to samples of the grid.
+    """
+
+    channels: NDArray[np.float32]
+    sample_from_unit: FloatArray
+    unit_from_sample: FloatArray
+
+
+def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) -> Template:
+    """Return the blurred template of a printed marker.
+
+    Parameters
+    ----------
+    black : ndarray of bool, shape (n, n)
+        The black modules, border included.
+    side_px : float
+        Size of the marker in the picture: fixes how fine the grid must be and how wide the blur is.
+    optics : Optics
+    """
+    n_modules = black.shape[0]
+    quiet = QUIET_MODULES / n_modules
+    per_side = int(np.clip(3.0 * side_px, 12 * n_modules, 24 * n_modules))
+    n_samples = int(np.ceil((1.0 + 2.0 * quiet) * per_side))
+    unit = (np.arange(n_samples) + 0.5) / per_side - (0.5 + quiet)
+    picture, slope_x, slope_y = _blurred(black, unit, optics.blur_px / side_px)
+    if optics.halo:
+        wide = float(np.hypot(optics.blur_px, optics.halo_px)) / side_px
+        far, far_x, far_y = _blurred(black, unit, wide)
+        picture, slope_x, slope_y = (
+            (1.0 + optics.halo) * near - optics.halo * away
+            for near, away in ((picture, far), (slope_x, far_x), (slope_y, far_y))
+        )
+    channels = np.stack([picture, slope_x, slope_y, np.ones_like(picture)], axis=-1).astype(np.float32)
+    offset = (0.5 + quiet) * per_side - 0.5
+    sample_from_unit = np.array([[per_side, 0.0, offset], [0.0, per_side, offset], [0.0, 0.0, 1.0]])
+    return Template(channels, sample_from_unit, np.linalg.inv(sample_from_unit))
+
+
+def _blurred(
+    black: NDArray[np.bool_], unit: FloatArray, blur: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the picture and its slopes on the grid `unit` x `unit`, blur in units of side."""
+    edges = np.linspace(-0.5, 0.5, black.shape[0] + 1)
+    standard = (unit[:, None] - edges) / blur
+    steps = ndtr(standard)
+    bumps = np.exp(-0.5 * standard**2) / (np.sqrt(2.0 * np.pi) * blur)
+    cover = steps[:, :-1] - steps[:, 1:]  # how much of module j is seen from sample i
+    slope = bumps[:, :-1] - bumps[:, 1:]
+    ink = black.astype(np.float64)
+    return 1.0 - cover @ ink @ cover.T, -(cover @ ink @ slope.T), -(slope @ ink @ cover.T)
