@@ -19,7 +19,7 @@ QUIET_MODULES = 0.8
 """Width of the white surround that is compared with the picture, in modules."""
 
 
-@dataclass(frozen=True, kw_only=True, slots=True)
+@dataclass(frozen=True, slots=True)
 class Optics:
     """How the camera renders an edge.
 

@@ -1,0 +1,303 @@
+"""Calibration of the deck plane by the robot's own rotation: planar bundle adjustment.
+
+The rigid pair, turned through many headings, makes circles of the plane's circles; that fixes the plane map, the
+lens term, the pair's own geometry and a pose per frame together (Triggs et al. 2000, with the poses eliminated by
+Schur complement). Every parameter that the data may leave open carries a weak prior of what phones and robots are
+like, so that the returned covariance is finite, and as wide as the truth.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from vision.errors import PlaneError
+from vision.plane import (
+    AFT_RAD,
+    AFT_SIZE,
+    BASE,
+    FORE_RAD,
+    LENS,
+    LIFT,
+    N_GLOBAL,
+    SHAPE,
+    Units,
+    body_points,
+    project_pair,
+    shape_from_homography,
+    to_plane,
+    units_for,
+)
+from vision.records import FloatArray
+from vision.rigid import rigid_between
+from vision.track import CornerTrack
+
+PRIOR_SD = {"k1": 0.15, "k2": 0.03, "aft_size": 0.05, "lift_x": 0.05, "lift_y": 0.05}
+"""Standard deviations of the weak priors: lens terms at half a diagonal, size ratio, lift in marker distances."""
+
+N_HEADING_BINS = 72
+PER_BIN = 3
+MAX_STEPS = 40
+CALM_SMEAR_PX = 2.0
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class Calibration:
+    """The plane, the lens and the pair, with their joint covariance.
+
+    Parameters
+    ----------
+    p : ndarray, shape (13,)
+        Global parameters in the order of `vision.plane.NAMES`.
+    cov : ndarray, shape (13, 13)
+        Their covariance, scaled by the misfit actually found.
+    units : Units
+    misfit : float
+        Chi-square per degree of freedom against the corners' own information: 1 for pure sensor noise, more where
+        coding or the model leaves something.
+    n_frames : int
+        Frames that entered.
+    headings_rad : ndarray, shape (n_frames,)
+    turned_rad : float
+        Extent of headings covered, at most 2 pi.
+    residual_px : float
+        Root mean square corner residual.
+    """
+
+    p: FloatArray
+    cov: FloatArray
+    units: Units
+    misfit: float
+    n_frames: int
+    headings_rad: FloatArray
+    turned_rad: float
+    residual_px: float
+
+
+def prior(n_global: int = N_GLOBAL) -> tuple[FloatArray, FloatArray]:
+    """Return prior means and precisions of the global parameters; precision 0 where there is no prior."""
+    mean, precision = np.zeros(n_global), np.zeros(n_global)
+    mean[AFT_SIZE] = 1.0
+    places = {"k1": LENS.start, "k2": LENS.start + 1, "aft_size": AFT_SIZE, "lift_x": LIFT.start}
+    places["lift_y"] = LIFT.start + 1
+    for name, place in places.items():
+        precision[place] = PRIOR_SD[name] ** -2
+    return mean, precision
+
+
+def calibrate(track: CornerTrack) -> Calibration:
+    """Calibrate plane, lens and pair from the frames of a still camera.
+
+    Raises
+    ------
+    PlaneError
+        If too few frames show both markers.
+    """
+    body = track.body
+    units = units_for(track.image_px, side_mm=_side_mm(track), length_mm=body.base_mm)
+    p = _start(track, units)
+    chosen = _choose(track, p, units)
+    if len(chosen) < 3:
+        raise PlaneError(f"only {len(chosen)} frames show both robot markers sharply enough; 3 are needed")
+    corners_px = track.corners_px[chosen].reshape(-1, 16)
+    whiten = whitening(track.information[chosen])
+    poses = start_poses(corners_px, p, units)
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units)
+    return Calibration(
+        p=p,
+        cov=cov,
+        units=units,
+        misfit=misfit,
+        n_frames=len(chosen),
+        headings_rad=poses[:, 0],
+        turned_rad=covered_rad(poses[:, 0]),
+        residual_px=residual_px,
+    )
+
+
+def _side_mm(track: CornerTrack) -> float:
+    fore = track.body.points_mm[0]
+    return float(np.hypot(*(np.roll(fore, -1, axis=0) - fore).T).mean())
+
+
+def _start(track: CornerTrack, units: Units) -> FloatArray:
+    """Return global parameters from the tracker's first estimate of plane and pair."""
+    body = track.body
+    to_units = np.diag([1.0 / units.half_px, 1.0 / units.half_px, 1.0])
+    to_units[:2, 2] = -units.centre_px / units.half_px
+    shape, _ = shape_from_homography(to_units @ body.plane_px @ np.diag([units.length_mm, units.length_mm, 1.0]))
+    p = np.zeros(N_GLOBAL)
+    p[SHAPE] = shape
+    p[BASE] = body.base_mm / units.length_mm
+    p[AFT_SIZE] = 1.0
+    for place, points in ((FORE_RAD, body.points_mm[0]), (AFT_RAD, body.points_mm[1])):
+        p[place] = rigid_between(units.square, points / units.length_mm)[0]
+    return p
+
+
+def _choose(track: CornerTrack, p: FloatArray, units: Units) -> NDArray[np.intp]:
+    """Choose frames that show both markers calmly, spread over headings and, within one heading, over time."""
+    both = np.all(np.isfinite(track.corners_px), axis=(1, 2, 3)) & ~track.repeat
+    explained = np.min(np.nan_to_num(track.explained, nan=0.0), axis=1)
+    if not both.any():
+        return np.zeros(0, dtype=np.intp)
+    good = both & (explained > 0.5 * (np.median(explained[both]) + 0.5))
+    calm = good & (track.smear_px < CALM_SMEAR_PX)
+    usable = np.flatnonzero(calm if calm.sum() >= 30 else good)
+    headings = start_poses(track.corners_px[usable].reshape(-1, 16), p, units)[:, 0]
+    bins = np.floor(np.mod(headings, 2.0 * np.pi) / (2.0 * np.pi) * N_HEADING_BINS).astype(int)
+    n_bins = len(np.unique(bins))
+    per_bin = max(PER_BIN, int(np.ceil(60 / max(n_bins, 1))))
+    chosen: list[int] = []
+    for number in np.unique(bins):
+        members = usable[bins == number]
+        places = np.unique(np.linspace(0, len(members) - 1, per_bin).round().astype(int))
+        chosen.extend(members[places])
+    return np.array(sorted(chosen), dtype=np.intp)
+
+
+def whitening(information: NDArray[np.float32]) -> FloatArray:
+    """Return factors W, shape (N, 2, 8, 8), with ``W.T @ W`` the information of each marker's corners."""
+    values, vectors = np.linalg.eigh(information.astype(np.float64))
+    scaled: FloatArray = np.sqrt(np.maximum(values, 0.0))[..., None] * np.swapaxes(vectors, -1, -2)
+    return scaled
+
+
+def start_poses(corners_px: FloatArray, p: FloatArray, units: Units) -> FloatArray:
+    """Return a first pose (N, 3) of each frame from whichever markers it shows; NaN where it shows none."""
+    points = to_plane(corners_px.reshape(-1, 8, 2), p, units)
+    body = body_points(p, units).reshape(8, 2)
+    poses = np.full((len(points), 3), np.nan)
+    for n, seen in enumerate(points):
+        known = np.isfinite(seen[:, 0])
+        if known.any():
+            poses[n] = rigid_between(body[known], seen[known])
+    return poses
+
+
+def _whiten(whiten: FloatArray, columns: FloatArray) -> FloatArray:
+    """Apply the factors to arrays of shape (N, 16, K)."""
+    n_frames, _, n_columns = columns.shape
+    split = columns.reshape(n_frames, 2, 8, n_columns)
+    out: FloatArray = (whiten @ split).reshape(n_frames, 16, n_columns)
+    return out
+
+
+def _adjust(
+    p: FloatArray, poses: FloatArray, corners_px: FloatArray, whiten: FloatArray, units: Units
+) -> tuple[FloatArray, FloatArray, FloatArray, float, float]:
+    """Levenberg-Marquardt over all parameters, poses eliminated; Cauchy weights per marker and frame."""
+    mean, precision = prior()
+    damping, misfit = 1e-3, 1.0
+    cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
+    for _ in range(MAX_STEPS):
+        system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
+        system = _with_prior(system, p, mean, precision)
+        step, pose_steps = _solve(system, damping)
+        trial_p, trial_poses = p + step, poses + pose_steps
+        trial_cost, _, _ = _cost(trial_p, trial_poses, corners_px, whiten, units, misfit, fixed=True)
+        now_cost, _, _ = _cost(p, poses, corners_px, whiten, units, misfit, fixed=True)
+        trial_cost += float(precision @ (trial_p - mean) ** 2)
+        now_cost += float(precision @ (p - mean) ** 2)
+        if not np.isfinite(trial_cost) or trial_cost > now_cost:
+            damping *= 8.0
+            if damping > 1e6:
+                break
+            continue
+        p, poses = trial_p, trial_poses
+        damping = max(damping * 0.2, 1e-9)
+        cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
+        if now_cost - trial_cost < 1e-6 * max(trial_cost, 1.0):
+            break
+    system = _with_prior(
+        _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit), p, mean, precision
+    )
+    cov = np.linalg.inv(_schur(system)[0])
+    left = project_pair(p, poses, units).corners_px - corners_px
+    kept = np.repeat(weight > 0.2, 8, axis=1).reshape(len(left), 16)
+    return p, poses, cov, misfit, float(np.sqrt(2.0 * np.mean(left[kept] ** 2)))
+
+
+def _cost(
+    p: FloatArray,
+    poses: FloatArray,
+    corners_px: FloatArray,
+    whiten: FloatArray,
+    units: Units,
+    misfit: float,
+    *,
+    fixed: bool = False,
+) -> tuple[float, FloatArray, float]:
+    """Return the robust cost, the weights (N, 2) and the misfit: the median chi-square over its expectation."""
+    left = corners_px - project_pair(p, poses, units).corners_px
+    chi2 = np.sum(_whiten(whiten, left[..., None]).reshape(len(left), 2, 8) ** 2, axis=-1)
+    if not np.all(np.isfinite(chi2)):
+        return np.inf, np.ones_like(chi2), misfit
+    if not fixed:
+        # Of 16 coordinates a frame, its pose takes 3; the median of a chi-square of 6.5 is 5.9.
+        misfit = max(float(np.median(chi2)) / 5.9, 1e-3)
+    per_unit = chi2 / (8.0 * misfit)
+    cost = float(np.sum(8.0 * 4.0 * np.log1p(per_unit / 4.0)))
+    return cost, 1.0 / (1.0 + per_unit / 4.0), misfit
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Normal:
+    a: FloatArray  # (13, 13)
+    b: FloatArray  # (N, 13, 3)
+    c: FloatArray  # (N, 3, 3)
+    g: FloatArray  # (13,)
+    h: FloatArray  # (N, 3)
+
+
+def _normal(
+    p: FloatArray, poses: FloatArray, corners_px: FloatArray, whiten: FloatArray, units: Units, misfit: float
+) -> _Normal:
+    seen = project_pair(p, poses, units)
+    scale = 1.0 / np.sqrt(misfit)
+    j_global = _whiten(whiten, seen.by_global) * scale
+    j_pose = _whiten(whiten, seen.by_pose) * scale
+    left = _whiten(whiten, (corners_px - seen.corners_px)[..., None])[..., 0] * scale
+    return _Normal(
+        np.einsum("nki,nkj->ij", j_global, j_global),
+        np.swapaxes(j_global, 1, 2) @ j_pose,
+        np.swapaxes(j_pose, 1, 2) @ j_pose,
+        np.einsum("nki,nk->i", j_global, left),
+        np.einsum("nki,nk->ni", j_pose, left),
+    )
+
+
+def _with_prior(system: _Normal, p: FloatArray, mean: FloatArray, precision: FloatArray) -> _Normal:
+    return _Normal(
+        system.a + np.diag(precision), system.b, system.c, system.g + precision * (mean - p), system.h
+    )
+
+
+def _schur(system: _Normal, damping: float = 0.0) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the reduced matrix (13, 13), its right-hand side, and the inverted pose blocks."""
+    c = system.c + damping * system.c * np.eye(3)
+    c_inverse = np.linalg.inv(c)
+    lift = system.b @ c_inverse
+    a = system.a + damping * np.diag(np.diag(system.a))
+    reduced = a - np.einsum("nij,nkj->ik", lift, system.b)
+    return reduced, system.g - np.einsum("nij,nj->i", lift, system.h), c_inverse
+
+
+def _solve(system: _Normal, damping: float) -> tuple[FloatArray, FloatArray]:
+    reduced, right, c_inverse = _schur(system, damping)
+    step = np.linalg.solve(reduced, right)
+    pose_steps = np.einsum("nij,nj->ni", c_inverse, system.h - np.einsum("nij,i->nj", system.b, step))
+    return step, pose_steps
+
+
+def covered_rad(headings_rad: FloatArray) -> float:
+    """Return the arc that headings (N,) cover: a full circle less the largest gap between neighbours."""
+    if len(headings_rad) < 2:
+        return 0.0
+    around = np.sort(np.mod(headings_rad, 2.0 * np.pi))
+    gaps = np.diff(np.append(around, around[0] + 2.0 * np.pi))
+    return float(2.0 * np.pi - gaps.max())
+
+

@@ -1,0 +1,223 @@
+"""The robot's two markers as one rigid pair: where they are first found, and how the pair is built.
+
+The markers may sit anywhere on the robot at any angle; only their side is known. One picture of both gives a first
+estimate of the deck plane and of their relative pose, good enough to follow them; the calibration over the whole
+clip (`vision.plane`) replaces it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import least_squares, minimize_scalar
+
+from vision.align import CornerFit, fit_corners, homography_from_corners
+from vision.frames import LumaImage
+from vision.markers import UNIT_CORNERS, Detection, printed_modules
+from vision.records import FloatArray, MarkerSetup
+from vision.rigid import fit_homography, project, rigid, rigid_between
+from vision.template import Optics, Template, build_template
+
+BLUR_RANGE_PX = (0.45, 4.0)
+HALO_TRIALS = ((0.0, 2.0), (0.3, 1.0), (0.6, 1.0), (0.3, 2.0), (0.6, 2.0), (1.0, 2.0), (0.5, 3.5), (1.0, 3.5))
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Body:
+    """The pair as a rigid body in the deck plane.
+
+    Parameters
+    ----------
+    points_mm : ndarray, shape (2, 4, 2)
+        Corners of the fore and the aft marker, origin midway between the centres, x from aft to fore, y to the
+        right-hand side of that seen from above.
+    plane_px : ndarray, shape (3, 3)
+        Map from the body frame to the picture at the frame it was estimated from.
+    """
+
+    points_mm: FloatArray
+    plane_px: FloatArray
+
+    @property
+    def base_mm(self) -> float:
+        """Distance between the two marker centres."""
+        return float(np.hypot(*(self.points_mm[0].mean(axis=0) - self.points_mm[1].mean(axis=0))))
+
+
+def body_from_corners(corners_px: FloatArray, side_mm: float) -> Body | None:
+    """Estimate plane and relative pose from one picture of both markers.
+
+    Parameters
+    ----------
+    corners_px : ndarray, shape (2, 4, 2)
+        Corners of the fore and the aft marker.
+    side_mm : float
+
+    Returns
+    -------
+    Body or None
+        None if the corners do not look like two squares in one plane.
+    """
+    square = UNIT_CORNERS * side_mm
+    centre_px = corners_px.reshape(-1, 2).mean(axis=0)
+    spread_px = float(np.abs(corners_px - centre_px).max())
+    seen = (corners_px - centre_px) / spread_px
+    first = fit_homography(square, seen[0])
+    if first is None:
+        return None
+    back = np.linalg.inv(first)
+    start_pose = rigid_between(square, project(back / back[2, 2], seen[1]))
+    if not np.all(np.isfinite(start_pose)):
+        return None
+
+    def misfit(p: FloatArray) -> FloatArray:
+        plane = np.append(p[:8] * scale[:8], 1.0).reshape(3, 3)
+        aft = project(rigid(p[8], p[9] * side_mm, p[10] * side_mm), square)
+        both = project(plane, np.concatenate([square, aft]))
+        return np.nan_to_num((both - seen.reshape(-1, 2)).ravel(), nan=10.0)
+
+    scale = np.array([1 / side_mm, 1 / side_mm, 1.0] * 2 + [1 / side_mm, 1 / side_mm])
+    plane0 = (first / first[2, 2]).ravel()[:8] / scale
+    start = np.concatenate([plane0, [start_pose[0], start_pose[1] / side_mm, start_pose[2] / side_mm]])
+    found = least_squares(misfit, start, method="lm", max_nfev=400)
+    worst_px = float(np.abs(found.fun).max()) * spread_px
+    sides_px = np.hypot(*np.moveaxis(np.roll(corners_px, -1, axis=1) - corners_px, -1, 0))
+    if worst_px > max(1.5, 0.08 * float(sides_px.mean())):
+        return None
+    plane = np.append(found.x[:8] * scale, 1.0).reshape(3, 3)
+    aft = project(rigid(found.x[8], found.x[9] * side_mm, found.x[10] * side_mm), square)
+    lift = np.array([[spread_px, 0.0, centre_px[0]], [0.0, spread_px, centre_px[1]], [0.0, 0.0, 1.0]])
+    return _in_body_frame(np.stack([square, aft]), lift @ plane)
+
+
+def _in_body_frame(points_mm: FloatArray, plane_px: FloatArray) -> Body | None:
+    fore, aft = points_mm.mean(axis=1)
+    if np.hypot(*(fore - aft)) < 1e-6:
+        return None
+    heading_rad = float(np.arctan2(*(fore - aft)[::-1]))
+    middle = 0.5 * (fore + aft)
+    place = rigid(heading_rad, middle[0], middle[1])
+    return Body(project(np.linalg.inv(place), points_mm), plane_px @ place)
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Pattern:
+    """A marker's modules with the templates to look for it: one sharp, one softened for coarse search."""
+
+    black: NDArray[np.bool_]
+    side_px: float
+    sharp: Template
+    soft: Template
+    soften_px: float
+
+
+def build_pattern(black: NDArray[np.bool_], side_px: float, optics: Optics) -> Pattern:
+    """Return both templates of a marker that is about `side_px` large in the picture."""
+    soften_px = max(1.2, 0.5 * side_px / black.shape[0])
+    softer = replace(optics, blur_px=float(np.hypot(optics.blur_px, soften_px)), halo=0.0)
+    return Pattern(
+        black=black,
+        side_px=side_px,
+        sharp=build_template(black, side_px=side_px, optics=optics),
+        soft=build_template(black, side_px=side_px, optics=softer),
+        soften_px=soften_px,
+    )
+
+
+def pair_modules(setup: MarkerSetup) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+    """Return the modules of the fore and the aft marker."""
+    return printed_modules(setup.dictionary, setup.fore_id), printed_modules(setup.dictionary, setup.aft_id)
+
+
+def mean_side_px(corners_px: FloatArray) -> float:
+    """Return the mean length of the four sides of one marker, corners of shape (4, 2)."""
+    return Detection(-1, corners_px).side_px
+
+
+def settle_corners(
+    image: LumaImage, corners_px: FloatArray, template: Template, *, steps: int = 5
+) -> tuple[FloatArray, CornerFit] | None:
+    """Align one marker freely from nearby corners; None if the pattern has no hold there.
+
+    Returns
+    -------
+    corners_px : ndarray, shape (4, 2)
+    fit : CornerFit
+        The last model, rendered within a small fraction of a pixel of `corners_px`.
+    """
+    fit = None
+    for _ in range(steps):
+        fit = fit_corners(image, homography_from_corners(corners_px), template)
+        if fit is None:
+            return None
+        try:
+            move = fit.displacement_px().reshape(4, 2)
+        except np.linalg.LinAlgError:
+            return None
+        limit = 0.15 * mean_side_px(fit.corners_px)
+        if not np.all(np.isfinite(move)) or np.abs(move).max() > limit:
+            return None
+        corners_px = fit.corners_px + move
+        if np.abs(move).max() < 0.05:
+            break
+    return (corners_px, fit) if fit is not None else None
+
+
+def tune_optics(
+    image: LumaImage, corners_px: FloatArray, modules: tuple[NDArray[np.bool_], ...]
+) -> tuple[Optics, FloatArray]:
+    """Find the point spread and the halo under which the patterns explain the picture best.
+
+    Parameters
+    ----------
+    image : ndarray
+    corners_px : ndarray, shape (M, 4, 2)
+        Corners of each marker, to about a pixel.
+    modules : tuple of ndarray of bool
+
+    Returns
+    -------
+    optics : Optics
+    corners_px : ndarray, shape (M, 4, 2)
+        Aligned under these optics.
+    """
+    start = min(1.0, 0.35 * mean_side_px(corners_px[0]) / modules[0].shape[0])
+    optics = Optics(blur_px=start)
+    for _ in range(2):
+        corners_px = _settle_all(image, corners_px, modules, optics)
+        sizes = [mean_side_px(corners) for corners in corners_px]
+        maps = [homography_from_corners(corners) for corners in corners_px]
+
+        def cost(trial: Optics, sizes: list[float] = sizes, maps: list[FloatArray] = maps) -> float:
+            total = 0.0
+            for black, side_px, map_px in zip(modules, sizes, maps, strict=True):
+                fit = fit_corners(image, map_px, build_template(black, side_px=side_px, optics=trial))
+                total += fit.noise_var if fit is not None else 1.0
+            return total
+
+        best = (np.inf, optics)
+        for halo, halo_px in HALO_TRIALS:
+            found = minimize_scalar(
+                lambda blur_px, h=halo, r=halo_px: cost(Optics(blur_px, h, r)),
+                bounds=BLUR_RANGE_PX,
+                method="bounded",
+                options={"maxiter": 9, "xatol": 0.02},
+            )
+            # A halo is believed only if it explains clearly more than plain blur does.
+            if found.fun < best[0] * (1.0 if halo == 0.0 else 0.98):
+                best = (float(found.fun), Optics(float(found.x), halo, halo_px))
+        optics = best[1]
+    return optics, _settle_all(image, corners_px, modules, optics)
+
+
+def _settle_all(
+    image: LumaImage, corners_px: FloatArray, modules: tuple[NDArray[np.bool_], ...], optics: Optics
+) -> FloatArray:
+    settled = []
+    for corners, black in zip(corners_px, modules, strict=True):
+        template = build_template(black, side_px=mean_side_px(corners), optics=optics)
+        found = settle_corners(image, corners, template)
+        settled.append(found[0] if found is not None else corners)
+    return np.stack(settled)

@@ -1,0 +1,135 @@
+"""Rest and motion: where the robot stands still, judged against the clip's own noise."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from vision.records import FloatArray
+
+SLOPE_WINDOW_S = 0.08
+"""Half the stretch over which a rate is estimated."""
+
+SHORTEST_REST_S = 0.2
+"""A shorter stillness is a pause within one turn."""
+
+SMALLEST_TURN_DEG = 0.5
+"""A smaller rotation is never a commanded turn; it is reported as a nudge."""
+
+
+@dataclass(frozen=True, slots=True)
+class Stretch:
+    """Frames ``first`` to ``last``, both included, of the seen frames."""
+
+    first: int
+    last: int
+
+    @property
+    def n_frames(self) -> int:
+        """Number of frames."""
+        return self.last - self.first + 1
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class Motion:
+    """Rates of the seen frames and what counts as moving.
+
+    Parameters
+    ----------
+    rate_deg_s, speed_mm_s : ndarray, shape (N,)
+    moving : ndarray of bool, shape (N,)
+    noise_deg : float
+        Frame-to-frame noise of the heading while still.
+    """
+
+    rate_deg_s: FloatArray
+    speed_mm_s: FloatArray
+    moving: NDArray[np.bool_]
+    noise_deg: float
+
+
+def find_motion(time_s: FloatArray, heading_deg: FloatArray, x_mm: FloatArray, y_mm: FloatArray) -> Motion:
+    """Tell motion from rest.
+
+    Parameters
+    ----------
+    time_s, heading_deg, x_mm, y_mm : ndarray, shape (N,)
+        Seen frames only; heading unwrapped.
+    """
+    rate, n_window = _slope(time_s, heading_deg)
+    speed_x, _ = _slope(time_s, x_mm)
+    speed_y, _ = _slope(time_s, y_mm)
+    speed = np.hypot(speed_x, speed_y)
+    noise_deg = _still_noise(heading_deg)
+    turning = _significant(np.abs(rate), _still_level(np.abs(rate)), share=0.01, sure_share=0.06)
+    sliding = _significant(speed, _still_level(speed), share=0.02, sure_share=0.1)
+    return Motion(rate_deg_s=rate, speed_mm_s=speed, moving=turning | sliding, noise_deg=noise_deg)
+
+
+def _slope(time_s: FloatArray, value: FloatArray) -> tuple[FloatArray, int]:
+    """Return the least-squares slope about each frame over a window of equal time, and its usual frame count."""
+    n_frames = len(time_s)
+    if n_frames < 3:
+        return np.zeros(n_frames), n_frames
+    first = np.searchsorted(time_s, time_s - SLOPE_WINDOW_S - 1e-9)
+    last = np.searchsorted(time_s, time_s + SLOPE_WINDOW_S + 1e-9) - 1
+    first = np.maximum(np.minimum(first, np.arange(n_frames) - 1), 0)
+    last = np.minimum(np.maximum(last, np.arange(n_frames) + 1), n_frames - 1)
+    t, v = time_s - time_s.mean(), value - value.mean()
+
+    def window_sum(a: FloatArray) -> FloatArray:
+        total = np.concatenate([[0.0], np.cumsum(a)])
+        return np.asarray(total[last + 1] - total[first])
+
+    n = (last - first + 1).astype(float)
+    st, sv = window_sum(t), window_sum(v)
+    above = window_sum(t * v) - st * sv / n
+    below = window_sum(t * t) - st * st / n
+    return np.where(below > 1e-12, above / np.maximum(below, 1e-12), 0.0), int(np.median(n))
+
+
+def _still_noise(heading_deg: FloatArray) -> float:
+    """Return the noise of single frames from the smaller half of second differences."""
+    second = np.abs(np.diff(heading_deg, 2))
+    if len(second) == 0:
+        return 0.0
+    # For a normal variable the first quartile of |x| is 0.3186 sd; a second difference has sqrt(6) the noise.
+    return float(np.quantile(second, 0.25) / 0.3186 / np.sqrt(6.0))
+
+
+def _still_level(size: FloatArray) -> float:
+    """Return the standard deviation of a rate while still, from the smaller rates of the clip."""
+    if len(size) == 0:
+        return 0.0
+    return float(np.quantile(size, 0.2) / 0.2533)  # |normal| has its first fifth below 0.2533 sd
+
+
+def _significant(size: FloatArray, still: float, *, share: float, sure_share: float) -> NDArray[np.bool_]:
+    """Return where `size` is above the still level, in stretches that somewhere are surely above it."""
+    fast = size[size > 10.0 * still]
+    top = float(np.quantile(fast, 0.75)) if len(fast) else 0.0
+    low, high = max(5.0 * still, share * top), max(10.0 * still, sure_share * top)
+    above = size > low
+    keep = np.zeros(len(size), dtype=bool)
+    for stretch in stretches(above):
+        part = slice(stretch.first, stretch.last + 1)
+        keep[part] = size[part].max() > high
+    return keep
+
+
+def stretches(flag: NDArray[np.bool_]) -> list[Stretch]:
+    """Return the runs of True in `flag`."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], flag, [False]]).astype(np.int8)))
+    return [Stretch(int(a), int(b) - 1) for a, b in zip(edges[::2], edges[1::2], strict=True)]
+
+
+def bridge_pauses(moving: NDArray[np.bool_], time_s: FloatArray) -> NDArray[np.bool_]:
+    """Return `moving` with stillnesses shorter than a rest filled in, except at the ends of the clip."""
+    bridged = moving.copy()
+    for pause in stretches(~moving):
+        inner = pause.first > 0 and pause.last < len(moving) - 1
+        if inner and time_s[pause.last] - time_s[pause.first] < SHORTEST_REST_S:
+            bridged[pause.first : pause.last + 1] = True
+    return bridged

@@ -1,0 +1,57 @@
+"""Small pieces of plane geometry shared by tracking and calibration: homographies and rigid motions.
+
+Plane coordinates here are seen as the picture shows them (x right, y down); the one flip to the floor's y up is in
+`vision.plane`.
+"""
+
+from __future__ import annotations
+
+import cv2
+import numpy as np
+
+from vision.records import FloatArray
+
+
+def project(homography: FloatArray, points: FloatArray) -> FloatArray:
+    """Return `points` (..., 2) mapped by a homography (3, 3); NaN on its horizon."""
+    w = points @ homography[2, :2] + homography[2, 2]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        mapped: FloatArray = (points @ homography[:2, :2].T + homography[:2, 2]) / w[..., None]
+    mapped[~(w > 0.0)] = np.nan
+    return mapped
+
+
+def projected_slope(homography: FloatArray, points: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return mapped points (K, 2) and the derivative of each by its source point, shape (K, 2, 2)."""
+    w = points @ homography[2, :2] + homography[2, 2]
+    mapped = (points @ homography[:2, :2].T + homography[:2, 2]) / w[:, None]
+    slope = (homography[None, :2, :2] - mapped[:, :, None] * homography[2, :2]) / w[:, None, None]
+    return mapped, slope
+
+
+def rigid(turn_rad: float, x: float, y: float) -> FloatArray:
+    """Return the motion that turns by `turn_rad` about the origin, then shifts, shape (3, 3)."""
+    c, s = np.cos(turn_rad), np.sin(turn_rad)
+    return np.array([[c, -s, x], [s, c, y], [0.0, 0.0, 1.0]])
+
+
+def rigid_between(source: FloatArray, target: FloatArray) -> tuple[float, float, float]:
+    """Return the least-squares rigid motion (turn_rad, x, y) that takes `source` (K, 2) to `target`.
+
+    Source: Kabsch (1976), in two dimensions closed form.
+    """
+    centre_s, centre_t = source.mean(axis=0), target.mean(axis=0)
+    a, b = source - centre_s, target - centre_t
+    turn_rad = float(np.arctan2(np.sum(a[:, 0] * b[:, 1] - a[:, 1] * b[:, 0]), np.sum(a * b)))
+    c, s = np.cos(turn_rad), np.sin(turn_rad)
+    shift = centre_t - np.array([c * centre_s[0] - s * centre_s[1], s * centre_s[0] + c * centre_s[1]])
+    return turn_rad, float(shift[0]), float(shift[1])
+
+
+def fit_homography(source: FloatArray, target: FloatArray) -> FloatArray | None:
+    """Return the least-squares homography from `source` (K, 2) to `target`, or None where there is none."""
+    found, _ = cv2.findHomography(source, target, 0)
+    if found is None or not np.all(np.isfinite(found)):
+        return None
+    map_: FloatArray = np.asarray(found, dtype=np.float64)
+    return map_

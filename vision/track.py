@@ -1,0 +1,648 @@
+"""Frames to corner observations: find the pair once, then predict and look where it must be.
+
+Each frame costs one comparison of both patterns with the picture while the robot rests, a few while it turns. A
+pose of the rigid pair is predicted from the last motion, mended by joint steps of three parameters, and the corners
+are then freed; they and their information are all that later stages need. When the patterns lose their hold, wider
+and wider searches follow: turned poses under soft templates, the detector in a crop, the detector in the full frame.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from vision.align import CornerFit, fit_corners, homography_from_corners
+from vision.errors import MarkersNotFound
+from vision.frames import Frame, LumaImage
+from vision.markers import Detection, detect
+from vision.pair import (
+    Body,
+    Pattern,
+    body_from_corners,
+    build_pattern,
+    mean_side_px,
+    pair_modules,
+    tune_optics,
+)
+from vision.records import FloatArray, MarkerSetup
+from vision.rigid import fit_homography, project, projected_slope, rigid, rigid_between
+from vision.template import Optics
+
+HOLD = 0.55
+"""Least share of a marker's variance that the pattern must explain for the marker to count as seen."""
+
+SEARCH_EVERY_S = 0.2
+"""How often the full frame is searched while the robot is out of sight."""
+
+EXPOSURE_TRIALS = (0.0, 0.12, 0.25, 0.4, 0.6, 0.8, 1.0)
+"""Exposure times tried, as shares of the frame interval."""
+
+EXPOSURE_VOTES = 12
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Sight:
+    """What one frame said about the pair.
+
+    Parameters
+    ----------
+    corners_px : ndarray, shape (2, 4, 2)
+        Aligned corners; NaN for a marker not seen.
+    information : ndarray, shape (2, 8, 8), float32
+        Fisher's information of each marker's corners, in 1/px^2; zero for a marker not seen.
+    noise_var, explained, contrast : ndarray, shape (2,)
+    smear_px : float
+        How far the pair moved during the exposure.
+    repeat : bool
+        Whether the picture of the pair is bit by bit that of the frame before.
+    """
+
+    corners_px: FloatArray
+    information: NDArray[np.float32]
+    noise_var: FloatArray
+    explained: FloatArray
+    contrast: FloatArray
+    smear_px: float
+    repeat: bool
+
+
+def nothing_seen() -> Sight:
+    """Return the sight of a frame without the pair."""
+    gap = np.full(2, np.nan)
+    return Sight(np.full((2, 4, 2), np.nan), np.zeros((2, 8, 8), np.float32), gap, gap, gap, 0.0, False)
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class CornerTrack:
+    """Corners of both markers in every frame (N frames); arrays as in `Sight`, stacked.
+
+    Parameters
+    ----------
+    body : Body
+        The pair as first estimated, before calibration.
+    optics : Optics
+    exposure_s : float
+        Exposure time estimated from the smear of fast frames; 0 if none was fast.
+    image_px : tuple of int
+        Width and height.
+    """
+
+    time_s: FloatArray
+    is_key: NDArray[np.bool_]
+    corners_px: FloatArray
+    information: NDArray[np.float32]
+    noise_var: FloatArray
+    explained: FloatArray
+    smear_px: FloatArray
+    repeat: NDArray[np.bool_]
+    body: Body
+    optics: Optics
+    exposure_s: float
+    image_px: tuple[int, int]
+
+
+class PairTracker:
+    """Follows the pair from frame to frame; mutable, one per clip.
+
+    Parameters
+    ----------
+    setup : MarkerSetup
+    image : ndarray
+        A frame in which both markers were found.
+    corners_px : ndarray, shape (2, 4, 2)
+        Their detected corners.
+
+    Raises
+    ------
+    MarkersNotFound
+        If the two do not look like squares in one plane.
+    """
+
+    def __init__(self, setup: MarkerSetup, image: LumaImage, corners_px: FloatArray) -> None:
+        self._setup = setup
+        modules = pair_modules(setup)
+        self.optics, corners_px = tune_optics(image, corners_px, modules)
+        body = body_from_corners(corners_px, setup.marker_side_mm)
+        if body is None:
+            raise MarkersNotFound("the two robot markers do not look like flat squares of one size side by side")
+        self.body = body
+        self._patterns: tuple[Pattern, ...] = tuple(
+            build_pattern(black, mean_side_px(corners), self.optics)
+            for black, corners in zip(modules, corners_px, strict=True)
+        )
+        self._plane_px = body.plane_px
+        self._corners_px = corners_px
+        self._rate = np.zeros(3)  # turn (rad/s) and shift (mm/s) of the body, in its own frame
+        self._last_s: float | None = None
+        self._last_search_s = -np.inf
+        self._lost = False
+        self._last: tuple[tuple[slice, slice], LumaImage, Sight] | None = None
+        self._exposure = _ExposureVote()
+
+    @property
+    def exposure_s(self) -> float:
+        """Exposure time as estimated so far."""
+        return self._exposure.exposure_s
+
+    def see(self, frame: Frame) -> Sight:
+        """Return what `frame` shows of the pair, and remember it for the next."""
+        repeated = self._repeated(frame.luma)
+        if repeated is not None:
+            return repeated
+        step_s = frame.time_s - self._last_s if self._last_s is not None else 0.0
+        if step_s <= 0.0:
+            step_s = 1e-3
+        sight = None if self._lost else self._follow(frame.luma, step_s)
+        if sight is None:
+            sight = self._recover(frame, step_s)
+        if sight is None:
+            self._lose(frame, step_s)
+            return nothing_seen()
+        self._lost = False
+        self._last_s = frame.time_s
+        self._remember(frame.luma, sight)
+        return sight
+
+    def _repeated(self, image: LumaImage) -> Sight | None:
+        if self._last is None or self._lost:
+            return None
+        window, before, sight = self._last
+        if np.array_equal(image[window], before):
+            return Sight(
+                sight.corners_px, sight.information, sight.noise_var, sight.explained, sight.contrast, 0.0, True
+            )
+        return None
+
+    def _remember(self, image: LumaImage, sight: Sight) -> None:
+        points = self._corners_px.reshape(-1, 2)
+        pad = 0.15 * self._patterns[0].side_px
+        x0, y0 = np.maximum(np.floor(points.min(axis=0) - pad), 0).astype(int)
+        x1, y1 = np.ceil(points.max(axis=0) + pad).astype(int)
+        window = (slice(int(y0), int(y1)), slice(int(x0), int(x1)))
+        self._last = (window, image[window].copy(), sight)
+
+    def _lose(self, frame: Frame, step_s: float) -> None:
+        self._last = None
+        self._rate = self._rate * 0.5 if not self._lost else np.zeros(3)
+        if self._last_s is not None and step_s > 0.5:
+            self._lost = True
+
+    # -- following -------------------------------------------------------------------------------------------
+
+    def _follow(self, image: LumaImage, step_s: float) -> Sight | None:
+        return self._settle(image, self._rate * step_s, step_s)
+
+    def _settle(self, image: LumaImage, move: FloatArray, step_s: float) -> Sight | None:
+        """Align from a believed motion since the last frame; None if the patterns find no hold."""
+        before_px = self._plane_px
+        plane_px = before_px @ rigid(*move)
+        # Corners carry what the rigid model does not yet know; only their motion is predicted.
+        corners_px = project(plane_px @ np.linalg.inv(before_px), self._corners_px)
+        smear = self._smear(plane_px, move, step_s)
+        found = self._joint(image, plane_px, corners_px, smear)
+        if found is None:
+            return None
+        plane_px, corners_px, fits = found
+        self._exposure.vote(lambda share: self._cost(image, plane_px, corners_px, move, share), move, step_s)
+        seen = [fit is not None and fit.explained > HOLD and fit.contrast > 0 for fit in fits]
+        if not any(seen):
+            return None
+        return self._free(image, plane_px, corners_px, fits, seen, smear, step_s)
+
+    def _joint(
+        self, image: LumaImage, plane_px: FloatArray, corners_px: FloatArray, smear: tuple[FloatArray, ...]
+    ) -> tuple[FloatArray, FloatArray, list[CornerFit | None]] | None:
+        """Take joint rigid steps until they are small."""
+        for step in range(8):
+            fits = self._compare(image, corners_px, smear)
+            move = self._joint_step(plane_px, fits)
+            if move is None:
+                return None
+            moved_px = plane_px @ rigid(*move)
+            after_px = project(moved_px @ np.linalg.inv(plane_px), corners_px)
+            largest_px = float(np.nanmax(np.abs(after_px - corners_px)))
+            if not np.isfinite(largest_px) or largest_px > self._patterns[0].side_px:
+                return None
+            if largest_px < (0.12 if step else 0.06):
+                return plane_px, corners_px, fits
+            plane_px, corners_px = moved_px, after_px
+        return plane_px, corners_px, self._compare(image, corners_px, smear)
+
+    def _compare(
+        self, image: LumaImage, corners_px: FloatArray, smear: tuple[FloatArray, ...], *, soft: bool = False
+    ) -> list[CornerFit | None]:
+        return [
+            fit_corners(
+                image,
+                homography_from_corners(corners),
+                pattern.soft if soft else pattern.sharp,
+                smear=smear,
+                soften_px=pattern.soften_px if soft else 0.0,
+            )
+            if np.all(np.isfinite(corners))
+            else None
+            for corners, pattern in zip(corners_px, self._patterns, strict=True)
+        ]
+
+    def _joint_step(self, plane_px: FloatArray, fits: list[CornerFit | None]) -> FloatArray | None:
+        """Return the rigid step (turn_rad, x_mm, y_mm in the body frame) that both markers ask for."""
+        information, gradient = np.zeros((3, 3)), np.zeros(3)
+        for points_mm, fit in zip(self.body.points_mm, fits, strict=True):
+            if fit is None or fit.contrast <= 0.0:
+                continue
+            slope = _pose_slope(plane_px, points_mm)
+            trust = max(fit.explained, 0.02) / max(fit.noise_var, 1e-6)
+            information += trust * slope.T @ fit.information @ slope
+            gradient += trust * slope.T @ fit.gradient
+        try:
+            return np.linalg.solve(information, gradient)
+        except np.linalg.LinAlgError:
+            return None
+
+    def _free(
+        self,
+        image: LumaImage,
+        plane_px: FloatArray,
+        corners_px: FloatArray,
+        fits: list[CornerFit | None],
+        seen: list[bool],
+        smear: tuple[FloatArray, ...],
+        step_s: float,
+    ) -> Sight | None:
+        """Let each marker's corners go where its picture says; accept, and update the motion."""
+        settled = np.full((2, 4, 2), np.nan)
+        kept: list[CornerFit | None] = [None, None]
+        for m, fit in enumerate(fits):
+            if fit is None or not seen[m]:
+                continue
+            freed = self._free_marker(image, m, fit, smear)
+            if freed is not None:
+                settled[m], kept[m] = freed
+        if not any(fit is not None for fit in kept):
+            return None
+        self._accept(plane_px, corners_px, settled, step_s)
+        return _sight(settled, kept, _largest_move(smear, self._corners_px))
+
+    def _free_marker(
+        self, image: LumaImage, m: int, fit: CornerFit, smear: tuple[FloatArray, ...]
+    ) -> tuple[FloatArray, CornerFit] | None:
+        side_px = self._patterns[m].side_px
+        robust = False
+        for _ in range(4):
+            try:
+                move = fit.displacement_px().reshape(4, 2)
+            except np.linalg.LinAlgError:
+                return None
+            largest_px = float(np.abs(move).max())
+            if not np.isfinite(largest_px) or largest_px > 0.25 * side_px:
+                return None
+            if largest_px < 0.12:
+                break
+            again = fit_corners(
+                image, homography_from_corners(fit.corners_px + move), self._patterns[m].sharp, smear=smear,
+                robust=robust,
+            )  # fmt: skip
+            if again is None or again.explained < HOLD:
+                return None
+            fit = again
+        return fit.corners_px + move, fit
+
+    def _accept(
+        self, plane_px: FloatArray, corners_px: FloatArray, settled: FloatArray, step_s: float
+    ) -> None:
+        """Move the remembered pose and corners on; mend the plane where the rigid pair no longer fits it."""
+        known = np.isfinite(settled[:, 0, 0])
+        self._corners_px = np.where(known[:, None, None], settled, corners_px)
+        before = project(np.linalg.inv(self._plane_px), self._corners_px[known].reshape(-1, 2))
+        move = np.array(rigid_between(self.body.points_mm[known].reshape(-1, 2), before))
+        self._rate = move / step_s if step_s > 2e-3 else self._rate
+        self._plane_px = self._plane_px @ rigid(*move)
+        if not known.all():
+            return
+        model_px = project(self._plane_px, self.body.points_mm)
+        if np.abs(model_px - self._corners_px).max() > 0.02 * self._patterns[0].side_px:
+            mended = fit_homography(self.body.points_mm.reshape(-1, 2), self._corners_px.reshape(-1, 2))
+            if mended is not None:
+                self._plane_px = mended
+        self._resize()
+
+    def _resize(self) -> None:
+        """Rebuild the templates when the markers' size in the picture has changed."""
+        sides = [mean_side_px(corners) for corners in self._corners_px]
+        if all(abs(s / p.side_px - 1.0) < 0.06 for s, p in zip(sides, self._patterns, strict=True)):
+            return
+        self._patterns = tuple(
+            build_pattern(pattern.black, side_px, self.optics)
+            for pattern, side_px in zip(self._patterns, sides, strict=True)
+        )
+
+    # -- smear over the exposure -----------------------------------------------------------------------------
+
+    def _smear(self, plane_px: FloatArray, move: FloatArray, step_s: float) -> tuple[FloatArray, ...]:
+        return self._smear_for(plane_px, move, self._exposure.share(step_s))
+
+    def _smear_for(self, plane_px: FloatArray, move: FloatArray, share: float) -> tuple[FloatArray, ...]:
+        reach_px = share * self._reach_px(plane_px, move)
+        if reach_px < 0.7:
+            return ()
+        n_looks = min(2 * int(np.ceil(reach_px / 1.6)) + 1, 11)
+        back = np.linalg.inv(plane_px)
+        shares = (np.arange(n_looks) - 0.5 * (n_looks - 1)) / n_looks * share
+        return tuple(plane_px @ rigid(*(part * move)) @ back for part in shares)
+
+    def _reach_px(self, plane_px: FloatArray, move: FloatArray) -> float:
+        """Return how far the farthest corner moves in the picture."""
+        ends = project(plane_px @ rigid(*move), self.body.points_mm) - project(plane_px, self.body.points_mm)
+        return float(np.nan_to_num(np.hypot(ends[..., 0], ends[..., 1]), nan=0.0).max())
+
+    def _cost(
+        self, image: LumaImage, plane_px: FloatArray, corners_px: FloatArray, move: FloatArray, share: float
+    ) -> float | None:
+        if self._reach_px(plane_px, move) < 2.5:
+            return None
+        fits = self._compare(image, corners_px, self._smear_for(plane_px, move, share))
+        known = [fit.explained for fit in fits if fit is not None]
+        return 1.0 - float(np.mean(known)) if known else None
+
+    # -- recovering ------------------------------------------------------------------------------------------
+
+    def _recover(self, frame: Frame, step_s: float) -> Sight | None:
+        if not self._lost:
+            sight = self._sweep(frame.luma, step_s)
+            if sight is not None:
+                return sight
+        return self._search(frame, step_s)
+
+    def _sweep(self, image: LumaImage, step_s: float) -> Sight | None:
+        """Try turned poses under soft templates, nearest first, and follow the best."""
+        base = self._rate * step_s
+        best: tuple[float, FloatArray] | None = None
+        for turn_deg in (0.0, 4.0, -4.0, 8.0, -8.0, 13.0, -13.0, 18.0, -18.0):
+            tried = self._soft_pose(image, base + np.array([np.deg2rad(turn_deg), 0.0, 0.0]))
+            if tried is not None and (best is None or tried[0] > best[0]):
+                best = tried
+            if best is not None and best[0] > 0.85:
+                break
+        if best is None or best[0] < 0.4:
+            return None
+        return self._settle(image, best[1], step_s)
+
+    def _soft_pose(self, image: LumaImage, move: FloatArray) -> tuple[float, FloatArray] | None:
+        """Return how well a softened picture is explained near a motion, and the motion found."""
+        before_px = self._plane_px
+        back = np.linalg.inv(before_px)
+        plane_px = before_px @ rigid(*move)
+        explained = -1.0
+        for _ in range(5):
+            corners_px = project(plane_px @ back, self._corners_px)
+            fits = self._compare(image, corners_px, (), soft=True)
+            known = [fit.explained for fit in fits if fit is not None]
+            explained = float(np.mean(known)) if known else -1.0
+            step = self._joint_step(plane_px, fits)
+            if step is None or not np.all(np.isfinite(step)) or self._reach_px(plane_px, step) > 40.0:
+                return None
+            plane_px = plane_px @ rigid(*step)
+        total = back @ plane_px
+        moved = project(total, self.body.points_mm.reshape(-1, 2))
+        return explained, np.array(rigid_between(self.body.points_mm.reshape(-1, 2), moved))
+
+    def _search(self, frame: Frame, step_s: float) -> Sight | None:
+        """Look for the markers with the detector: near the last place, and now and then everywhere."""
+        near = self._window(frame.luma.shape, margin=1.2)
+        found = self._pick(detect(frame.luma[near], self._setup.dictionary, self._ids), near)
+        if not found and frame.time_s - self._last_search_s >= SEARCH_EVERY_S:
+            self._last_search_s = frame.time_s
+            everywhere = (slice(0, frame.luma.shape[0]), slice(0, frame.luma.shape[1]))
+            found = self._pick(detect(frame.luma, self._setup.dictionary, self._ids), everywhere)
+        if not found:
+            return None
+        return self._restart(frame.luma, found, step_s)
+
+    @property
+    def _ids(self) -> tuple[int, int]:
+        return self._setup.fore_id, self._setup.aft_id
+
+    def _window(self, shape: tuple[int, ...], margin: float) -> tuple[slice, slice]:
+        points = self._corners_px.reshape(-1, 2)
+        low, high = points.min(axis=0), points.max(axis=0)
+        pad = margin * float(np.max(high - low))
+        x0, y0 = np.clip(low - pad, 0, (shape[1] - 8, shape[0] - 8)).astype(int)
+        x1, y1 = np.clip(high + pad, (x0 + 8, y0 + 8), (shape[1], shape[0])).astype(int)
+        return slice(int(y0), int(y1)), slice(int(x0), int(x1))
+
+    def _pick(self, found: list[Detection], window: tuple[slice, slice]) -> dict[int, FloatArray]:
+        """Return corners by marker index, in picture pixels; an id seen twice is not trusted."""
+        origin = np.array([window[1].start, window[0].start], dtype=float)
+        picked: dict[int, FloatArray] = {}
+        for m, marker_id in enumerate(self._ids):
+            same = [item for item in found if item.marker_id == marker_id]
+            if len(same) == 1:
+                picked[m] = same[0].corners_px + origin
+        return picked
+
+    def _restart(self, image: LumaImage, found: dict[int, FloatArray], step_s: float) -> Sight | None:
+        """Take up the pair again where the detector saw one or both of its markers."""
+        held = (self._plane_px, self._corners_px, self._rate)
+        points_mm = np.concatenate([self.body.points_mm[m] for m in found])
+        seen_px = np.concatenate(list(found.values()))
+        if len(found) == 2:
+            plane_px = fit_homography(points_mm, seen_px)
+        else:
+            move = rigid_between(points_mm, project(np.linalg.inv(self._plane_px), seen_px))
+            plane_px = self._plane_px @ rigid(*move) if np.all(np.isfinite(move)) else None
+        if plane_px is None:
+            return None
+        self._plane_px = plane_px
+        self._corners_px = project(plane_px, self.body.points_mm)
+        for m, corners in found.items():
+            self._corners_px[m] = corners
+        self._rate = np.zeros(3)
+        sight = self._settle(image, np.zeros(3), step_s) if np.all(np.isfinite(self._corners_px)) else None
+        if sight is None:
+            self._plane_px, self._corners_px, self._rate = held
+        else:
+            self._rate = np.zeros(3)
+        return sight
+
+
+class _ExposureVote:
+    """Which exposure time explains the smear of the first fast frames best."""
+
+    def __init__(self) -> None:
+        self._cost = np.zeros(len(EXPOSURE_TRIALS))
+        self._n_votes = 0
+        self._interval_s = 1.0 / 30.0
+        self.exposure_s = 0.0
+
+    def share(self, step_s: float) -> float:
+        return min(self.exposure_s / step_s, 1.0)
+
+    def vote(self, cost: Callable[[float], float | None], move: FloatArray, step_s: float) -> None:
+        if self._n_votes >= EXPOSURE_VOTES or not np.any(move) or step_s < 2e-3:
+            return
+        first = cost(EXPOSURE_TRIALS[0])
+        if first is None:
+            return
+        costs = [first, *(cost(share) for share in EXPOSURE_TRIALS[1:])]
+        if any(value is None for value in costs):
+            return
+        self._cost += np.array(costs, dtype=float)
+        self._n_votes += 1
+        self.exposure_s = EXPOSURE_TRIALS[int(np.argmin(self._cost))] * step_s
+
+
+def _pose_slope(plane_px: FloatArray, points_mm: FloatArray) -> FloatArray:
+    """Return how the corners (8,) move with the body's (turn_rad, x_mm, y_mm), shape (8, 3)."""
+    _, slope = projected_slope(plane_px, points_mm)
+    turned = np.stack([-points_mm[:, 1], points_mm[:, 0]], axis=1)
+    columns = np.empty((len(points_mm), 2, 3))
+    columns[:, :, 0] = np.einsum("kij,kj->ki", slope, turned)
+    columns[:, :, 1:] = slope
+    return columns.reshape(-1, 3)
+
+
+def _largest_move(smear: tuple[FloatArray, ...], corners_px: FloatArray) -> float:
+    if not smear:
+        return 0.0
+    ends = project(smear[-1], corners_px) - project(smear[0], corners_px)
+    return float(np.nan_to_num(np.hypot(ends[..., 0], ends[..., 1]), nan=0.0).max())
+
+
+def _sight(settled: FloatArray, kept: list[CornerFit | None], smear_px: float) -> Sight:
+    information = np.zeros((2, 8, 8), np.float32)
+    noise_var, explained, contrast = np.full(2, np.nan), np.full(2, np.nan), np.full(2, np.nan)
+    for m, fit in enumerate(kept):
+        if fit is None:
+            continue
+        information[m] = fit.information / fit.noise_var
+        noise_var[m], explained[m], contrast[m] = fit.noise_var, fit.explained, fit.contrast
+    return Sight(settled, information, noise_var, explained, contrast, smear_px, False)
+
+
+def find_pair(image: LumaImage, setup: MarkerSetup) -> tuple[FloatArray | None, list[Detection]]:
+    """Search a full frame for the robot's markers and the cards.
+
+    Returns
+    -------
+    corners_px : ndarray, shape (2, 4, 2), or None
+        Fore and aft corners when both were found, once each.
+    found : list of Detection
+        Everything with a wanted id.
+    """
+    wanted = (setup.fore_id, setup.aft_id, *setup.card_ids)
+    found = detect(image, setup.dictionary, wanted)
+    pair = [[item for item in found if item.marker_id == number] for number in wanted[:2]]
+    if any(len(same) != 1 for same in pair):
+        return None, found
+    return np.stack([same[0].corners_px for same in pair]), found
+
+
+def track_pair(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
+    """Follow the robot's markers through a clip.
+
+    Raises
+    ------
+    MarkersNotFound
+        If no frame shows both.
+    """
+    seeker = _Seeker(setup)
+    times: list[float] = []
+    keys: list[bool] = []
+    sights: list[Sight] = []
+    for frame in frames:
+        tracker = seeker.tracker
+        times.append(frame.time_s)
+        keys.append(frame.is_key)
+        if tracker is None:
+            tracker = seeker.seek(frame)
+        sights.append(tracker.see(frame) if tracker is not None else nothing_seen())
+    if seeker.tracker is None:
+        raise MarkersNotFound(seeker.complaint())
+    return _stack(times, keys, sights, seeker.tracker, seeker.image_px)
+
+
+class _Seeker:
+    """Searches full frames, ever more seldom, until both markers are found."""
+
+    def __init__(self, setup: MarkerSetup) -> None:
+        self._setup = setup
+        self._next_s = 0.0
+        self._gap_s = 0.0
+        self._n_seen = {setup.fore_id: 0, setup.aft_id: 0}
+        self._n_searched = 0
+        self._twice: set[int] = set()
+        self.tracker: PairTracker | None = None
+        self.image_px = (0, 0)
+
+    def seek(self, frame: Frame) -> PairTracker | None:
+        if frame.time_s < self._next_s:
+            return None
+        self.image_px = (frame.luma.shape[1], frame.luma.shape[0])
+        corners_px, found = find_pair(frame.luma, self._setup)
+        self._count(found)
+        if corners_px is not None:
+            try:
+                self.tracker = PairTracker(self._setup, frame.luma, corners_px)
+            except MarkersNotFound:
+                self.tracker = None
+        if self.tracker is None:
+            self._gap_s = min(self._gap_s + 0.02, SEARCH_EVERY_S)
+            self._next_s = frame.time_s + self._gap_s
+        return self.tracker
+
+    def _count(self, found: list[Detection]) -> None:
+        self._n_searched += 1
+        for marker_id in self._n_seen:
+            same = sum(item.marker_id == marker_id for item in found)
+            self._n_seen[marker_id] += same > 0
+            if same > 1:
+                self._twice.add(marker_id)
+
+    def complaint(self) -> str:
+        setup = self._setup
+        where = f"of {setup.dictionary} in the {self._n_searched} frames searched"
+        if self._twice:
+            return (
+                f"robot marker {min(self._twice)} {where} is in view twice; cover or remove the second one, or "
+                "give the robot's markers ids of their own"
+            )
+        seen = [number for number, count in self._n_seen.items() if count]
+        if len(seen) == 1:
+            other = setup.aft_id if seen[0] == setup.fore_id else setup.fore_id
+            return (
+                f"only robot marker {seen[0]} {where} was found, never {other}; both must be in view: check "
+                "[markers] fore and aft, glare, and that neither is covered"
+            )
+        if seen:
+            return (
+                f"robot markers {setup.fore_id} and {setup.aft_id} {where} were never both found in one frame, "
+                "as flat squares of one size"
+            )
+        return (
+            f"robot markers {setup.fore_id} and {setup.aft_id} {where} were not found; check [markers] dictionary "
+            f"and ids, that the markers are at least 22 px wide, flat, sharp and evenly lit"
+        )
+
+
+def _stack(
+    times: list[float], keys: list[bool], sights: list[Sight], tracker: PairTracker, image_px: tuple[int, int]
+) -> CornerTrack:
+    return CornerTrack(
+        time_s=np.array(times),
+        is_key=np.array(keys, dtype=bool),
+        corners_px=np.stack([s.corners_px for s in sights]),
+        information=np.stack([s.information for s in sights]),
+        noise_var=np.stack([s.noise_var for s in sights]),
+        explained=np.stack([s.explained for s in sights]),
+        smear_px=np.array([s.smear_px for s in sights]),
+        repeat=np.array([s.repeat for s in sights], dtype=bool),
+        body=tracker.body,
+        optics=tracker.optics,
+        exposure_s=tracker.exposure_s,
+        image_px=image_px,
+    )
+
+
