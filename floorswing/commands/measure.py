@@ -1,0 +1,121 @@
+"""``floorswing measure``: clips in, tables of turns out."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import click
+
+from floorswing.cli import EXIT_SOME_FAILED, EXIT_WRONG
+from floorswing.errors import one_line
+
+
+@click.command(short_help="Measure the turns in clips filmed from above.")
+@click.argument("clips", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="CLIP...")
+@click.option(
+    "--trial", required=True, type=click.Path(path_type=Path), help="Trial file (TOML) of these clips."
+)
+@click.option(
+    "--out",
+    required=True,
+    type=click.Path(path_type=Path),
+    help="Folder to write into; each clip gets a folder of its own there.",
+)
+@click.option(
+    "--continued", is_flag=True, help="The commands run on from one clip to the next, in this order."
+)
+@click.option("--json", "as_json", is_flag=True, help="Print the turns as JSON instead of tables.")
+def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as_json: bool) -> None:
+    """Measure the turns in each CLIP and write them to a folder named after it.
+
+    The folder holds turns.csv (one row a turn), events.csv (what was not a turn), heading.csv (one row a
+    frame) and measurement.json (settings, estimates, uncertainty budget, warnings).
+    """
+    from floorswing.measuring import Failure, measure_each
+    from floorswing.records import Measurement
+
+    measured: list[Measurement] = []
+    failed: list[Failure] = []
+    with _bars() as progress:
+        for outcome in measure_each(clips, trial, out, continued=continued, progress=progress):
+            progress.clear()
+            if isinstance(outcome, Failure):
+                failed.append(outcome)
+                click.echo(f"Error: {outcome.clip}: {_without(outcome.clip, outcome.error)}", err=True)
+                continue
+            measured.append(outcome)
+            _report(outcome, as_json)
+    if as_json:
+        click.echo(json.dumps([_document(one) for one in measured], indent=2, ensure_ascii=False))
+    if failed:
+        all_wrong = not measured and all(failure.is_wrong_file for failure in failed)
+        raise click.exceptions.Exit(EXIT_WRONG if all_wrong else EXIT_SOME_FAILED)
+
+
+def _without(clip: Path, error: Exception) -> str:
+    """Return the message on one line, without the name of the clip if it begins with it."""
+    return one_line(error).removeprefix(f"{clip}: ")
+
+
+def _report(one: Any, as_json: bool) -> None:
+    from floorswing.summary import sentence, turns_table
+
+    for warning in one.warnings:
+        click.echo(f"Warning: {one.source.path}: {one_line(warning)}", err=True)
+    if as_json:
+        return
+    click.echo(turns_table(one.turns))
+    click.echo(sentence(one))
+    click.echo(f"Written to {one.folder}\n")
+
+
+def _document(one: Any) -> dict[str, Any]:
+    from floorswing.files import plain
+
+    document: dict[str, Any] = plain(
+        {
+            "name": one.name,
+            "clip": one.source.path,
+            "sha256": one.source.sha256,
+            "folder": one.folder,
+            "turns": one.turns,
+            "events": one.events,
+            "warnings": one.warnings,
+        }
+    )
+    return document
+
+
+class _Bars:
+    """One bar after the other, as `measure_each` goes from clip to clip."""
+
+    def __init__(self) -> None:
+        self._name: str | None = None
+        self._bar: Any = None
+
+    def __call__(self, name: str, fraction: float) -> None:
+        from floorswing.progress import Bar
+
+        if name != self._name:
+            self.clear()
+            self._name, self._bar = name, Bar(name)
+        self._bar(fraction)
+
+    def clear(self) -> None:
+        """End the bar that is shown."""
+        if self._bar is not None:
+            self._bar.__exit__(None, None, None)
+        self._name = self._bar = None
+
+
+@contextmanager
+def _bars() -> Iterator[_Bars]:
+    bars = _Bars()
+    try:
+        yield bars
+    finally:
+        bars.clear()
