@@ -1,0 +1,1 @@
+"""Rendered demonstration clips and the renderer that makes them."""

@@ -1,0 +1,82 @@
+"""From linear light to code values: noise, tone curve, sharpening, quantising."""
+
+from __future__ import annotations
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from demo_videos.render.scene import Sensor
+
+FloatImage = NDArray[np.float32]
+
+LUT_STEPS = 16384
+LIGHT_TOP = 1.25
+"""Light above this saturates any tone curve here."""
+
+
+def blur(image: FloatImage, sigma_px: float) -> FloatImage:
+    """Blur with a Gaussian; below 0.15 px the sampled kernel means nothing and the image is returned as it is."""
+    if sigma_px < 0.15:
+        return image
+    half = max(2, int(np.ceil(4.5 * sigma_px)))
+    kernel = np.exp(-0.5 * (np.arange(-half, half + 1) / sigma_px) ** 2)
+    kernel = (kernel / kernel.sum()).astype(np.float32)
+    out = cv2.sepFilter2D(image, cv2.CV_32F, kernel, kernel, borderType=cv2.BORDER_REPLICATE)
+    return np.asarray(out, dtype=np.float32)
+
+
+class Development:
+    """Turns linear light into luma code values, with fresh noise for every frame."""
+
+    def __init__(self, sensor: Sensor, height_px: int, width_px: int, seed: int) -> None:
+        self.sensor = sensor
+        self.rng = np.random.default_rng([seed, 78])
+        low, high = (0.0, 255.0) if sensor.full_range else (16.0, 235.0)
+        self.low, self.span = low, high - low
+        self.noise = sensor.noise_grey / self.span
+        self.bank = self.rng.standard_normal((height_px + 401, width_px + 401), dtype=np.float32) * self.noise
+        self.curve = tone_curve(sensor)
+        self.depth = 2 ** (sensor.bits - 8)
+
+    def develop(self, light: FloatImage) -> NDArray[np.uint8] | NDArray[np.uint16]:
+        """Return code values of a picture of linear light (1 is the sensor's full scale)."""
+        code = self.toned(self.with_noise(light))
+        sensor = self.sensor
+        if sensor.sharpen:
+            soft = blur(code, sensor.sharpen_radius_px)
+            code = cv2.addWeighted(code, 1.0 + sensor.sharpen, soft, -sensor.sharpen, 0.0)
+        top = 255.0 * self.depth if sensor.bits == 8 else 1023.0
+        code = np.clip(code * np.float32(self.depth), 0.0, top)
+        np.rint(code, out=code)
+        return code.astype(np.uint8 if sensor.bits == 8 else np.uint16)
+
+    def with_noise(self, light: FloatImage) -> FloatImage:
+        """Add sensor noise: a window of the bank at a random place and sign."""
+        if self.noise == 0.0:
+            return light
+        height, width = light.shape
+        row, col = self.rng.integers(0, 401, 2)
+        window = self.bank[row : row + height, col : col + width]
+        sign = np.float32(self.rng.choice((-1.0, 1.0)))
+        share = np.float32(self.sensor.shot_share)
+        if share:
+            window = window * np.sqrt((1 - share) + share * 2.0 * np.maximum(light, 0.0))
+        return np.asarray(cv2.scaleAdd(np.ascontiguousarray(window), float(sign), light), dtype=np.float32)
+
+    def toned(self, light: FloatImage) -> FloatImage:
+        """Apply the tone curve and the range."""
+        if self.curve is None:
+            return np.clip(light, 0.0, 1.0) * np.float32(self.span) + np.float32(self.low)
+        index = np.clip(light * np.float32((LUT_STEPS - 1) / LIGHT_TOP), 0, LUT_STEPS - 1).astype(np.uint16)
+        return np.asarray(self.curve[index], dtype=np.float32) * np.float32(self.span) + np.float32(self.low)
+
+
+def tone_curve(sensor: Sensor) -> FloatImage | None:
+    """Return the tone curve on `LUT_STEPS` levels of light, or None when it is straight."""
+    if sensor.gamma == 1.0 and sensor.s_curve == 0.0:
+        return None
+    light = np.clip(np.linspace(0.0, LIGHT_TOP, LUT_STEPS), 0.0, 1.0)
+    value = light ** (1.0 / sensor.gamma)
+    bent = value * value * (3.0 - 2.0 * value)
+    return ((1.0 - sensor.s_curve) * value + sensor.s_curve * bent).astype(np.float32)
