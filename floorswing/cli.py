@@ -58,8 +58,8 @@ class CommandList(click.Group):
         except KeyboardInterrupt:
             click.echo("Interrupted: nothing was left half-written.", err=True)
             ctx.exit(EXIT_INTERRUPTED)
-        except (click.FileError, click.Abort) as error:
-            _tell(error)
+        except (click.UsageError, click.exceptions.Exit):
+            raise
         except Exception as error:
             if not isinstance(error, _expected_errors()):
                 raise
@@ -71,7 +71,7 @@ def _expected_errors() -> tuple[type[Exception], ...]:
     from calib.errors import CalibError
     from vision.errors import VisionError
 
-    return FloorswingError, VisionError, CalibError
+    return FloorswingError, VisionError, CalibError, click.ClickException
 
 
 def _tell(error: Exception) -> NoReturn:

@@ -107,7 +107,7 @@ def read_measurement(folder: Path | str, *, with_track: bool = False) -> Measure
             events=events,
             track=track,
             plane=document["plane"],
-            budget=tuple(Contribution(**_with_nan(line)) for line in document["budget"]),
+            budget=tuple(_contribution(line) for line in document["budget"]),
             settings=document["settings"],
             versions=document["versions"],
             warnings=tuple(document["warnings"]),
@@ -126,9 +126,11 @@ def _source_of(clip: Mapping[str, Any]) -> ClipSource:
     return ClipSource(path=Path(clip["path"]), sha256=str(clip["sha256"]), info=ClipInfo(**clip["info"]))
 
 
-def _with_nan(line: Mapping[str, Any]) -> dict[str, Any]:
-    """Return a budget line with its numbers that JSON could not hold."""
-    return {key: math.nan if value is None else value for key, value in line.items()}
+def _contribution(line: Mapping[str, Any]) -> Contribution:
+    """Return a budget line; JSON has no infinity, so no degrees of freedom means infinitely many."""
+    absent = {"u_deg": math.nan, "degrees_of_freedom": math.inf}
+    values: dict[str, Any] = {key: absent.get(key) if value is None else value for key, value in line.items()}
+    return Contribution(**values)
 
 
 def measurement_json(measurement: Measurement) -> str:

@@ -1,0 +1,149 @@
+"""``floorswing measure`` as a user meets it, with the pipeline replaced by made-up results."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+from click.testing import CliRunner, Result
+
+from floorswing.cli import cli
+from vision.errors import ClipError, MarkersNotFound
+
+from .conftest import Fake, clip_result
+
+GOOD = [90.1, 90.3, -89.9, -90.2]
+MakeClip = Callable[[str], Path]
+
+
+def measure(*arguments: object) -> Result:
+    return CliRunner().invoke(cli, ["measure", *map(str, arguments)])
+
+
+@pytest.fixture
+def out(tmp_path: Path) -> Path:
+    return tmp_path / "out"
+
+
+def test_prints_a_table_a_sentence_and_the_folder(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    fake_pipeline(cork=clip_result(GOOD))
+    path = clip("cork.mp4")
+    result = measure(path, "--trial", trial_file, "--out", out)
+    assert result.exit_code == 0
+    assert "   1     2.00       +190     +90.100 ± 0.040" in result.stdout
+    assert (
+        "cork: 4 turns seen, each with its command; each heading change known to ±0.040 degrees (95 %, "
+        "typical turn); turns of the same command scatter by 0.18 degrees (standard deviation, 2 degrees of "
+        "freedom).\n"
+    ) in result.stdout
+    assert f"Written to {out / 'cork'}" in result.stdout
+    assert result.stderr == f"Warning: {path}: the light changed\n"
+
+
+def test_json_is_all_there_is_on_standard_output(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    fake_pipeline(a=clip_result(GOOD), b=clip_result(GOOD[:3]))
+    result = measure(clip("a.mp4"), clip("b.mp4"), "--trial", trial_file, "--out", out, "--json")
+    a, b = json.loads(result.stdout)
+    assert a["folder"] == str(out / "a")
+    assert a["turns"][0]["heading_change_deg"] == 90.1
+    assert a["turns"][0]["wander_mm"] is None
+    assert b["events"][0]["kind"] == "missing turn"
+
+
+def test_a_missing_turn_is_said(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
+    fake_pipeline(cork=clip_result(GOOD[:3]))
+    result = measure(clip("cork.mp4"), "--trial", trial_file, "--out", out)
+    assert result.exit_code == 0
+    assert "3 turns seen, 3 of them matched to the 4 commands of the trial" in result.stdout
+    assert "Warning: " in result.stderr
+    assert "no turn seen for command 4" in result.stderr
+
+
+def failures(result: Result) -> list[str]:
+    assert "Traceback" not in result.output
+    return [line for line in result.stderr.splitlines() if line.startswith("Error")]
+
+
+def test_one_failing_clip_is_one_line_and_exit_code_1(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    a, b = clip("a.mp4"), clip("b.mp4")
+    fake_pipeline(a=MarkersNotFound(f"{a}: no marker with id 0 or 1"), b=clip_result(GOOD))
+    result = measure(a, b, "--trial", trial_file, "--out", out)
+    assert result.exit_code == 1
+    assert failures(result) == [f"Error: {a}: no marker with id 0 or 1"]
+    assert [path.name for path in out.iterdir()] == ["b"]
+
+
+def test_no_markers_in_the_only_clip_is_exit_code_1(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    a = clip("a.mp4")
+    fake_pipeline(a=MarkersNotFound("no marker with id 0 or 1"))
+    result = measure(a, "--trial", trial_file, "--out", out)
+    assert result.exit_code == 1
+    assert failures(result) == [f"Error: {a}: no marker with id 0 or 1"]
+    assert not out.exists()
+
+
+def test_a_file_that_is_no_clip_is_exit_code_2(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    a = clip("a.txt")
+    fake_pipeline(a=ClipError("not a clip"))
+    result = measure(a, "--trial", trial_file, "--out", out)
+    assert result.exit_code == 2
+    assert failures(result) == [f"Error: {a}: not a clip"]
+
+
+def test_commands_that_do_not_fit_are_exit_code_2(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    fake_pipeline(a=clip_result([45.0, -180, 90, 45, -60, -30, 20, 135, 90, 180, 270, -45]))
+    result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
+    assert result.exit_code == 2
+    assert len(failures(result)) == 1
+    assert "12 turns seen, 4 commands in the trial" in failures(result)[0]
+    assert not out.exists()
+
+
+def test_wrong_paths_are_one_line_and_exit_code_2(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    a = clip("a.mp4")
+    for arguments in [
+        ("no.mp4", "--trial", trial_file, "--out", out),
+        (out.parent, "--trial", trial_file, "--out", out),
+        (a, "--trial", "no.toml", "--out", out),
+        (a, "--trial", trial_file, "--out", trial_file),
+    ]:
+        result = measure(*arguments)
+        assert result.exit_code == 2
+        assert len(failures(result)) == 1
+        assert len(result.stderr.splitlines()) == 1
+    assert not out.exists()
+
+
+def test_an_interruption_is_exit_code_130_and_leaves_nothing(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    fake_pipeline(a=KeyboardInterrupt())
+    result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
+    assert result.exit_code == 130
+    assert result.stderr == "Interrupted: nothing was left half-written.\n"
+    assert not out.exists()
+
+
+def test_nothing_but_the_result_on_standard_output_when_not_a_terminal(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
+):
+    fake_pipeline(a=clip_result(GOOD))
+    result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
+    assert "\r" not in result.output
+    assert "%|" not in result.output
