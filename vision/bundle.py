@@ -8,20 +8,20 @@ like, so that the returned covariance is finite, and as wide as the truth.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from vision.errors import PlaneError
+from vision.observations import CornerTrack
 from vision.plane import (
     AFT_RAD,
     AFT_SIZE,
     BASE,
     FORE_RAD,
-    LENS,
-    LIFT,
     N_GLOBAL,
+    NAMES,
     SHAPE,
     Units,
     body_points,
@@ -32,10 +32,12 @@ from vision.plane import (
 )
 from vision.records import FloatArray
 from vision.rigid import rigid_between
-from vision.track import CornerTrack
 
 PRIOR_SD = {"k1": 0.15, "k2": 0.03, "aft_size": 0.05, "lift_x": 0.05, "lift_y": 0.05}
 """Standard deviations of the weak priors: lens terms at half a diagonal, size ratio, lift in marker distances."""
+
+EVIDENCE_FLOOR = 0.5
+"""Narrowest learned prior, in units of what the clip can tell: some doubt must always stay in the covariance."""
 
 N_HEADING_BINS = 72
 PER_BIN = 3
@@ -76,15 +78,42 @@ class Calibration:
     residual_px: float
 
 
-def prior(n_global: int = N_GLOBAL) -> tuple[FloatArray, FloatArray]:
-    """Return prior means and precisions of the global parameters; precision 0 where there is no prior."""
-    mean, precision = np.zeros(n_global), np.zeros(n_global)
+@dataclass(frozen=True, eq=False, slots=True)
+class Prior:
+    """Independent normal priors of the global parameters; precision 0 where there is none."""
+
+    mean: FloatArray
+    precision: FloatArray
+
+    def cost(self, p: FloatArray) -> float:
+        """Return the weighted square distance of `p` from the mean."""
+        return float(self.precision @ (p - self.mean) ** 2)
+
+
+def weak_prior() -> Prior:
+    """Return the priors that only keep open parameters finite."""
+    mean, precision = np.zeros(N_GLOBAL), np.zeros(N_GLOBAL)
     mean[AFT_SIZE] = 1.0
-    places = {"k1": LENS.start, "k2": LENS.start + 1, "aft_size": AFT_SIZE, "lift_x": LIFT.start}
-    places["lift_y"] = LIFT.start + 1
-    for name, place in places.items():
-        precision[place] = PRIOR_SD[name] ** -2
-    return mean, precision
+    for name, sd in PRIOR_SD.items():
+        precision[NAMES.index(name)] = sd**-2
+    return Prior(mean, precision)
+
+
+def learned_prior(p: FloatArray, cov: FloatArray) -> Prior:
+    """Return priors as narrow as the clip itself allows (empirical Bayes; Morris 1983).
+
+    Whether the aft marker lies higher than the fore one, or is printed larger, is seldom so; where the first
+    solution finds nothing beyond its own uncertainty, the parameter is drawn to its mean and costs the heading little.
+    """
+    prior = weak_prior()
+    precision = prior.precision.copy()
+    for group in (("lift_x", "lift_y"), ("aft_size",), ("k2",)):
+        places = [NAMES.index(name) for name in group]
+        square = float(np.mean((p[places] - prior.mean[places]) ** 2))
+        noise = float(np.mean(np.diag(cov)[places]))
+        spread = max(square - 2.0 * noise, EVIDENCE_FLOOR**2 * noise, 1e-14)
+        precision[places] = np.maximum(precision[places], 1.0 / spread)
+    return Prior(prior.mean, precision)
 
 
 def calibrate(track: CornerTrack) -> Calibration:
@@ -104,7 +133,9 @@ def calibrate(track: CornerTrack) -> Calibration:
     corners_px = track.corners_px[chosen].reshape(-1, 16)
     whiten = whitening(track.information[chosen])
     poses = start_poses(corners_px, p, units)
-    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units)
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior())
+    prior = learned_prior(p, cov)
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior)
     return Calibration(
         p=p,
         cov=cov,
@@ -186,21 +217,20 @@ def _whiten(whiten: FloatArray, columns: FloatArray) -> FloatArray:
 
 
 def _adjust(
-    p: FloatArray, poses: FloatArray, corners_px: FloatArray, whiten: FloatArray, units: Units
+    p: FloatArray, poses: FloatArray, corners_px: FloatArray, whiten: FloatArray, units: Units, prior: Prior
 ) -> tuple[FloatArray, FloatArray, FloatArray, float, float]:
     """Levenberg-Marquardt over all parameters, poses eliminated; Cauchy weights per marker and frame."""
-    mean, precision = prior()
     damping, misfit = 1e-3, 1.0
     cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
     for _ in range(MAX_STEPS):
         system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
-        system = _with_prior(system, p, mean, precision)
+        system = _with_prior(system, p, prior)
         step, pose_steps = _solve(system, damping)
         trial_p, trial_poses = p + step, poses + pose_steps
         trial_cost, _, _ = _cost(trial_p, trial_poses, corners_px, whiten, units, misfit, fixed=True)
         now_cost, _, _ = _cost(p, poses, corners_px, whiten, units, misfit, fixed=True)
-        trial_cost += float(precision @ (trial_p - mean) ** 2)
-        now_cost += float(precision @ (p - mean) ** 2)
+        trial_cost += prior.cost(trial_p)
+        now_cost += prior.cost(p)
         if not np.isfinite(trial_cost) or trial_cost > now_cost:
             damping *= 8.0
             if damping > 1e6:
@@ -211,9 +241,8 @@ def _adjust(
         cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
         if now_cost - trial_cost < 1e-6 * max(trial_cost, 1.0):
             break
-    system = _with_prior(
-        _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit), p, mean, precision
-    )
+    system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
+    system = _with_prior(system, p, prior)
     cov = np.linalg.inv(_schur(system)[0])
     left = project_pair(p, poses, units).corners_px - corners_px
     kept = np.repeat(weight > 0.2, 8, axis=1).reshape(len(left), 16)
@@ -269,9 +298,11 @@ def _normal(
     )
 
 
-def _with_prior(system: _Normal, p: FloatArray, mean: FloatArray, precision: FloatArray) -> _Normal:
-    return _Normal(
-        system.a + np.diag(precision), system.b, system.c, system.g + precision * (mean - p), system.h
+def _with_prior(system: _Normal, p: FloatArray, prior: Prior) -> _Normal:
+    return replace(
+        system,
+        a=system.a + np.diag(prior.precision),
+        g=system.g + prior.precision * (prior.mean - p),
     )
 
 

@@ -5,11 +5,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from vision.bundle import Calibration, start_poses, whitening
-from vision.plane import N_GLOBAL, project_pair, to_floor, to_plane
+from vision.plane import N_GLOBAL, Projection, Units, project_pair, to_floor, to_plane
 from vision.records import FloatArray
-from vision.track import CornerTrack
+from vision.observations import CornerTrack
 
 CHUNK = 4096
 """Frames solved at once: bounds the memory on long clips."""
@@ -28,11 +29,10 @@ class Poses:
         From the sensor noise of the frame alone.
     by_global : ndarray, shape (N, 13)
         Derivative of the heading (rad) by the calibration's parameters.
-    left_px : ndarray, shape (N, 16)
-        Corner residuals, observed less modelled.
-    chi2 : ndarray, shape (N,)
-        Weighted sum of squared residuals; `dof` degrees of freedom.
-    dof : ndarray, shape (N,)
+    left : ndarray, shape (N, 16)
+        Corner residuals in units of their own noise, uncorrelated; NaN for a marker not seen.
+    residual_px : ndarray, shape (N,)
+        Root mean square distance of the corners from the fitted pair.
     scale : ndarray, shape (N,)
         Apparent size of the pair relative to the calibrated plane.
     """
@@ -42,9 +42,8 @@ class Poses:
     y_mm: FloatArray
     u_heading_rad: FloatArray
     by_global: FloatArray
-    left_px: FloatArray
-    chi2: FloatArray
-    dof: FloatArray
+    left: FloatArray
+    residual_px: FloatArray
     scale: FloatArray
 
 
@@ -78,19 +77,18 @@ def _solve_chunk(track: CornerTrack, calibration: Calibration, rows: slice) -> d
     out["heading_rad"][seen], out["x_mm"][seen], out["y_mm"][seen] = heading_rad, x_mm, y_mm
     out["u_heading_rad"][seen] = np.sqrt(cov[:, 0, 0])
     out["by_global"][seen] = np.einsum("ni,nij->nj", cov[:, 0], pull)  # the sign of y down is undone by that of -J
-    out["left_px"][seen] = np.where(mask, left_px, np.nan)
-    out["chi2"][seen] = np.sum(left**2, axis=1)
-    out["dof"][seen] = mask.sum(axis=1) - 3.0
+    out["left"][seen] = np.where(mask, left, np.nan)
+    out["residual_px"][seen] = np.sqrt(2.0 * np.sum(left_px**2, axis=1) / mask.sum(axis=1))
     out["scale"][seen] = _scale(observed, poses, calibration)
     return out
 
 
 def _blank(n_frames: int) -> dict[str, FloatArray]:
-    scalars = ("heading_rad", "x_mm", "y_mm", "u_heading_rad", "chi2", "dof", "scale")
+    scalars = ("heading_rad", "x_mm", "y_mm", "u_heading_rad", "residual_px", "scale")
     out = {name: np.full(n_frames, np.nan) for name in scalars}
     return out | {
         "by_global": np.full((n_frames, N_GLOBAL), np.nan),
-        "left_px": np.full((n_frames, 16), np.nan),
+        "left": np.full((n_frames, 16), np.nan),
     }
 
 
@@ -100,7 +98,15 @@ def _apply(whiten: FloatArray, columns: FloatArray) -> FloatArray:
     return out
 
 
-def _linear(p, poses, observed, mask, whiten, units):  # type: ignore[no-untyped-def]
+def _linear(
+    p: FloatArray,
+    poses: FloatArray,
+    observed: FloatArray,
+    mask: NDArray[np.bool_],
+    whiten: FloatArray,
+    units: Units,
+) -> tuple[Projection, FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Return the projection, the residuals (px and whitened), the whitened pose slopes and their information."""
     projection = project_pair(p, poses, units)
     left_px = np.where(mask, observed - projection.corners_px, 0.0)
     left = _apply(whiten, left_px[..., None])[..., 0]
@@ -113,14 +119,11 @@ def _scale(observed: FloatArray, poses: FloatArray, calibration: Calibration) ->
     """Return the least-squares size of the seen corners about their middle, relative to the modelled ones."""
     p, units = calibration.p, calibration.units
     model = project_pair(p, poses, units).corners_px
-    ratio = np.full(len(observed), np.nan)
     points = to_plane(observed.reshape(-1, 8, 2), p, units)
-    ideal = to_plane(model.reshape(-1, 8, 2), p, units)
-    for n in range(len(observed)):
-        known = np.isfinite(points[n, :, 0])
-        a = points[n, known] - points[n, known].mean(axis=0)
-        b = ideal[n, known] - ideal[n, known].mean(axis=0)
-        ratio[n] = np.sqrt(np.sum(a * a) / np.sum(b * b))
-    return ratio
+    ideal = np.where(np.isfinite(points), to_plane(model.reshape(-1, 8, 2), p, units), np.nan)
+    around = points - np.nanmean(points, axis=1, keepdims=True)
+    meant = ideal - np.nanmean(ideal, axis=1, keepdims=True)
+    size: FloatArray = np.sqrt(np.nansum(around**2, axis=(1, 2)) / np.nansum(meant**2, axis=(1, 2)))
+    return size
 
 

@@ -9,17 +9,16 @@ and wider searches follow: turned poses under soft templates, the detector in a 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from vision.align import CornerFit, fit_corners, homography_from_corners
+from vision.cards import CardWatcher
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
 from vision.markers import Detection, detect
+from vision.observations import CornerTrack, Sight, nothing_seen
 from vision.pair import (
-    Body,
     Pattern,
     body_from_corners,
     build_pattern,
@@ -41,67 +40,6 @@ EXPOSURE_TRIALS = (0.0, 0.12, 0.25, 0.4, 0.6, 0.8, 1.0)
 """Exposure times tried, as shares of the frame interval."""
 
 EXPOSURE_VOTES = 12
-
-
-@dataclass(frozen=True, eq=False, slots=True)
-class Sight:
-    """What one frame said about the pair.
-
-    Parameters
-    ----------
-    corners_px : ndarray, shape (2, 4, 2)
-        Aligned corners; NaN for a marker not seen.
-    information : ndarray, shape (2, 8, 8), float32
-        Fisher's information of each marker's corners, in 1/px^2; zero for a marker not seen.
-    noise_var, explained, contrast : ndarray, shape (2,)
-    smear_px : float
-        How far the pair moved during the exposure.
-    repeat : bool
-        Whether the picture of the pair is bit by bit that of the frame before.
-    """
-
-    corners_px: FloatArray
-    information: NDArray[np.float32]
-    noise_var: FloatArray
-    explained: FloatArray
-    contrast: FloatArray
-    smear_px: float
-    repeat: bool
-
-
-def nothing_seen() -> Sight:
-    """Return the sight of a frame without the pair."""
-    gap = np.full(2, np.nan)
-    return Sight(np.full((2, 4, 2), np.nan), np.zeros((2, 8, 8), np.float32), gap, gap, gap, 0.0, False)
-
-
-@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
-class CornerTrack:
-    """Corners of both markers in every frame (N frames); arrays as in `Sight`, stacked.
-
-    Parameters
-    ----------
-    body : Body
-        The pair as first estimated, before calibration.
-    optics : Optics
-    exposure_s : float
-        Exposure time estimated from the smear of fast frames; 0 if none was fast.
-    image_px : tuple of int
-        Width and height.
-    """
-
-    time_s: FloatArray
-    is_key: NDArray[np.bool_]
-    corners_px: FloatArray
-    information: NDArray[np.float32]
-    noise_var: FloatArray
-    explained: FloatArray
-    smear_px: FloatArray
-    repeat: NDArray[np.bool_]
-    body: Body
-    optics: Optics
-    exposure_s: float
-    image_px: tuple[int, int]
 
 
 class PairTracker:
@@ -559,9 +497,10 @@ def track_pair(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
         if tracker is None:
             tracker = seeker.seek(frame)
         sights.append(tracker.see(frame) if tracker is not None else nothing_seen())
+        seeker.cards.look(frame)
     if seeker.tracker is None:
         raise MarkersNotFound(seeker.complaint())
-    return _stack(times, keys, sights, seeker.tracker, seeker.image_px)
+    return _stack(times, keys, sights, seeker)
 
 
 class _Seeker:
@@ -575,6 +514,7 @@ class _Seeker:
         self._n_searched = 0
         self._twice: set[int] = set()
         self.tracker: PairTracker | None = None
+        self.cards = CardWatcher(setup)
         self.image_px = (0, 0)
 
     def seek(self, frame: Frame) -> PairTracker | None:
@@ -586,6 +526,7 @@ class _Seeker:
         if corners_px is not None:
             try:
                 self.tracker = PairTracker(self._setup, frame.luma, corners_px)
+                self.cards.start(frame, found, self.tracker.optics)
             except MarkersNotFound:
                 self.tracker = None
         if self.tracker is None:
@@ -627,9 +568,9 @@ class _Seeker:
         )
 
 
-def _stack(
-    times: list[float], keys: list[bool], sights: list[Sight], tracker: PairTracker, image_px: tuple[int, int]
-) -> CornerTrack:
+def _stack(times: list[float], keys: list[bool], sights: list[Sight], seeker: _Seeker) -> CornerTrack:
+    tracker = seeker.tracker
+    assert tracker is not None
     return CornerTrack(
         time_s=np.array(times),
         is_key=np.array(keys, dtype=bool),
@@ -642,7 +583,6 @@ def _stack(
         body=tracker.body,
         optics=tracker.optics,
         exposure_s=tracker.exposure_s,
-        image_px=image_px,
+        image_px=seeker.image_px,
+        looks=tuple(seeker.cards.looks),
     )
-
-

@@ -1,0 +1,48 @@
+"""A clip measured, on one page: the stages in order, each a pure function of what the one before returned."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+from vision.bundle import calibrate
+from vision.frames import Clip, Frame
+from vision.poses import solve_poses
+from vision.records import ClipResult, MarkerSetup
+from vision.result import assemble
+from vision.track import track_pair
+from vision.turns import split_turns, usable_frames
+
+Progress = Callable[[float, float | None], None]
+"""Called now and then with the time reached in the clip and the clip's length, both in s."""
+
+
+def measure_clip(path: str | Path, setup: MarkerSetup, *, progress: Progress | None = None) -> ClipResult:
+    """Measure the turns in one clip.
+
+    Parameters
+    ----------
+    path : path-like
+    setup : MarkerSetup
+    progress : callable, optional
+
+    Raises
+    ------
+    vision.errors.VisionError
+        If the clip cannot be read, or the markers or the plane not be found.
+    """
+    with Clip(path) as clip:
+        corners = track_pair(_reported(clip, progress), setup)
+        info, problems = clip.info, tuple(clip.problems)
+    calibration = calibrate(corners)
+    poses = solve_poses(corners, calibration)
+    seen = usable_frames(corners, poses)
+    split = split_turns(seen, calibration.cov)
+    return assemble(info, setup, corners, calibration, seen, split, problems)
+
+
+def _reported(clip: Clip, progress: Progress | None) -> Iterator[Frame]:
+    for frame in clip.frames():
+        if progress is not None and frame.index % 8 == 0:
+            progress(frame.time_s, clip.info.duration_s)
+        yield frame

@@ -1,0 +1,118 @@
+"""The uncertainty of a heading change.
+
+What is left at a rest when its frames are averaged is not noise: a coded picture repeats its own errors until the
+next key frame, so dividing by the root of the number of frames would be wrong. The rigid pair has sixteen corner
+coordinates and three degrees of freedom; the thirteen others show, rest by rest, how large the errors are that
+averaging leaves. Pooled over the rests of a clip they scale the heading's own uncertainty (a type A evaluation with
+13 degrees of freedom a rest).
+"""
+
+from __future__ import annotations
+
+import itertools
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from vision.bundle import Calibration
+from vision.plane import AFT_SIZE, BASE, LENS, LIFT, SHAPE
+from vision.records import Contribution, FloatArray
+from vision.rests import Stretch
+
+if TYPE_CHECKING:
+    from vision.turns import Seen, Split
+
+REDUNDANCY = 13.0
+"""Corner coordinates of the pair beyond its pose."""
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class RestHeading:
+    """A rest, and which of its frames are averaged for the turn before and after it.
+
+    Parameters
+    ----------
+    still : Stretch
+    before, after : ndarray of int
+        Frames averaged as the end of the turn before this rest, and as the start of the turn after.
+    """
+
+    still: Stretch
+    before: NDArray[np.intp]
+    after: NDArray[np.intp]
+
+
+def frozen_share(left: FloatArray, frames: NDArray[np.intp]) -> float:
+    """Return the mean square of a rest's averaged residuals against that of one frame's noise.
+
+    Parameters
+    ----------
+    left : ndarray, shape (N, 16)
+        Whitened corner residuals.
+    frames : ndarray of int
+        Frames of one rest.
+    """
+    known = left[frames]
+    known = known[np.all(np.isfinite(known), axis=1)]
+    if len(known) == 0:
+        return np.nan
+    mean = known.mean(axis=0)
+    return float(np.sum(mean**2) / REDUNDANCY)
+
+
+def change_uncertainty(
+    u_heading_deg: FloatArray,
+    left: FloatArray,
+    by_global: FloatArray,
+    before: RestHeading | None,
+    after: RestHeading | None,
+    cov: FloatArray,
+) -> float:
+    """Return the standard uncertainty (deg) of a heading change between two rests."""
+    assert before is not None and after is not None
+    total = 0.0
+    for frames in (before.after, after.before):
+        share = frozen_share(left, frames)
+        total += share * float(np.median(u_heading_deg[frames])) ** 2
+    lever = by_global[after.before].mean(axis=0) - by_global[before.after].mean(axis=0)
+    return float(np.sqrt(total + lever @ cov @ lever))
+
+
+def budget_of(seen: Seen, split: Split, calibration: Calibration) -> tuple[Contribution, ...]:
+    """Return the budget of a typical heading change of the clip (medians over its turns)."""
+    rests = [r for r in split.rests if len(r.before) and len(r.after)]
+    if len(rests) < 2:
+        return ()
+    shares = np.array([frozen_share(seen.left, rest.after) for rest in rests])
+    noise = np.array([np.median(seen.u_heading_deg[rest.after]) for rest in rests])
+    left_deg = float(np.sqrt(2.0 * np.nanmean(shares) * np.median(noise) ** 2))
+    levers = np.array(
+        [
+            seen.by_global[after.before].mean(axis=0) - seen.by_global[before.after].mean(axis=0)
+            for before, after in itertools.pairwise(rests)
+        ]
+    )
+    parts = [
+        Contribution(
+            name="what averaging over the two rests leaves",
+            u_deg=left_deg,
+            evaluation="A",
+            degrees_of_freedom=REDUNDANCY * len(rests),
+            basis="spread of the 13 redundant corner coordinates, rest by rest",
+        )
+    ]
+    groups = {"plane map": SHAPE, "lens": LENS, "marker mounting": slice(BASE, AFT_SIZE + 1), "marker heights": LIFT}
+    for name, places in groups.items():
+        part = np.einsum("mi,ij,mj->m", levers[:, places], calibration.cov[places, places], levers[:, places])
+        parts.append(
+            Contribution(
+                name=name,
+                u_deg=float(np.sqrt(np.median(part))),
+                evaluation="A",
+                degrees_of_freedom=max(13.0 * calibration.n_frames - 13.0, 1.0),
+                basis="covariance of the calibration over the rotation",
+            )
+        )
+    return tuple(parts)

@@ -1,0 +1,79 @@
+"""Floor cards: squares of known side lying anywhere, looked at now and then while the robot is followed."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from vision.frames import Frame
+from vision.markers import Detection, detect, printed_modules
+from vision.observations import CardLook
+from vision.pair import mean_side_px, settle_corners
+from vision.records import FloatArray, MarkerSetup
+from vision.template import Optics, Template, build_template
+
+LOOK_EVERY_S = 0.5
+HOLD = 0.6
+
+
+class CardWatcher:
+    """Looks at each card every half second; mutable, one per clip."""
+
+    def __init__(self, setup: MarkerSetup) -> None:
+        self._setup = setup
+        self._known: dict[int, tuple[FloatArray, Template]] = {}
+        self._optics = Optics(1.0)
+        self._next_s = 0.0
+        self.looks: list[CardLook] = []
+        self.twice: set[int] = set()
+
+    def start(self, frame: Frame, found: list[Detection], optics: Optics) -> None:
+        """Take up the cards found in a full-frame search."""
+        self._optics = optics
+        wanted = set(self._setup.card_ids)
+        ids = [item.marker_id for item in found if item.marker_id in wanted]
+        self.twice |= {number for number in ids if ids.count(number) > 1}
+        for item in found:
+            if item.marker_id in wanted and item.marker_id not in self.twice:
+                self._take_up(frame, item)
+        self._next_s = frame.time_s + LOOK_EVERY_S
+
+    def _take_up(self, frame: Frame, item: Detection) -> None:
+        black = printed_modules(self._setup.dictionary, item.marker_id)
+        template = build_template(black, side_px=item.side_px, optics=self._optics)
+        settled = settle_corners(frame.luma, item.corners_px, template)
+        if settled is None or settled[1].explained < HOLD:
+            return
+        self._known[item.marker_id] = (settled[0], template)
+        self._note(item.marker_id, frame.time_s, settled[0], settled[1].information, settled[1].noise_var)
+
+    def look(self, frame: Frame) -> None:
+        """Measure the cards again if it is time."""
+        if frame.time_s < self._next_s or not self._known:
+            return
+        self._next_s = frame.time_s + LOOK_EVERY_S
+        for card_id, (corners_px, template) in list(self._known.items()):
+            settled = settle_corners(frame.luma, corners_px, template)
+            if settled is None or settled[1].explained < HOLD:
+                settled = self._find_again(frame, card_id, corners_px, template)
+            if settled is None or settled[1].explained < HOLD:
+                continue
+            self._known[card_id] = (settled[0], template)
+            self._note(card_id, frame.time_s, settled[0], settled[1].information, settled[1].noise_var)
+
+    def _find_again(self, frame: Frame, card_id: int, corners_px: FloatArray, template: Template):  # type: ignore[no-untyped-def]
+        low, high = corners_px.min(axis=0), corners_px.max(axis=0)
+        pad = 1.5 * mean_side_px(corners_px)
+        limit = (frame.luma.shape[1], frame.luma.shape[0])
+        x0, y0 = np.clip(low - pad, 0, np.array(limit) - 8).astype(int)
+        x1, y1 = np.clip(high + pad, (x0 + 8, y0 + 8), limit).astype(int)
+        found = detect(frame.luma[y0:y1, x0:x1], self._setup.dictionary, (card_id,))
+        if len(found) != 1:
+            return None
+        return settle_corners(frame.luma, found[0].corners_px + (x0, y0), template)
+
+    def _note(
+        self, card_id: int, time_s: float, corners_px: FloatArray, information: FloatArray, noise_var: float
+    ) -> None:
+        with np.errstate(all="ignore"):
+            variance = np.diag(np.linalg.pinv(information)) * noise_var
+        self.looks.append(CardLook(card_id, time_s, corners_px, float(np.sqrt(np.median(np.abs(variance))))))

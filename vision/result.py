@@ -1,0 +1,182 @@
+"""The result of a clip, put together: track in the floor frame, turns, events, plane, budget and warnings."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+
+from vision.budget import budget_of
+from vision.bundle import Calibration
+from vision.card_check import CardCheck, camera_moves, check_cards
+from vision.observations import CornerTrack
+from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
+from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
+from vision.turns import Seen, Split
+
+OUT_OF_SQUARE = 0.02
+"""A card whose corners miss a square by more than this share of its side is curled or lies uneven."""
+
+LITTLE_TURNED_DEG = 80.0
+"""With less rotation in the clip the plane is weakly known, and the result says so."""
+
+
+def assemble(
+    info: ClipInfo,
+    setup: MarkerSetup,
+    corners: CornerTrack,
+    calibration: Calibration,
+    seen: Seen,
+    split: Split,
+    problems: tuple[str, ...],
+) -> ClipResult:
+    """Return the result of one clip in the floor frame."""
+    cards = check_cards(list(corners.looks), calibration)
+    frame = _floor_frame(cards)
+    moves = camera_moves(list(corners.looks))
+    events = (*split.events, *(_moved(*move) for move in moves))
+    turns = tuple(_placed(_touched(turn, moves), frame) for turn in split.turns)
+    return ClipResult(
+        clip=info,
+        track=_pose_track(corners, seen, split, frame),
+        turns=turns,
+        events=tuple(sorted(events, key=lambda event: event.start_s)),
+        plane=_plane_record(corners, calibration, cards, setup),
+        budget=budget_of(seen, split, calibration),
+        warnings=(*problems, *_warnings(calibration, cards, moves, setup)),
+    )
+
+
+FloorFrame = tuple[float, float, float]
+"""Heading (deg) and place (mm) of the floor frame in the plane's own frame, y up."""
+
+
+def _floor_frame(cards: list[CardCheck]) -> FloorFrame:
+    """Return the frame of the card with the lowest id, or the picture's own where there is none."""
+    if not cards:
+        return 0.0, 0.0, 0.0
+    first = cards[0]
+    return float(-np.degrees(first.turn_rad)), float(first.centre_mm[0]), float(-first.centre_mm[1])
+
+
+def _place(x_mm: FloatArray, y_mm: FloatArray, frame: FloorFrame) -> tuple[FloatArray, FloatArray]:
+    c, s = np.cos(np.deg2rad(frame[0])), np.sin(np.deg2rad(frame[0]))
+    dx, dy = x_mm - frame[1], y_mm - frame[2]
+    return c * dx + s * dy, c * dy - s * dx
+
+
+def _placed(turn: Turn, frame: FloorFrame) -> Turn:
+    x, y = _place(np.array(turn.centre_x_mm), np.array(turn.centre_y_mm), frame)
+    return replace(
+        turn,
+        start_heading_deg=turn.start_heading_deg - frame[0],
+        end_heading_deg=turn.end_heading_deg - frame[0],
+        centre_x_mm=float(x),
+        centre_y_mm=float(y),
+    )
+
+
+def _touched(turn: Turn, moves: list[tuple[float, float, float]]) -> Turn:
+    hit = any(start_s <= turn.end_s + 2.0 and end_s >= turn.start_s - 2.0 for start_s, end_s, _ in moves)
+    return replace(turn, flags=(*turn.flags, "camera_moved")) if hit else turn
+
+
+def _moved(start_s: float, end_s: float, shift_px: float) -> Event:
+    return Event(
+        start_s=start_s,
+        end_s=end_s,
+        kind="camera moved",
+        detail=f"the floor cards shifted by {shift_px:.2f} px in the picture",
+    )
+
+
+def _pose_track(corners: CornerTrack, seen: Seen, split: Split, frame: FloorFrame) -> PoseTrack:
+    n_frames = len(corners.time_s)
+
+    def spread(values: FloatArray) -> FloatArray:
+        out = np.full(n_frames, np.nan)
+        out[seen.index] = values
+        return out
+
+    x_mm, y_mm = _place(seen.x_mm, seen.y_mm, frame)
+    states = np.full(n_frames, "hidden", dtype="<U7")
+    states[seen.index] = split.states
+    return PoseTrack(
+        time_s=corners.time_s,
+        heading_deg=spread(seen.heading_deg - frame[0]),
+        u_heading_deg=spread(seen.u_heading_deg),
+        x_mm=spread(x_mm),
+        y_mm=spread(y_mm),
+        scale=spread(seen.scale),
+        residual_px=spread(seen.residual_px),
+        state=tuple(str(state) for state in states),
+    )
+
+
+def _plane_record(
+    corners: CornerTrack, calibration: Calibration, cards: list[CardCheck], setup: MarkerSetup
+) -> dict[str, object]:
+    p, units = calibration.p, calibration.units
+    u = np.sqrt(np.diag(calibration.cov))
+    return {
+        "method": "rotation of the robot's two markers, still camera",
+        "frames_used": calibration.n_frames,
+        "turned_deg": float(np.degrees(calibration.turned_rad)),
+        "misfit": calibration.misfit,
+        "residual_px": calibration.residual_px,
+        "plane_map": {"values": p[SHAPE].tolist(), "u": u[SHAPE].tolist(), "length_mm": units.length_mm,
+                      "half_diagonal_px": units.half_px},
+        "lens": {"k1": float(p[LENS][0]), "u_k1": float(u[LENS][0]), "k2": float(p[LENS][1]),
+                 "u_k2": float(u[LENS][1]), "radius_unit": "half the picture's diagonal"},
+        "mounting": {
+            "marker_distance_mm": float(p[BASE] * units.length_mm),
+            "u_marker_distance_mm": float(u[BASE] * units.length_mm),
+            "fore_marker_deg": float(-np.degrees(p[FORE_RAD])),
+            "aft_marker_deg": float(-np.degrees(p[AFT_RAD])),
+            "aft_marker_size": float(p[AFT_SIZE]),
+            "u_aft_marker_size": float(u[AFT_SIZE]),
+            "aft_marker_lift_mm": [float(v * units.length_mm) for v in p[LIFT]],
+            "u_aft_marker_lift_mm": [float(v * units.length_mm) for v in u[LIFT]],
+        },
+        "picture": {"blur_px": corners.optics.blur_px, "halo": corners.optics.halo,
+                    "halo_px": corners.optics.halo_px, "exposure_s": corners.exposure_s},
+        "cards": [_card_record(card, setup) for card in cards],
+    }  # fmt: skip
+
+
+def _card_record(card: CardCheck, setup: MarkerSetup) -> dict[str, object]:
+    record: dict[str, object] = {
+        "id": card.card_id,
+        "apparent_side_mm": card.side_mm,
+        "out_of_square_mm": card.out_of_square_mm,
+        "spread_px": card.spread_px,
+    }
+    if setup.card_side_mm:
+        record["floor_to_deck_scale"] = card.side_mm / setup.card_side_mm
+    return record
+
+
+def _warnings(
+    calibration: Calibration,
+    cards: list[CardCheck],
+    moves: list[tuple[float, float, float]],
+    setup: MarkerSetup,
+) -> list[str]:
+    said: list[str] = []
+    turned_deg = float(np.degrees(calibration.turned_rad))
+    if turned_deg < LITTLE_TURNED_DEG:
+        said.append(
+            f"the robot's headings cover only {turned_deg:.0f} deg, so the floor plane is weakly known; let it turn "
+            "through 90 deg or more in the clip"
+        )
+    for card in cards:
+        if card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm:
+            said.append(
+                f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off); is it "
+                "curled, or not lying on the floor?"
+            )
+    said.extend(
+        f"the camera moved between {start_s:.1f} s and {end_s:.1f} s; turns near it are flagged"
+        for start_s, end_s, _ in moves
+    )
+    return said

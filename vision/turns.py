@@ -1,0 +1,342 @@
+"""Pose track to turns and events: rest, rotation about a centre that hardly moves, rest."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from vision.budget import RestHeading, change_uncertainty
+from vision.observations import CornerTrack
+from vision.poses import Poses
+from vision.records import Event, FloatArray, Turn
+from vision.rests import (
+    SHORTEST_REST_S,
+    SMALLEST_TURN_DEG,
+    Motion,
+    Stretch,
+    bridge_pauses,
+    find_motion,
+    stretches,
+)
+
+LONGEST_REST_S = 2.0
+"""Only this much of a rest, next to the turn, is averaged: the camera may sink over longer times."""
+
+DRIVEN_MM = 25.0
+"""A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
+
+LIFT_SHARE = 0.012
+"""A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class Seen:
+    """The seen frames of a clip, ready to be split (N frames).
+
+    Parameters
+    ----------
+    index : ndarray of int, shape (N,)
+        Which frames of the clip these are.
+    time_s, heading_deg, x_mm, y_mm, scale, residual_px : ndarray, shape (N,)
+        Heading unwrapped.
+    u_heading_deg : ndarray, shape (N,)
+        Noise of the single frame.
+    by_global : ndarray, shape (N, 13)
+        Derivative of the heading (deg) by the calibration.
+    left : ndarray, shape (N, 16)
+        Whitened corner residuals, NaN for a marker not seen.
+    end_s : float
+        Time of the last frame of the clip, seen or not.
+    frame_s : float
+        Usual frame interval.
+    """
+
+    index: NDArray[np.intp]
+    time_s: FloatArray
+    heading_deg: FloatArray
+    x_mm: FloatArray
+    y_mm: FloatArray
+    scale: FloatArray
+    residual_px: FloatArray
+    u_heading_deg: FloatArray
+    by_global: FloatArray
+    left: FloatArray
+    end_s: float
+    frame_s: float
+
+
+def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
+    """Return the frames with a believable pose, heading unwrapped along them."""
+    steps = np.diff(corners.time_s)
+    frame_s = float(np.median(steps[steps > 0])) if np.any(steps > 0) else 1.0 / 30.0
+    known = np.isfinite(poses.heading_rad) & np.isfinite(poses.residual_px)
+    if known.any():
+        usual = float(np.median(poses.residual_px[known]))
+        known &= poses.residual_px < max(12.0 * usual, 0.02 * _side_px(corners))
+    heading_rad = np.unwrap(poses.heading_rad[known])
+    return Seen(
+        index=np.flatnonzero(known),
+        time_s=corners.time_s[known],
+        heading_deg=np.degrees(heading_rad),
+        x_mm=poses.x_mm[known],
+        y_mm=poses.y_mm[known],
+        scale=poses.scale[known],
+        residual_px=poses.residual_px[known],
+        u_heading_deg=np.degrees(poses.u_heading_rad[known]),
+        by_global=np.degrees(poses.by_global[known]),
+        left=poses.left[known],
+        end_s=float(corners.time_s[-1]),
+        frame_s=frame_s,
+    )
+
+
+def _side_px(corners: CornerTrack) -> float:
+    edges = np.roll(corners.corners_px, -1, axis=2) - corners.corners_px
+    return float(np.nanmedian(np.hypot(edges[..., 0], edges[..., 1])))
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class Split:
+    """The turns and events of a clip, and a state for each seen frame."""
+
+    turns: tuple[Turn, ...]
+    events: tuple[Event, ...]
+    states: tuple[str, ...]
+    rests: tuple[RestHeading, ...]
+    motion: Motion
+
+
+def split_turns(seen: Seen, cov: FloatArray) -> Split:
+    """Split seen frames into turns and events.
+
+    Parameters
+    ----------
+    seen : Seen
+    cov : ndarray, shape (13, 13)
+        Covariance of the calibration.
+    """
+    motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm)
+    moving = bridge_pauses(motion.moving, seen.time_s)
+    moves = stretches(moving)
+    rests = _rests_around(seen, moves)
+    turns: list[Turn] = []
+    events: list[Event] = []
+    states = np.where(moving, "move", "rest").astype("<U7")
+    for number, move in enumerate(moves):
+        before, after = rests[number], rests[number + 1]
+        kind, detail = _judge(seen, motion, move, before, after)
+        if kind == "turn":
+            turns.append(_turn(seen, motion, move, before, after, cov))
+            states[move.first : move.last + 1] = "turn"
+        else:
+            events.append(_event(seen, move, kind, detail))
+    events.extend(_gap_events(seen))
+    turns = _flag_handled(turns, events)
+    kept = tuple(rest for rest in rests if rest is not None)
+    return Split(
+        turns=tuple(turns),
+        events=tuple(sorted(events, key=lambda event: event.start_s)),
+        states=tuple(str(state) for state in states),
+        rests=kept,
+        motion=motion,
+    )
+
+
+def _rests_around(seen: Seen, moves: list[Stretch]) -> list[RestHeading | None]:
+    """Return the rest before each move and the one after the last; None where there is none."""
+    n_frames = len(seen.time_s)
+    borders = [-1, *(x for move in moves for x in (move.first, move.last)), n_frames]
+    gaps = [(borders[2 * k] + 1, borders[2 * k + 1] - 1) for k in range(len(moves) + 1)]
+    return [
+        _rest(seen, first, last, from_start=k == 0, to_end=k == len(moves))
+        for k, (first, last) in enumerate(gaps)
+    ]
+
+
+def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) -> RestHeading | None:
+    # The frames next to a motion belong to it: smoothing has a reach, and coding lags behind.
+    if not from_start:
+        first += 1
+    if not to_end:
+        last -= 1
+    if last - first < 1:
+        return None
+    still = Stretch(first, last)
+    if seen.time_s[last] - seen.time_s[first] < 0.5 * SHORTEST_REST_S:
+        return None
+    return RestHeading(still=still, before=_side(seen, still, late=False), after=_side(seen, still, late=True))
+
+
+def _side(seen: Seen, still: Stretch, *, late: bool) -> NDArray[np.intp]:
+    """Return the frames of a rest to average for the turn before it (early) or after it (late)."""
+    frames = np.arange(still.first, still.last + 1)
+    times = seen.time_s[frames]
+    near = times >= times[-1] - LONGEST_REST_S if late else times <= times[0] + LONGEST_REST_S
+    return frames[near]
+
+
+def _judge(
+    seen: Seen, motion: Motion, move: Stretch, before: RestHeading | None, after: RestHeading | None
+) -> tuple[str, str]:
+    """Return what a motion was: ``turn``, or the kind of an event with a detail."""
+    part = slice(move.first, move.last + 1)
+    change = _change_deg(seen, move, before, after)
+    path = np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum()
+    _, _, wander = _centre(seen, move)
+    scale = np.nanmedian(seen.scale)
+    lifted = float(np.nanmax(np.abs(seen.scale[part] / scale - 1.0)))
+    if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)) and _hidden_s(seen, move) + lifted > 0.0:
+        return "handled", f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg"
+    if wander > DRIVEN_MM and path > np.deg2rad(abs(change)) * 4.0 * DRIVEN_MM:
+        return "driven", f"{path:.0f} mm of path, heading changed by {change:.2f} deg"
+    if abs(change) < max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg):
+        return "nudge", f"heading changed by {change:.3f} deg and came to rest"
+    return "turn", ""
+
+
+def _scale_noise(seen: Seen) -> float:
+    """Return the noise of the apparent size from its second differences."""
+    second = np.abs(np.diff(seen.scale, 2))
+    return float(np.nanquantile(second, 0.25) / 0.3186 / np.sqrt(6.0)) if len(second) else 0.0
+
+
+def _hidden_s(seen: Seen, move: Stretch) -> float:
+    """Return the longest gap without sight in a motion, frames on both sides included."""
+    part = slice(max(move.first - 1, 0), move.last + 2)
+    gaps = np.diff(seen.time_s[part])
+    return float(gaps.max(initial=0.0)) if len(gaps) else 0.0
+
+
+def _change_deg(
+    seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None
+) -> float:
+    start = seen.heading_deg[before.after].mean() if before else seen.heading_deg[move.first]
+    end = seen.heading_deg[after.before].mean() if after else seen.heading_deg[move.last]
+    return float(end - start)
+
+
+def _turn(
+    seen: Seen,
+    motion: Motion,
+    move: Stretch,
+    before: RestHeading | None,
+    after: RestHeading | None,
+    cov: FloatArray,
+) -> Turn:
+    part = slice(move.first, move.last + 1)
+    start = float(seen.heading_deg[before.after].mean()) if before else float(seen.heading_deg[move.first])
+    end = float(seen.heading_deg[after.before].mean()) if after else float(seen.heading_deg[move.last])
+    change = end - start
+    flags = _flags(seen, motion, move, before, after)
+    known = before is not None and after is not None
+    u = change_uncertainty(seen.u_heading_deg, seen.left, seen.by_global, before, after, cov) if known else np.nan
+    centre_x, centre_y, wander = _centre(seen, move)
+    overshoot, settle = _settling(seen, motion, part, end, np.sign(change))
+    return Turn(
+        start_s=float(seen.time_s[max(move.first - 1, 0)]),
+        end_s=float(seen.time_s[min(move.last + 1, len(seen.time_s) - 1)]),
+        heading_change_deg=change if known else np.nan,
+        u_heading_change_deg=float(u),
+        start_heading_deg=start if before is not None else np.nan,
+        end_heading_deg=end if after is not None else np.nan,
+        peak_rate_deg_s=float(np.abs(motion.rate_deg_s[part]).max()) * float(np.sign(change)),
+        overshoot_deg=overshoot,
+        settle_s=settle,
+        centre_x_mm=centre_x,
+        centre_y_mm=centre_y,
+        wander_mm=wander,
+        flags=flags,
+    )
+
+
+def _flags(
+    seen: Seen, motion: Motion, move: Stretch, before: RestHeading | None, after: RestHeading | None
+) -> tuple[str, ...]:
+    flags: list[str] = []
+    if before is None or after is None:
+        flags.append("clipped")
+    if _hidden_s(seen, move) > 3.5 * seen.frame_s:
+        flags.append("gap")
+    if _pushes(seen, motion, move) > 1:
+        flags.append("two_pushes")
+    return tuple(flags)
+
+
+def _pushes(seen: Seen, motion: Motion, move: Stretch) -> int:
+    """Return how many separate pushes in the main direction a turn is made of."""
+    part = slice(move.first, move.last + 1)
+    rate = motion.rate_deg_s[part]
+    main = np.sign(seen.heading_deg[move.last] - seen.heading_deg[move.first])
+    strong = rate * main > 0.25 * np.abs(rate).max()
+    weak = rate * main > 0.05 * np.abs(rate).max()
+    pushes = 1
+    for pause in stretches(~weak):
+        inner = strong[: pause.first].any() and strong[pause.last + 1 :].any()
+        pushes += int(inner)
+    return pushes
+
+
+def _settling(
+    seen: Seen, motion: Motion, part: slice, end_deg: float, direction: float
+) -> tuple[float, float]:
+    """Return how far the heading went beyond its resting place, and the time from the main stop to rest."""
+    along = direction * (seen.heading_deg[part] - end_deg)
+    beyond = float(along.max())
+    overshoot = beyond if beyond > 3.0 * max(motion.noise_deg, 1e-4) else 0.0
+    fast = np.flatnonzero(np.abs(motion.rate_deg_s[part]) > 0.1 * np.abs(motion.rate_deg_s[part]).max())
+    times = seen.time_s[part]
+    return max(overshoot, 0.0), float(times[-1] - times[fast[-1]]) if len(fast) else 0.0
+
+
+def _centre(seen: Seen, move: Stretch) -> tuple[float, float, float]:
+    """Return the best fixed centre of a spin on the floor (mm) and how far the motion strays from it (RMS)."""
+    part = slice(max(move.first - 1, 0), move.last + 2)
+    turn = np.deg2rad(seen.heading_deg[part])
+    n_frames = len(turn)
+    c, s = np.cos(turn), np.sin(turn)
+    design = np.zeros((2 * n_frames, 4))  # centre on the floor, and the body point that stays over it
+    design[:n_frames, 0] = design[n_frames:, 1] = 1.0
+    design[:n_frames, 2], design[:n_frames, 3] = c, -s
+    design[n_frames:, 2], design[n_frames:, 3] = s, c
+    data = np.concatenate([seen.x_mm[part], seen.y_mm[part]])
+    if np.ptp(turn) < np.deg2rad(2.0):
+        return np.nan, np.nan, float(np.hypot(np.ptp(seen.x_mm[part]), np.ptp(seen.y_mm[part])))
+    found, *_ = np.linalg.lstsq(design, data, rcond=None)
+    left = data - design @ found
+    return float(found[0]), float(found[1]), float(np.sqrt(2.0 * np.mean(left**2)))
+
+
+def _event(seen: Seen, move: Stretch, kind: str, detail: str) -> Event:
+    return Event(
+        start_s=float(seen.time_s[move.first]), end_s=float(seen.time_s[move.last]), kind=kind, detail=detail
+    )
+
+
+def _gap_events(seen: Seen) -> list[Event]:
+    """Return stretches longer than a few frames in which neither marker was seen."""
+    times = np.concatenate([[0.0], seen.time_s, [seen.end_s]])
+    events = []
+    for before_s, after_s in zip(times[:-1], times[1:], strict=True):
+        if after_s - before_s > 3.5 * seen.frame_s:
+            events.append(
+                Event(
+                    start_s=float(before_s), end_s=float(after_s), kind="hidden",
+                    detail=f"neither marker seen for {after_s - before_s:.2f} s",
+                )
+            )  # fmt: skip
+    return events
+
+
+def _flag_handled(turns: list[Turn], events: list[Event]) -> list[Turn]:
+    """Flag turns that follow a handling: what the wheels' slack was then is not known."""
+    flagged = []
+    last_s = 0.0
+    for turn in turns:
+        touched = any(
+            event.kind in ("handled", "driven") and last_s <= event.end_s <= turn.start_s + 0.05 for event in events
+        )
+        flagged.append(replace(turn, flags=(*turn.flags, "handled_before")) if touched else turn)
+        last_s = turn.end_s
+    return flagged
