@@ -18,6 +18,7 @@ EXIT_WRONG = 2
 EXIT_INTERRUPTED = 130
 
 COMMANDS: dict[str, str] = {
+    "sheets": "Make the sheets to print: robot markers and floor cards in true scale.",
     "measure": "Measure the turns in clips filmed from above.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""

@@ -153,9 +153,9 @@ class _Seen:
 
 
 def _seen(name: str, path: Path, trial: Trial, progress: Progress | None) -> _Seen | Failure:
-    def told(fraction: float) -> None:
+    def told(time_s: float, duration_s: float | None) -> None:
         if progress is not None:
-            progress(name, fraction)
+            progress(name, time_s / duration_s if duration_s else 0.0)
 
     try:
         result = measure_clip(path, trial.marker_setup(), progress=told)

@@ -112,14 +112,14 @@ def fake_pipeline(monkeypatch: pytest.MonkeyPatch) -> Fake:
     outcomes: dict[str, ClipResult | BaseException] = {}
 
     def measure_clip(
-        path: Path, setup: object, *, progress: Callable[[float], None] | None = None
+        path: Path, setup: object, *, progress: Callable[[float, float], None] | None = None
     ) -> ClipResult:
         outcome = outcomes[Path(path).stem]
         if isinstance(outcome, BaseException):
             raise outcome
         if progress is not None:
-            progress(0.5)
-            progress(1.0)
+            progress(5.0, 10.0)
+            progress(10.0, 10.0)
         return outcome
 
     monkeypatch.setattr("floorswing.measuring.measure_clip", measure_clip)
