@@ -19,6 +19,7 @@ EXIT_INTERRUPTED = 130
 
 COMMANDS: dict[str, str] = {
     "sheets": "Make the sheets to print: robot markers and floor cards in true scale.",
+    "new": "Write a trial file, asking for what it needs.",
     "measure": "Measure the turns in clips filmed from above.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""
@@ -56,7 +57,7 @@ class CommandList(click.Group):
         """Run the command; what a user can put right becomes one line and exit code 2."""
         try:
             return super().invoke(ctx)
-        except KeyboardInterrupt:
+        except (KeyboardInterrupt, click.Abort):
             click.echo("Interrupted: nothing was left half-written.", err=True)
             ctx.exit(EXIT_INTERRUPTED)
         except (click.UsageError, click.exceptions.Exit):

@@ -89,7 +89,8 @@ class Keys:
 
     def _required(self, key: str, accepted: str) -> Any:
         if not self.has(key):
-            self.refuse(key, "missing", f"accepted: {accepted}")
+            close = difflib.get_close_matches(key, [name for name in self._table if name != key], n=1)
+            self.refuse(key, f"missing (found {close[0]})" if close else "missing", f"accepted: {accepted}")
         return self._table[key]
 
     def table(self, key: str, *, optional: bool = False) -> Keys:

@@ -15,7 +15,7 @@ from typing import Any
 
 from floorswing.columns import TURN_COLUMNS
 from floorswing.commands_file import MOST_WHEEL_DEG, Commands, read_commands_file
-from floorswing.errors import TrialError, why
+from floorswing.errors import TrialError, one_line, why
 from floorswing.keys import Keys, listed, shown
 from vision.records import MarkerSetup
 
@@ -131,7 +131,25 @@ def read_trial(path: Path | str) -> Trial:
         If anything in it cannot be used; the message names file, key, what was found, what is accepted.
     """
     path = Path(path)
-    top = Keys(path, "", _toml_of(path))
+    return trial_from_text(_text_of(path), path)
+
+
+def trial_from_text(text: str, path: Path) -> Trial:
+    """Return the trial that a text describes.
+
+    Parameters
+    ----------
+    text : str
+        TOML.
+    path : Path
+        The file it comes from or will go to, for the messages and to find a commands file beside it.
+
+    Raises
+    ------
+    TrialError
+        The same as `read_trial`.
+    """
+    top = Keys(path, "", _tables_of(text, path))
     robot, markers, floor, commands = (
         top.table("robot"),
         top.table("markers", optional=True),
@@ -149,20 +167,24 @@ def read_trial(path: Path | str) -> Trial:
     )
 
 
-def _toml_of(path: Path) -> dict[str, Any]:
-    """Return the file's tables; a byte order mark, as some editors leave it, is not held against it."""
+def _text_of(path: Path) -> str:
+    """Return the file's text; a byte order mark, as some editors leave it, is not held against it."""
     try:
-        return tomllib.loads(path.read_text(encoding="utf-8-sig"))
+        return path.read_text(encoding="utf-8-sig")
     except UnicodeDecodeError:
         raise TrialError(path, "", "not UTF-8 text", "a trial file is TOML, saved as UTF-8") from None
-    except tomllib.TOMLDecodeError as error:
-        raise TrialError(
-            path, "", f"not TOML ({error})", "see `floorswing new` for a file to start from"
-        ) from None
-    except RecursionError:
-        raise TrialError(path, "", "nested too deeply", "a trial file has tables of plain keys") from None
     except (OSError, ValueError) as error:
         raise TrialError(path, "", f"cannot be read ({why(error)})", "expected a trial file (TOML)") from None
+
+
+def _tables_of(text: str, path: Path) -> dict[str, Any]:
+    start = "see `floorswing new` for a file to start from"
+    try:
+        return tomllib.loads(text)
+    except RecursionError:
+        raise TrialError(path, "", "nested too deeply", start) from None
+    except ValueError as error:  # also the limit on the digits of a whole number
+        raise TrialError(path, "", f"not TOML ({one_line(error)})", start) from None
 
 
 def _robot(keys: Keys) -> Robot:
