@@ -144,14 +144,13 @@ QUESTIONS = (
     ),
 )
 
-MARKERS_TABLE = f"""\
-[markers]
-# Only needed for prints other than those of `floorswing sheets`.
-# dictionary = "{DEFAULT_DICTIONARY}"   # one of OpenCV's predefined dictionaries
-# fore = {DEFAULT_FORE}                          # id of the marker towards the front
-# aft = {DEFAULT_AFT}                           # id of the marker towards the rear
-# cards = [{DEFAULT_CARDS[0]}, {DEFAULT_CARDS[1]}]                  # first and last id of the floor cards
-"""
+MARKERS = (
+    (f'# dictionary = "{DEFAULT_DICTIONARY}"', "one of OpenCV's predefined dictionaries"),
+    (f"# fore = {DEFAULT_FORE}", "id of the marker towards the front"),
+    (f"# aft = {DEFAULT_AFT}", "id of the marker towards the rear"),
+    (f"# cards = [{DEFAULT_CARDS[0]}, {DEFAULT_CARDS[1]}]", "first and last id of the floor cards"),
+)
+"""The table that can be left out: what is in it by default, and what that is."""
 
 
 def trial_text(answers: Mapping[tuple[str, str], Answer | None]) -> str:
@@ -165,7 +164,10 @@ def trial_text(answers: Mapping[tuple[str, str], Answer | None]) -> str:
     blocks = ["# A trial for Floorswing: lengths in mm, angles in degrees. Edit it as you like.\n"]
     for table in ("robot", "markers", "floor", "commands"):
         if table == "markers":
-            blocks.append(MARKERS_TABLE)
+            head = "[markers]\n# Only needed for prints other than those of `floorswing sheets`."
+            blocks.append(
+                "\n".join([head, *(f"{setting:<32}# {words}" for setting, words in MARKERS)]) + "\n"
+            )
             continue
         lines = [_line(question, answers) for question in QUESTIONS if question.table == table]
         blocks.append("\n".join([f"[{table}]", *lines]) + "\n")
