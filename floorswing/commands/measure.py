@@ -45,7 +45,7 @@ def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as
             progress.clear()
             if isinstance(outcome, Failure):
                 failed.append(outcome)
-                click.echo(f"Error: {outcome.clip}: {_without(outcome.clip, outcome.error)}", err=True)
+                click.echo(f"Error: {about(outcome.clip, outcome.error)}", err=True)
                 continue
             measured.append(outcome)
             _report(outcome, as_json)
@@ -56,16 +56,19 @@ def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as
         raise click.exceptions.Exit(EXIT_WRONG if all_wrong else EXIT_SOME_FAILED)
 
 
-def _without(clip: Path, error: Exception) -> str:
-    """Return the message on one line, without the name of the clip if it begins with it."""
-    return one_line(error).removeprefix(f"{clip}: ")
+def about(clip: Path, message: object) -> str:
+    """Return the message on one line, with the clip's whole path in front and its name only once."""
+    line = one_line(message)
+    for said in (f"{clip}: ", f"{clip.name}: "):
+        line = line.removeprefix(said)
+    return f"{clip}: {line}"
 
 
 def _report(one: Any, as_json: bool) -> None:
     from floorswing.summary import sentence, turns_table
 
     for warning in one.warnings:
-        click.echo(f"Warning: {one.source.path}: {one_line(warning)}", err=True)
+        click.echo(f"Warning: {about(one.source.path, warning)}", err=True)
     if as_json:
         return
     click.echo(turns_table(one.turns))

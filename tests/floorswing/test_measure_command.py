@@ -96,7 +96,7 @@ def test_a_file_that_is_no_clip_is_exit_code_2(
     fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
 ):
     a = clip("a.txt")
-    fake_pipeline(a=ClipError("not a clip"))
+    fake_pipeline(a=ClipError("a.txt: not a clip"))
     result = measure(a, "--trial", trial_file, "--out", out)
     assert result.exit_code == 2
     assert failures(result) == [f"Error: {a}: not a clip"]
