@@ -3,6 +3,31 @@
 The steps of the command line as functions, with the same defaults::
 
     from floorswing import measure
+
+    measurements = measure(["cork.mp4"], "trial.toml", "out")
 """
 
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from floorswing.measuring import measure as measure
+
 __version__ = "0.1.0"
+
+_HOMES = {"measure": "floorswing.measuring"}
+"""Where each public function lives; loaded when first asked for, since some need a second to load."""
+
+__all__ = ["__version__", "measure"]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    return getattr(importlib.import_module(_HOMES[name]), name)
+
+
+def __dir__() -> list[str]:
+    return sorted({*globals(), *_HOMES})

@@ -145,3 +145,11 @@ def test_a_reader_that_goes_away_is_no_traceback():
         assert process.stderr is not None
         process.stdout.close()
         assert b"Traceback" not in process.stderr.read()
+
+
+def test_the_steps_are_functions_of_the_package():
+    for name in floorswing.__all__:
+        assert name in dir(floorswing)
+        assert getattr(floorswing, name) is not None
+    with pytest.raises(AttributeError, match="nonsense"):
+        _ = floorswing.nonsense

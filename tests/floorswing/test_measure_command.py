@@ -9,6 +9,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 
+import floorswing
 from floorswing.cli import cli
 from vision.errors import ClipError, MarkersNotFound
 
@@ -147,3 +148,14 @@ def test_nothing_but_the_result_on_standard_output_when_not_a_terminal(
     result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
     assert "\r" not in result.output
     assert "%|" not in result.output
+
+
+def test_the_function_writes_what_the_command_writes(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path, tmp_path: Path
+):
+    fake_pipeline(a=clip_result(GOOD))
+    path = clip("a.mp4")
+    measure(path, "--trial", trial_file, "--out", out)
+    floorswing.measure(path, trial_file, tmp_path / "again")
+    for file in sorted((out / "a").iterdir()):
+        assert file.read_bytes() == (tmp_path / "again" / "a" / file.name).read_bytes()
