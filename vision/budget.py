@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.bundle import Calibration
-from vision.plane import AFT_SIZE, BASE, LENS, LIFT, SHAPE
+from vision.plane import AFT_SIZE, BASE, LENS, LIFT, PRINT, SHAPE
 from vision.records import Contribution, FloatArray
 from vision.rests import Stretch
 
@@ -103,7 +103,7 @@ def budget_of(seen: Seen, split: Split, calibration: Calibration) -> tuple[Contr
             basis="spread of the 13 redundant corner coordinates, rest by rest",
         )
     ]
-    groups = {"plane map": SHAPE, "lens": LENS, "marker mounting": slice(BASE, AFT_SIZE + 1), "marker heights": LIFT}
+    groups = {"plane map": SHAPE, "lens": LENS, "marker mounting": slice(BASE, AFT_SIZE + 1), "marker heights": LIFT, "marker prints": PRINT}
     for name, places in groups.items():
         part = np.einsum("mi,ij,mj->m", levers[:, places], calibration.cov[places, places], levers[:, places])
         parts.append(

@@ -22,6 +22,8 @@ from vision.plane import (
     FORE_RAD,
     N_GLOBAL,
     NAMES,
+    PRINT,
+    PRINT_NAMES,
     SHAPE,
     Units,
     body_points,
@@ -35,6 +37,9 @@ from vision.rigid import rigid_between
 
 PRIOR_SD = {"k1": 0.15, "k2": 0.03, "aft_size": 0.05, "lift_x": 0.05, "lift_y": 0.05}
 """Standard deviations of the weak priors: lens terms at half a diagonal, size ratio, lift in marker distances."""
+
+PRINT_SD_SIDES = 0.01
+"""The same for the corners' offsets from true squares, in marker sides."""
 
 EVIDENCE_FLOOR = 0.5
 """Narrowest learned prior, in units of what the clip can tell: some doubt must always stay in the covariance."""
@@ -51,9 +56,9 @@ class Calibration:
 
     Parameters
     ----------
-    p : ndarray, shape (13,)
+    p : ndarray, shape (21,)
         Global parameters in the order of `vision.plane.NAMES`.
-    cov : ndarray, shape (13, 13)
+    cov : ndarray, shape (21, 21)
         Their covariance, scaled by the misfit actually found.
     units : Units
     misfit : float
@@ -90,24 +95,25 @@ class Prior:
         return float(self.precision @ (p - self.mean) ** 2)
 
 
-def weak_prior() -> Prior:
+def weak_prior(units: Units) -> Prior:
     """Return the priors that only keep open parameters finite."""
     mean, precision = np.zeros(N_GLOBAL), np.zeros(N_GLOBAL)
     mean[AFT_SIZE] = 1.0
+    precision[PRINT] = (PRINT_SD_SIDES * units.side_mm / units.length_mm) ** -2
     for name, sd in PRIOR_SD.items():
         precision[NAMES.index(name)] = sd**-2
     return Prior(mean, precision)
 
 
-def learned_prior(p: FloatArray, cov: FloatArray) -> Prior:
+def learned_prior(p: FloatArray, cov: FloatArray, units: Units) -> Prior:
     """Return priors as narrow as the clip itself allows (empirical Bayes; Morris 1983).
 
     Whether the aft marker lies higher than the fore one, or is printed larger, is seldom so; where the first
     solution finds nothing beyond its own uncertainty, the parameter is drawn to its mean and costs the heading little.
     """
-    prior = weak_prior()
+    prior = weak_prior(units)
     precision = prior.precision.copy()
-    for group in (("lift_x", "lift_y"), ("aft_size",), ("k2",)):
+    for group in (("lift_x", "lift_y"), ("aft_size",), ("k2",), PRINT_NAMES):
         places = [NAMES.index(name) for name in group]
         square = float(np.mean((p[places] - prior.mean[places]) ** 2))
         noise = float(np.mean(np.diag(cov)[places]))
@@ -133,8 +139,9 @@ def calibrate(track: CornerTrack) -> Calibration:
     corners_px = track.corners_px[chosen].reshape(-1, 16)
     whiten = whitening(track.information[chosen])
     poses = start_poses(corners_px, p, units)
-    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior())
-    prior = learned_prior(p, cov)
+    units = replace(units, home=np.median(poses[:, 1:], axis=0))
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior(units))
+    prior = learned_prior(p, cov, units)
     p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior)
     return Calibration(
         p=p,
@@ -274,10 +281,10 @@ def _cost(
 
 @dataclass(frozen=True, eq=False, slots=True)
 class _Normal:
-    a: FloatArray  # (13, 13)
-    b: FloatArray  # (N, 13, 3)
+    a: FloatArray  # (21, 21)
+    b: FloatArray  # (N, 21, 3)
     c: FloatArray  # (N, 3, 3)
-    g: FloatArray  # (13,)
+    g: FloatArray  # (21,)
     h: FloatArray  # (N, 3)
 
 
@@ -307,7 +314,7 @@ def _with_prior(system: _Normal, p: FloatArray, prior: Prior) -> _Normal:
 
 
 def _schur(system: _Normal, damping: float = 0.0) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return the reduced matrix (13, 13), its right-hand side, and the inverted pose blocks."""
+    """Return the reduced matrix (21, 21), its right-hand side, and the inverted pose blocks."""
     c = system.c + damping * system.c * np.eye(3)
     c_inverse = np.linalg.inv(c)
     lift = system.b @ c_inverse

@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import least_squares, minimize_scalar
+from scipy.optimize import least_squares, minimize, minimize_scalar
 
 from vision.align import CornerFit, fit_corners, homography_from_corners
 from vision.frames import LumaImage
@@ -20,8 +20,11 @@ from vision.records import FloatArray, MarkerSetup
 from vision.rigid import fit_homography, project, rigid, rigid_between
 from vision.template import Optics, Template, build_template
 
-BLUR_RANGE_PX = (0.45, 4.0)
-HALO_TRIALS = ((0.0, 2.0), (0.3, 1.0), (0.6, 1.0), (0.3, 2.0), (0.6, 2.0), (1.0, 2.0), (0.5, 3.5), (1.0, 3.5))
+PROCESSED_STARTS = ((0.0, 0.15, 1.5), (0.0, 0.5, 1.0), (-0.3, 0.4, 1.0), (0.2, 0.0, 1.5), (-0.2, 0.0, 1.5))
+"""Tone, halo and halo radius (px) from which the optics are sought."""
+
+WORTH = 0.98
+"""A rendering with tone curve and halo is kept if it leaves less than this share of what plain blur leaves."""
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -116,7 +119,7 @@ class Pattern:
 def build_pattern(black: NDArray[np.bool_], side_px: float, optics: Optics) -> Pattern:
     """Return both templates of a marker that is about `side_px` large in the picture."""
     soften_px = max(1.2, 0.5 * side_px / black.shape[0])
-    softer = replace(optics, blur_px=float(np.hypot(optics.blur_px, soften_px)), halo=0.0)
+    softer = replace(optics, blur_px=float(np.hypot(optics.blur_px, soften_px)), tone=0.0, halo=0.0)
     return Pattern(
         black=black,
         side_px=side_px,
@@ -183,33 +186,71 @@ def tune_optics(
     corners_px : ndarray, shape (M, 4, 2)
         Aligned under these optics.
     """
-    start = min(1.0, 0.35 * mean_side_px(corners_px[0]) / modules[0].shape[0])
-    optics = Optics(blur_px=start)
-    for _ in range(2):
-        corners_px = _settle_all(image, corners_px, modules, optics)
-        sizes = [mean_side_px(corners) for corners in corners_px]
-        maps = [homography_from_corners(corners) for corners in corners_px]
-
-        def cost(trial: Optics, sizes: list[float] = sizes, maps: list[FloatArray] = maps) -> float:
-            total = 0.0
-            for black, side_px, map_px in zip(modules, sizes, maps, strict=True):
-                fit = fit_corners(image, map_px, build_template(black, side_px=side_px, optics=trial))
-                total += fit.noise_var if fit is not None else 1.0
-            return total
-
-        best = (np.inf, optics)
-        for halo, halo_px in HALO_TRIALS:
-            found = minimize_scalar(
-                lambda blur_px, h=halo, r=halo_px: cost(Optics(blur_px, h, r)),
-                bounds=BLUR_RANGE_PX,
-                method="bounded",
-                options={"maxiter": 9, "xatol": 0.02},
-            )
-            # A halo is believed only if it explains clearly more than plain blur does.
-            if found.fun < best[0] * (1.0 if halo == 0.0 else 0.98):
-                best = (float(found.fun), Optics(float(found.x), halo, halo_px))
-        optics = best[1]
+    optics = Optics(blur_px=min(1.0, 0.35 * mean_side_px(corners_px[0]) / modules[0].shape[0]))
+    corners_px = _settle_all(image, corners_px, modules, optics)
+    optics = _plain_optics(_Rendering(image, corners_px, modules))
+    corners_px = _settle_all(image, corners_px, modules, optics)
+    optics = _best_optics(_Rendering(image, corners_px, modules), optics)
     return optics, _settle_all(image, corners_px, modules, optics)
+
+
+class _Rendering:
+    """How much of the markers' picture some optics leave unexplained, the markers held in place."""
+
+    def __init__(
+        self, image: LumaImage, corners_px: FloatArray, modules: tuple[NDArray[np.bool_], ...]
+    ) -> None:
+        self._image = image
+        self._markers = [
+            (homography_from_corners(corners), black, mean_side_px(corners))
+            for corners, black in zip(corners_px, modules, strict=True)
+        ]
+
+    def left(self, values: FloatArray) -> float:
+        """Return the sum of relative noise variances under (log blur, tone, halo, log halo radius)."""
+        optics = _optics(values)
+        if not (0.35 <= optics.blur_px <= 5.0 and abs(optics.tone) < 0.95 and 0.0 <= optics.halo < 3.0):
+            return 10.0
+        if not 0.5 <= optics.halo_px <= 5.0:
+            return 10.0
+        total = 0.0
+        for map_px, black, side_px in self._markers:
+            fit = fit_corners(self._image, map_px, build_template(black, side_px=side_px, optics=optics))
+            total += fit.noise_var if fit is not None else 1.0
+        return total
+
+
+def _optics(values: FloatArray) -> Optics:
+    return Optics(float(np.exp(values[0])), float(values[1]), float(values[2]), float(np.exp(values[3])))
+
+
+def _plain_optics(rendering: _Rendering) -> Optics:
+    found = minimize_scalar(
+        lambda log_blur: rendering.left(np.array([log_blur, 0.0, 0.0, 0.0])),
+        bounds=(np.log(0.4), np.log(4.0)),
+        method="bounded",
+        options={"maxiter": 12, "xatol": 0.02},
+    )
+    return Optics(float(np.exp(found.x)))
+
+
+def _best_optics(rendering: _Rendering, plain: Optics) -> Optics:
+    """Return the optics that explain most; plain blur unless tone curve and halo explain clearly more."""
+    log_blur = np.log(plain.blur_px)
+    plain_left = rendering.left(np.array([log_blur, 0.0, 0.0, 0.0]))
+    starts = [np.array([log_blur, tone, halo, np.log(radius)]) for tone, halo, radius in PROCESSED_STARTS]
+    lefts = [rendering.left(start) for start in starts]
+    if min(lefts) > plain_left:
+        return plain
+    first = starts[int(np.argmin(lefts))]
+    simplex = first + np.vstack([np.zeros(4), np.diag([0.15, 0.25, 0.3, 0.3])])
+    found = minimize(
+        rendering.left,
+        first,
+        method="Nelder-Mead",
+        options={"maxfev": 70, "xatol": 0.01, "fatol": 1e-6, "initial_simplex": simplex},
+    )
+    return _optics(found.x) if found.fun < WORTH * plain_left else plain
 
 
 def _settle_all(

@@ -21,11 +21,31 @@ from vision.markers import UNIT_CORNERS
 from vision.records import FloatArray
 
 N_SHAPE = 5
-NAMES = ("h0", "h1", "h2", "h3", "h4", "k1", "k2", "base", "fore_rad", "aft_rad", "aft_size", "lift_x", "lift_y")
-"""Global parameters in the order in which vectors hold them; lengths in units of `Frame2D.length_mm`."""
+PRINT_NAMES = tuple(f"{which}_print{k}" for which in ("fore", "aft") for k in range(4))
+NAMES = (
+    *("h0", "h1", "h2", "h3", "h4", "k1", "k2", "base", "fore_rad", "aft_rad", "aft_size", "lift_x", "lift_y"),
+    *PRINT_NAMES,
+)
+"""Global parameters in the order in which vectors hold them; lengths in units of `Units.length_mm`."""
 
 SHAPE, LENS, BASE, FORE_RAD, AFT_RAD, AFT_SIZE, LIFT = slice(0, 5), slice(5, 7), 7, 8, 9, 10, slice(11, 13)
+PRINT = slice(13, 21)
+"""How far each marker's corners are from a true square: prints, glue, and how the camera renders edges."""
+
 N_GLOBAL = len(NAMES)
+
+
+def _print_modes() -> FloatArray:
+    """Return the four ways, shape (4, 4, 2), in which a square's corners move that are not rigid and not a scale."""
+    x, y = UNIT_CORNERS.T
+    shift_x, shift_y = np.array([[1.0, 0.0]] * 4), np.array([[0.0, 1.0]] * 4)
+    rigid = np.stack([shift_x, shift_y, np.stack([-y, x], axis=1), np.stack([x, y], axis=1)])
+    _, _, basis = np.linalg.svd(rigid.reshape(4, 8))
+    modes: FloatArray = basis[4:].reshape(4, 4, 2)
+    return modes
+
+
+PRINT_MODES = _print_modes()
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -42,12 +62,15 @@ class Units:
         Unit of plane coordinates.
     side_mm : float
         Side of the fore marker: what fixes the scale.
+    home : ndarray, shape (2,)
+        Place, in plane units, about which a difference in size of the aft marker acts: where the robot mostly is.
     """
 
     centre_px: FloatArray
     half_px: float
     length_mm: float
     side_mm: float
+    home: FloatArray
 
     @property
     def square(self) -> FloatArray:
@@ -58,7 +81,7 @@ class Units:
 def units_for(image_px: tuple[int, int], *, side_mm: float, length_mm: float) -> Units:
     """Return the units for a picture of (width, height)."""
     centre_px = 0.5 * (np.array(image_px, dtype=np.float64) - 1.0)
-    return Units(centre_px, 0.5 * float(np.hypot(*image_px)), length_mm, side_mm)
+    return Units(centre_px, 0.5 * float(np.hypot(*image_px)), length_mm, side_mm, np.zeros(2))
 
 
 def plane_map(shape: FloatArray) -> FloatArray:
@@ -92,8 +115,9 @@ def shape_from_homography(homography: FloatArray) -> tuple[FloatArray, FloatArra
 def body_points(p: FloatArray, units: Units) -> FloatArray:
     """Return the corners of both markers in the body frame, plane units, shape (2, 4, 2); lift left out."""
     square = units.square
-    fore = _turned(square, p[FORE_RAD]) + np.array([0.5 * p[BASE], 0.0])
-    aft = _turned(square, p[AFT_RAD]) * p[AFT_SIZE] - np.array([0.5 * p[BASE], 0.0])
+    printed = np.einsum("mi,ikj->mkj", p[PRINT].reshape(2, 4), PRINT_MODES)
+    fore = _turned(square + printed[0], p[FORE_RAD]) + np.array([0.5 * p[BASE], 0.0])
+    aft = _turned(square + printed[1], p[AFT_RAD]) * p[AFT_SIZE] - np.array([0.5 * p[BASE], 0.0])
     return np.stack([fore, aft])
 
 
@@ -140,7 +164,7 @@ class Projection:
     ----------
     corners_px : ndarray, shape (N, 16)
         Fore then aft, x and y in turn.
-    by_global : ndarray, shape (N, 16, 13)
+    by_global : ndarray, shape (N, 16, 21)
     by_pose : ndarray, shape (N, 16, 3)
     """
 
@@ -154,7 +178,7 @@ def project_pair(p: FloatArray, poses: FloatArray, units: Units) -> Projection:
 
     Parameters
     ----------
-    p : ndarray, shape (13,)
+    p : ndarray, shape (21,)
     poses : ndarray, shape (N, 3)
         Turn (rad, y down), x and y in plane units.
     units : Units
@@ -167,12 +191,13 @@ def project_pair(p: FloatArray, poses: FloatArray, units: Units) -> Projection:
     around = np.einsum("nij,mkj->nmki", turn, local)
     points = around + poses[:, None, None, 1:]
     growth = p[AFT_SIZE] - 1.0
-    points[:, 1] += growth * poses[:, None, 1:] - p[LIFT]
+    away = poses[:, 1:] - units.home
+    points[:, 1] += growth * away[:, None] - p[LIFT]
 
-    to_points = np.zeros((n_frames, 2, 4, 2, N_GLOBAL - 7))  # by base, angles, size, lift
-    for column, slope in enumerate(local_slopes):
-        to_points[..., column] = np.einsum("nij,mkj->nmki", turn, slope)
-    to_points[:, 1, :, :, AFT_SIZE - 7] += poses[:, None, 1:]
+    to_points = np.zeros((n_frames, 2, 4, 2, N_GLOBAL - 7))  # by base, angles, size, lift, print
+    for place, slope in local_slopes.items():
+        to_points[..., place - 7] = np.einsum("nij,mkj->nmki", turn, slope)
+    to_points[:, 1, :, :, AFT_SIZE - 7] += away[:, None]
     to_points[:, 1, :, 0, LIFT.start - 7] = -1.0
     to_points[:, 1, :, 1, LIFT.start - 6] = -1.0
     by_pose_points = np.zeros((n_frames, 2, 4, 2, 3))
@@ -190,19 +215,22 @@ def project_pair(p: FloatArray, poses: FloatArray, units: Units) -> Projection:
     )
 
 
-def _body_with_slopes(p: FloatArray, units: Units) -> tuple[FloatArray, tuple[FloatArray, ...]]:
-    """Return body points and their derivatives by base, fore angle, aft angle and aft size."""
-    local = body_points(p, units)
-    square, nothing = units.square, np.zeros((4, 2))
+def _body_with_slopes(p: FloatArray, units: Units) -> tuple[FloatArray, dict[int, FloatArray]]:
+    """Return body points and their derivatives by the parameters that shape the body, by place in `p`."""
+    local, nothing = body_points(p, units), np.zeros((4, 2))
     half = np.full((4, 2), (0.5, 0.0))
-    turned_fore = _turned(square, p[FORE_RAD] + 0.5 * np.pi)
-    turned_aft = _turned(square, p[AFT_RAD] + 0.5 * np.pi) * p[AFT_SIZE]
-    return local, (
-        np.stack([half, -half]),
-        np.stack([turned_fore, nothing]),
-        np.stack([nothing, turned_aft]),
-        np.stack([nothing, _turned(square, p[AFT_RAD])]),
-    )
+    fore, aft = local[0] - p[BASE] * half, (local[1] + p[BASE] * half) / p[AFT_SIZE]
+    quarter = 0.5 * np.pi
+    slopes = {
+        BASE: np.stack([half, -half]),
+        FORE_RAD: np.stack([_turned(fore, quarter), nothing]),
+        AFT_RAD: np.stack([nothing, _turned(aft, quarter) * p[AFT_SIZE]]),
+        AFT_SIZE: np.stack([nothing, aft]),
+    }
+    for k, mode in enumerate(PRINT_MODES):
+        slopes[PRINT.start + k] = np.stack([_turned(mode, p[FORE_RAD]), nothing])
+        slopes[PRINT.start + 4 + k] = np.stack([nothing, _turned(mode, p[AFT_RAD]) * p[AFT_SIZE]])
+    return local, slopes
 
 
 def _through_camera(p: FloatArray, points: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:

@@ -27,7 +27,7 @@ class Poses:
     x_mm, y_mm : ndarray, shape (N,)
     u_heading_rad : ndarray, shape (N,)
         From the sensor noise of the frame alone.
-    by_global : ndarray, shape (N, 13)
+    by_global : ndarray, shape (N, 21)
         Derivative of the heading (rad) by the calibration's parameters.
     left : ndarray, shape (N, 16)
         Corner residuals in units of their own noise, uncorrelated; NaN for a marker not seen.

@@ -138,7 +138,7 @@ def _plane_record(
             "aft_marker_lift_mm": [float(v * units.length_mm) for v in p[LIFT]],
             "u_aft_marker_lift_mm": [float(v * units.length_mm) for v in u[LIFT]],
         },
-        "picture": {"blur_px": corners.optics.blur_px, "halo": corners.optics.halo,
+        "picture": {"blur_px": corners.optics.blur_px, "tone": corners.optics.tone, "halo": corners.optics.halo,
                     "halo_px": corners.optics.halo_px, "exposure_s": corners.exposure_s},
         "cards": [_card_record(card, setup) for card in cards],
     }  # fmt: skip

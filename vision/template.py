@@ -1,14 +1,15 @@
 """A printed marker as a camera sees it: grey values and their slopes, blurred, ready to be sampled.
 
 A marker is a sum of black squares, so its picture under a Gaussian point spread is a product of sums of error
-functions along the two axes: exact at any point, slopes included. Sharpening inside the camera adds a halo; it is
-modelled as the unsharp mask that cameras use, a difference of two such pictures.
+functions along the two axes: exact at any point, slopes included. Inside the camera a tone curve bends the greys of
+edges to one side, and sharpening adds a halo, an unsharp mask; both act after the blur, in this order.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 
+import cv2
 import numpy as np
 from numpy.typing import NDArray
 from scipy.special import ndtr
@@ -27,6 +28,8 @@ class Optics:
     ----------
     blur_px : float
         Standard deviation of the point spread, pixel box included, in image pixels.
+    tone : float
+        Bend of the tone curve: grey g between black (0) and white (1) is shown as ``g + tone * g * (1 - g)``.
     halo : float
         Strength of the unsharp mask; 0 for none.
     halo_px : float
@@ -34,6 +37,7 @@ class Optics:
     """
 
     blur_px: float
+    tone: float = 0.0
     halo: float = 0.0
     halo_px: float = 2.0
 
@@ -71,18 +75,24 @@ def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) 
     per_side = int(np.clip(3.0 * side_px, 12 * n_modules, 24 * n_modules))
     n_samples = int(np.ceil((1.0 + 2.0 * quiet) * per_side))
     unit = (np.arange(n_samples) + 0.5) / per_side - (0.5 + quiet)
-    picture, slope_x, slope_y = _blurred(black, unit, optics.blur_px / side_px)
-    if optics.halo:
-        wide = float(np.hypot(optics.blur_px, optics.halo_px)) / side_px
-        far, far_x, far_y = _blurred(black, unit, wide)
-        picture, slope_x, slope_y = (
-            (1.0 + optics.halo) * near - optics.halo * away
-            for near, away in ((picture, far), (slope_x, far_x), (slope_y, far_y))
-        )
-    channels = np.stack([picture, slope_x, slope_y, np.ones_like(picture)], axis=-1).astype(np.float32)
+    layers = np.stack([*_blurred(black, unit, optics.blur_px / side_px), np.ones((n_samples, n_samples))], axis=-1)
+    channels = _processed(layers.astype(np.float32), optics, samples_per_px=per_side / side_px)
     offset = (0.5 + quiet) * per_side - 0.5
     sample_from_unit = np.array([[per_side, 0.0, offset], [0.0, per_side, offset], [0.0, 0.0, 1.0]])
     return Template(channels, sample_from_unit, np.linalg.inv(sample_from_unit))
+
+
+def _processed(layers: NDArray[np.float32], optics: Optics, *, samples_per_px: float) -> NDArray[np.float32]:
+    """Apply tone curve and halo to a picture and its slopes; the last layer (validity) is left alone."""
+    if optics.tone:
+        grey = layers[..., 0].copy()
+        layers[..., 1:3] *= (1.0 + optics.tone * (1.0 - 2.0 * grey))[..., None]
+        layers[..., 0] += optics.tone * grey * (1.0 - grey)
+    if optics.halo:
+        seen = np.ascontiguousarray(layers[..., :3])
+        wide = cv2.GaussianBlur(seen, (0, 0), optics.halo_px * samples_per_px, borderType=cv2.BORDER_REPLICATE)
+        layers[..., :3] = seen + optics.halo * (seen - wide)
+    return layers
 
 
 def _blurred(

@@ -24,6 +24,10 @@ from vision.rests import (
 LONGEST_REST_S = 2.0
 """Only this much of a rest, next to the turn, is averaged: the camera may sink over longer times."""
 
+CODING_LAG_S = 0.4
+LAG_SHARE = 0.5
+"""A coded picture settles only some time after the motion has stopped; that much of a rest is passed over."""
+
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
 
@@ -43,7 +47,7 @@ class Seen:
         Heading unwrapped.
     u_heading_deg : ndarray, shape (N,)
         Noise of the single frame.
-    by_global : ndarray, shape (N, 13)
+    by_global : ndarray, shape (N, 21)
         Derivative of the heading (deg) by the calibration.
     left : ndarray, shape (N, 16)
         Whitened corner residuals, NaN for a marker not seen.
@@ -114,7 +118,7 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
     Parameters
     ----------
     seen : Seen
-    cov : ndarray, shape (13, 13)
+    cov : ndarray, shape (21, 21)
         Covariance of the calibration.
     """
     motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm)
@@ -166,13 +170,21 @@ def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) 
     still = Stretch(first, last)
     if seen.time_s[last] - seen.time_s[first] < 0.5 * SHORTEST_REST_S:
         return None
-    return RestHeading(still=still, before=_side(seen, still, late=False), after=_side(seen, still, late=True))
+    return RestHeading(
+        still=still,
+        before=_side(seen, still, late=False, from_start=from_start),
+        after=_side(seen, still, late=True, from_start=from_start),
+    )
 
 
-def _side(seen: Seen, still: Stretch, *, late: bool) -> NDArray[np.intp]:
+def _side(seen: Seen, still: Stretch, *, late: bool, from_start: bool) -> NDArray[np.intp]:
     """Return the frames of a rest to average for the turn before it (early) or after it (late)."""
     frames = np.arange(still.first, still.last + 1)
     times = seen.time_s[frames]
+    since_s = times - times[0]
+    if not from_start:
+        frames = frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
+        times = seen.time_s[frames]
     near = times >= times[-1] - LONGEST_REST_S if late else times <= times[0] + LONGEST_REST_S
     return frames[near]
 
