@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -31,7 +32,18 @@ LAG_SHARE = 0.5
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
 
-LIFT_SHARE = 0.012
+GAP_FRAMES = 3.5
+"""A longer stretch without sight, in frame intervals, is a gap and is reported."""
+
+MOVED_MM = 1.5
+"""A change of place over a gap beyond this means that the robot was moved meanwhile."""
+
+FASTER = 1.5
+"""In a gap the robot may have turned by this much faster than anywhere in the clip."""
+
+FRAMES_TO_BELIEVE = 3
+
+LIFT_SHARE = 0.005
 """A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
 
 
@@ -122,7 +134,7 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
         Covariance of the calibration.
     """
     motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm)
-    moving = bridge_pauses(motion.moving, seen.time_s)
+    moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
     moves = stretches(moving)
     rests = _rests_around(seen, moves)
     turns: list[Turn] = []
@@ -146,6 +158,17 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
         rests=kept,
         motion=motion,
     )
+
+
+def _jumped(seen: Seen, motion: Motion) -> NDArray[np.bool_]:
+    """Return the frames on both sides of a gap in sight over which the robot turned or went somewhere."""
+    jumped = np.zeros(len(seen.time_s), dtype=bool)
+    for k in np.flatnonzero(np.diff(seen.time_s) > GAP_FRAMES * seen.frame_s):
+        turned_deg = abs(seen.heading_deg[k + 1] - seen.heading_deg[k])
+        went_mm = np.hypot(seen.x_mm[k + 1] - seen.x_mm[k], seen.y_mm[k + 1] - seen.y_mm[k])
+        if turned_deg > max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg) or went_mm > MOVED_MM:
+            jumped[k : k + 2] = True
+    return jumped
 
 
 def _rests_around(seen: Seen, moves: list[Stretch]) -> list[RestHeading | None]:
@@ -193,19 +216,31 @@ def _judge(
     seen: Seen, motion: Motion, move: Stretch, before: RestHeading | None, after: RestHeading | None
 ) -> tuple[str, str]:
     """Return what a motion was: ``turn``, or the kind of an event with a detail."""
-    part = slice(move.first, move.last + 1)
     change = _change_deg(seen, move, before, after)
-    path = np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum()
-    _, _, wander = _centre(seen, move)
-    scale = np.nanmedian(seen.scale)
-    lifted = float(np.nanmax(np.abs(seen.scale[part] / scale - 1.0)))
-    if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)) and _hidden_s(seen, move) + lifted > 0.0:
+    part = slice(move.first, move.last + 1)
+    path_mm = float(np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum())
+    _, _, wander_mm = _centre(seen, move)
+    swell = np.sort(np.abs(seen.scale[part] / np.nanmedian(seen.scale) - 1.0))
+    lifted = float(swell[-min(FRAMES_TO_BELIEVE, len(swell))])
+    if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)):
         return "handled", f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg"
-    if wander > DRIVEN_MM and path > np.deg2rad(abs(change)) * 4.0 * DRIVEN_MM:
-        return "driven", f"{path:.0f} mm of path, heading changed by {change:.2f} deg"
+    hidden_s = _hidden_s(seen, move)
+    if hidden_s * FASTER * _top_rate(motion) > 180.0 and hidden_s > GAP_FRAMES * seen.frame_s:
+        return "handled", (
+            f"out of sight for {hidden_s:.2f} s while it moved; heading changed by {change:.2f} deg, or by whole "
+            "revolutions more or less"
+        )
+    if wander_mm > DRIVEN_MM and path_mm > np.deg2rad(abs(change)) * 4.0 * DRIVEN_MM:
+        return "driven", f"{path_mm:.0f} mm of path, heading changed by {change:.2f} deg"
     if abs(change) < max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg):
         return "nudge", f"heading changed by {change:.3f} deg and came to rest"
     return "turn", ""
+
+
+def _top_rate(motion: Motion) -> float:
+    """Return the fastest rotation of the clip, a few outliers left out (deg/s)."""
+    rates = np.abs(motion.rate_deg_s[motion.moving])
+    return float(np.quantile(rates, 0.95)) if len(rates) else 0.0
 
 
 def _scale_noise(seen: Seen) -> float:
@@ -269,7 +304,7 @@ def _flags(
     flags: list[str] = []
     if before is None or after is None:
         flags.append("clipped")
-    if _hidden_s(seen, move) > 3.5 * seen.frame_s:
+    if _hidden_s(seen, move) > GAP_FRAMES * seen.frame_s:
         flags.append("gap")
     if _pushes(seen, motion, move) > 1:
         flags.append("two_pushes")
@@ -330,8 +365,8 @@ def _gap_events(seen: Seen) -> list[Event]:
     """Return stretches longer than a few frames in which neither marker was seen."""
     times = np.concatenate([[0.0], seen.time_s, [seen.end_s]])
     events = []
-    for before_s, after_s in zip(times[:-1], times[1:], strict=True):
-        if after_s - before_s > 3.5 * seen.frame_s:
+    for before_s, after_s in itertools.pairwise(times):
+        if after_s - before_s > GAP_FRAMES * seen.frame_s:
             events.append(
                 Event(
                     start_s=float(before_s), end_s=float(after_s), kind="hidden",
@@ -341,13 +376,16 @@ def _gap_events(seen: Seen) -> list[Event]:
     return events
 
 
+SLACK_LOST = ("handled", "driven", "nudge")
+
+
 def _flag_handled(turns: list[Turn], events: list[Event]) -> list[Turn]:
     """Flag turns that follow a handling: what the wheels' slack was then is not known."""
     flagged = []
     last_s = 0.0
     for turn in turns:
         touched = any(
-            event.kind in ("handled", "driven") and last_s <= event.end_s <= turn.start_s + 0.05 for event in events
+            event.kind in SLACK_LOST and last_s <= event.end_s <= turn.start_s + 0.05 for event in events
         )
         flagged.append(replace(turn, flags=(*turn.flags, "handled_before")) if touched else turn)
         last_s = turn.end_s
