@@ -5,11 +5,11 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from pathlib import Path
 
-from vision.bundle import calibrate
 from vision.frames import Clip, Frame
 from vision.poses import solve_poses
 from vision.records import ClipResult, MarkerSetup
 from vision.result import assemble
+from vision.steady import calibrate_steadied, camera_path
 from vision.track import track_pair
 from vision.turns import split_turns, usable_frames
 
@@ -34,11 +34,12 @@ def measure_clip(path: str | Path, setup: MarkerSetup, *, progress: Progress | N
     with Clip(path) as clip:
         corners = track_pair(_reported(clip, progress), setup)
         info, problems = clip.info, tuple(clip.problems)
-    calibration = calibrate(corners)
+    path_seen = camera_path(corners)
+    corners, calibration = calibrate_steadied(corners, path_seen)
     poses = solve_poses(corners, calibration)
     seen = usable_frames(corners, poses)
     split = split_turns(seen, calibration.cov)
-    return assemble(info, setup, corners, calibration, seen, split, problems)
+    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems)
 
 
 def _reported(clip: Clip, progress: Progress | None) -> Iterator[Frame]:

@@ -66,27 +66,3 @@ def check_cards(looks: list[CardLook], calibration: Calibration) -> list[CardChe
             )
         )
     return checks
-
-
-def camera_moves(looks: list[CardLook]) -> list[tuple[float, float, float]]:
-    """Return (from_s, to_s, shift_px) of moments at which all cards moved together.
-
-    A shift counts when the median over the cards' corners is beyond their noise and beyond what coding does to a
-    still picture, both taken from the clip itself.
-    """
-    times = sorted({look.time_s for look in looks})
-    by_time = {t: {look.card_id: look for look in looks if look.time_s == t} for t in times}
-    steps = []
-    for before_s, after_s in zip(times[:-1], times[1:], strict=True):
-        common = by_time[before_s].keys() & by_time[after_s].keys()
-        if not common:
-            continue
-        shifts = np.stack([by_time[after_s][c].corners_px - by_time[before_s][c].corners_px for c in common])
-        noise = np.median([by_time[after_s][c].u_px for c in common])
-        steps.append((before_s, after_s, float(np.hypot(*np.median(shifts.reshape(-1, 2), axis=0))), noise))
-    if not steps:
-        return []
-    usual = float(np.median([step[2] for step in steps]))
-    return [(a, b, shift) for a, b, shift, noise in steps if shift > max(8.0 * usual, 8.0 * noise, 0.05)]
-
-

@@ -11,7 +11,15 @@ from vision.pair import mean_side_px, settle_corners
 from vision.records import FloatArray, MarkerSetup
 from vision.template import Optics, Template, build_template
 
-LOOK_EVERY_S = 0.5
+LOOK_EVERY_S = 0.25
+"""How often the cards are looked at while the camera stands still."""
+
+CALM_S = 0.6
+"""A camera that has stood still for so long is believed to stand; until then the cards are looked at in every frame."""
+
+STIR_PX = 0.1
+"""A common shift of the cards beyond this, and beyond their noise, means that the camera moves."""
+
 HOLD = 0.6
 
 
@@ -23,6 +31,9 @@ class CardWatcher:
         self._known: dict[int, tuple[FloatArray, Template]] = {}
         self._optics = Optics(1.0)
         self._next_s = 0.0
+        self._stirred_s = 0.0
+        self._seen_s = -1.0
+        self._calm: dict[int, FloatArray] = {}
         self.looks: list[CardLook] = []
         self.twice: set[int] = set()
 
@@ -35,7 +46,8 @@ class CardWatcher:
         for item in found:
             if item.marker_id in wanted and item.marker_id not in self.twice:
                 self._take_up(frame, item)
-        self._next_s = frame.time_s + LOOK_EVERY_S
+        self._stirred_s = frame.time_s
+        self._calm = {card_id: corners_px for card_id, (corners_px, _) in self._known.items()}
 
     def _take_up(self, frame: Frame, item: Detection) -> None:
         black = printed_modules(self._setup.dictionary, item.marker_id)
@@ -47,10 +59,10 @@ class CardWatcher:
         self._note(item.marker_id, frame.time_s, settled[0], settled[1].information, settled[1].noise_var)
 
     def look(self, frame: Frame) -> None:
-        """Measure the cards again if it is time."""
-        if frame.time_s < self._next_s or not self._known:
+        """Measure the cards again if it is time: in every frame while the camera moves, else now and then."""
+        if frame.time_s < self._next_s or not self._known or self._seen_s == frame.time_s:
             return
-        self._next_s = frame.time_s + LOOK_EVERY_S
+        self._seen_s = frame.time_s
         for card_id, (corners_px, template) in list(self._known.items()):
             settled = settle_corners(frame.luma, corners_px, template)
             if settled is None or settled[1].explained < HOLD:
@@ -59,6 +71,18 @@ class CardWatcher:
                 continue
             self._known[card_id] = (settled[0], template)
             self._note(card_id, frame.time_s, settled[0], settled[1].information, settled[1].noise_var)
+        self._watch(frame.time_s)
+
+    def _watch(self, time_s: float) -> None:
+        """Decide how soon to look again, from how far the cards have shifted since the camera last stood still."""
+        shifts = [self._known[card_id][0] - before for card_id, before in self._calm.items()]
+        moved_px = float(np.hypot(*np.median(np.concatenate(shifts), axis=0))) if shifts else 0.0
+        noise_px = float(np.median([look.u_px for look in self.looks[-len(self._known) :]]))
+        if moved_px > max(STIR_PX, 4.0 * noise_px):
+            self._stirred_s = time_s
+            self._calm = {card_id: corners_px for card_id, (corners_px, _) in self._known.items()}
+        if time_s - self._stirred_s > CALM_S:
+            self._next_s = time_s + LOOK_EVERY_S
 
     def _find_again(self, frame: Frame, card_id: int, corners_px: FloatArray, template: Template):  # type: ignore[no-untyped-def]
         low, high = corners_px.min(axis=0), corners_px.max(axis=0)

@@ -12,6 +12,9 @@ from vision.records import FloatArray
 SLOPE_WINDOW_S = 0.08
 """Half the stretch over which a rate is estimated."""
 
+POSSIBLY, SURELY = 5.0, 10.0
+"""A speed beyond so many standard deviations of its still level may be, and surely is, a motion."""
+
 SHORTEST_REST_S = 0.2
 """A shorter stillness is a pause within one turn."""
 
@@ -50,29 +53,33 @@ class Motion:
     noise_deg: float
 
 
-def find_motion(time_s: FloatArray, heading_deg: FloatArray, x_mm: FloatArray, y_mm: FloatArray) -> Motion:
+def find_motion(
+    time_s: FloatArray, heading_deg: FloatArray, x_mm: FloatArray, y_mm: FloatArray, *, reach_mm: float
+) -> Motion:
     """Tell motion from rest.
 
     Parameters
     ----------
     time_s, heading_deg, x_mm, y_mm : ndarray, shape (N,)
         Seen frames only; heading unwrapped.
+    reach_mm : float
+        Distance of the markers from the middle of the pair: makes a rotation comparable with a shift.
     """
-    rate, n_window = _slope(time_s, heading_deg)
-    speed_x, _ = _slope(time_s, x_mm)
-    speed_y, _ = _slope(time_s, y_mm)
-    speed = np.hypot(speed_x, speed_y)
+    rate = _slope(time_s, heading_deg)
+    speed = np.hypot(_slope(time_s, x_mm), _slope(time_s, y_mm))
     noise_deg = _still_noise(heading_deg)
-    turning = _significant(np.abs(rate), _still_level(np.abs(rate)), share=0.01, sure_share=0.06)
-    sliding = _significant(speed, _still_level(speed), share=0.02, sure_share=0.1)
+    swept_mm_s = np.abs(np.deg2rad(rate)) * reach_mm
+    top_mm_s = max(_top(swept_mm_s), _top(speed))
+    turning = _significant(swept_mm_s, top_mm_s)
+    sliding = _significant(speed, top_mm_s)
     return Motion(rate_deg_s=rate, speed_mm_s=speed, moving=turning | sliding, noise_deg=noise_deg)
 
 
-def _slope(time_s: FloatArray, value: FloatArray) -> tuple[FloatArray, int]:
-    """Return the least-squares slope about each frame over a window of equal time, and its usual frame count."""
+def _slope(time_s: FloatArray, value: FloatArray) -> FloatArray:
+    """Return the least-squares slope about each frame over a window of equal time."""
     n_frames = len(time_s)
     if n_frames < 3:
-        return np.zeros(n_frames), n_frames
+        return np.zeros(n_frames)
     first = np.searchsorted(time_s, time_s - SLOPE_WINDOW_S - 1e-9)
     last = np.searchsorted(time_s, time_s + SLOPE_WINDOW_S + 1e-9) - 1
     first = np.maximum(np.minimum(first, np.arange(n_frames) - 1), 0)
@@ -87,7 +94,7 @@ def _slope(time_s: FloatArray, value: FloatArray) -> tuple[FloatArray, int]:
     st, sv = window_sum(t), window_sum(v)
     above = window_sum(t * v) - st * sv / n
     below = window_sum(t * t) - st * st / n
-    return np.where(below > 1e-12, above / np.maximum(below, 1e-12), 0.0), int(np.median(n))
+    return np.where(below > 1e-12, above / np.maximum(below, 1e-12), 0.0)
 
 
 def _still_noise(heading_deg: FloatArray) -> float:
@@ -106,11 +113,16 @@ def _still_level(size: FloatArray) -> float:
     return float(np.quantile(size, 0.2) / 0.2533)  # |normal| has its first fifth below 0.2533 sd
 
 
-def _significant(size: FloatArray, still: float, *, share: float, sure_share: float) -> NDArray[np.bool_]:
-    """Return where `size` is above the still level, in stretches that somewhere are surely above it."""
-    fast = size[size > 10.0 * still]
-    top = float(np.quantile(fast, 0.75)) if len(fast) else 0.0
-    low, high = max(5.0 * still, share * top), max(10.0 * still, sure_share * top)
+def _top(size: FloatArray) -> float:
+    """Return what the faster motions of the clip reach, outliers left out."""
+    fast = size[size > SURELY * _still_level(size)]
+    return float(np.quantile(fast, 0.75)) if len(fast) else 0.0
+
+
+def _significant(size: FloatArray, top: float) -> NDArray[np.bool_]:
+    """Return where a speed is above its still level, in stretches that somewhere are surely above it."""
+    still = _still_level(size)
+    low, high = max(POSSIBLY * still, 0.01 * top), max(SURELY * still, 0.06 * top)
     above = size > low
     keep = np.zeros(len(size), dtype=bool)
     for stretch in stretches(above):

@@ -8,14 +8,18 @@ import numpy as np
 
 from vision.budget import budget_of
 from vision.bundle import Calibration
-from vision.card_check import CardCheck, camera_moves, check_cards
+from vision.card_check import CardCheck, check_cards
 from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
 from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
+from vision.steady import CameraPath
 from vision.turns import Seen, Split
 
 OUT_OF_SQUARE = 0.02
 """A card whose corners miss a square by more than this share of its side is curled or lies uneven."""
+
+ILL_FITTING_PX = 0.35
+"""Corners that miss the rigid pair by more than this show that something was not rigid, not flat or not still."""
 
 LITTLE_TURNED_DEG = 80.0
 """With less rotation in the clip the plane is weakly known, and the result says so."""
@@ -28,14 +32,14 @@ def assemble(
     calibration: Calibration,
     seen: Seen,
     split: Split,
+    path: CameraPath,
     problems: tuple[str, ...],
 ) -> ClipResult:
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
     frame = _floor_frame(cards)
-    moves = camera_moves(list(corners.looks))
-    events = (*split.events, *(_moved(*move) for move in moves))
-    turns = tuple(_placed(_touched(turn, moves), frame) for turn in split.turns)
+    events = (*split.events, *_moved(path))
+    turns = tuple(_placed(_touched(turn, path), frame) for turn in split.turns)
     return ClipResult(
         clip=info,
         track=_pose_track(corners, seen, split, frame),
@@ -43,7 +47,7 @@ def assemble(
         events=tuple(sorted(events, key=lambda event: event.start_s)),
         plane=_plane_record(corners, calibration, cards, setup),
         budget=budget_of(seen, split, calibration),
-        warnings=(*problems, *_warnings(calibration, cards, moves, setup)),
+        warnings=(*problems, *_warnings(calibration, cards, path)),
     )
 
 
@@ -76,18 +80,29 @@ def _placed(turn: Turn, frame: FloorFrame) -> Turn:
     )
 
 
-def _touched(turn: Turn, moves: list[tuple[float, float, float]]) -> Turn:
-    hit = any(start_s <= turn.end_s + 2.0 and end_s >= turn.start_s - 2.0 for start_s, end_s, _ in moves)
+def _touched(turn: Turn, path: CameraPath) -> Turn:
+    """Flag a turn during which a camera that otherwise stands was knocked."""
+    if path.still or _held_by_hand(path):
+        return turn
+    hit = any(start_s <= turn.end_s and end_s >= turn.start_s for start_s, end_s in path.spans)
     return replace(turn, flags=(*turn.flags, "camera_moved")) if hit else turn
 
 
-def _moved(start_s: float, end_s: float, shift_px: float) -> Event:
-    return Event(
-        start_s=start_s,
-        end_s=end_s,
-        kind="camera moved",
-        detail=f"the floor cards shifted by {shift_px:.2f} px in the picture",
-    )
+def _held_by_hand(path: CameraPath) -> bool:
+    """Return whether the camera moved most of the time."""
+    if not path.spans:
+        return False
+    moved_s = sum(end_s - start_s for start_s, end_s in path.spans)
+    return moved_s > 0.5 * (path.spans[-1][1] - min(path.spans[0][0], 0.0))
+
+
+def _moved(path: CameraPath) -> list[Event]:
+    if path.still:
+        return []
+    detail = f"the floor cards shifted by up to {path.shift_px:.1f} px; {path.n_cards} cards hold the view steady"
+    return [
+        Event(start_s=start_s, end_s=end_s, kind="camera moved", detail=detail) for start_s, end_s in path.spans
+    ]
 
 
 def _pose_track(corners: CornerTrack, seen: Seen, split: Split, frame: FloorFrame) -> PoseTrack:
@@ -156,12 +171,7 @@ def _card_record(card: CardCheck, setup: MarkerSetup) -> dict[str, object]:
     return record
 
 
-def _warnings(
-    calibration: Calibration,
-    cards: list[CardCheck],
-    moves: list[tuple[float, float, float]],
-    setup: MarkerSetup,
-) -> list[str]:
+def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath) -> list[str]:
     said: list[str] = []
     turned_deg = float(np.degrees(calibration.turned_rad))
     if turned_deg < LITTLE_TURNED_DEG:
@@ -169,14 +179,28 @@ def _warnings(
             f"the robot's headings cover only {turned_deg:.0f} deg, so the floor plane is weakly known; let it turn "
             "through 90 deg or more in the clip"
         )
+    if calibration.residual_px > ILL_FITTING_PX:
+        said.append(
+            f"the markers' corners miss a rigid pair on one plane by {calibration.residual_px:.2f} px: the camera "
+            "moved (floor cards in view would hold it steady), a marker is loose, or the deck rocks"
+        )
     for card in cards:
-        if card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm:
+        if path.still and card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm:
             said.append(
                 f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off); is it "
                 "curled, or not lying on the floor?"
             )
     said.extend(
-        f"the camera moved between {start_s:.1f} s and {end_s:.1f} s; turns near it are flagged"
-        for start_s, end_s, _ in moves
+        f"card {number} did not stay with the others and was left out; was it moved, or is it curled?"
+        for number in path.strays
     )
+    if not path.still and path.n_cards < 2:
+        said.append("the camera moved and only one floor card holds the view; lay out three or more")
+    if not path.still and _held_by_hand(path):
+        said.append(f"the camera was not still; {path.n_cards} floor cards held the view steady")
+    elif not path.still:
+        said.extend(
+            f"the camera moved between {start_s:.1f} s and {end_s:.1f} s; before and after have maps of their own"
+            for start_s, end_s in path.spans
+        )
     return said

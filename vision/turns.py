@@ -63,6 +63,8 @@ class Seen:
         Derivative of the heading (deg) by the calibration.
     left : ndarray, shape (N, 16)
         Whitened corner residuals, NaN for a marker not seen.
+    reach_mm : float
+        Distance of the markers from the middle of the pair.
     end_s : float
         Time of the last frame of the clip, seen or not.
     frame_s : float
@@ -79,6 +81,7 @@ class Seen:
     u_heading_deg: FloatArray
     by_global: FloatArray
     left: FloatArray
+    reach_mm: float
     end_s: float
     frame_s: float
 
@@ -103,6 +106,7 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
         u_heading_deg=np.degrees(poses.u_heading_rad[known]),
         by_global=np.degrees(poses.by_global[known]),
         left=poses.left[known],
+        reach_mm=0.5 * corners.body.base_mm,
         end_s=float(corners.time_s[-1]),
         frame_s=frame_s,
     )
@@ -133,7 +137,7 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
     cov : ndarray, shape (21, 21)
         Covariance of the calibration.
     """
-    motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm)
+    motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm, reach_mm=seen.reach_mm)
     moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
     moves = stretches(moving)
     rests = _rests_around(seen, moves)
