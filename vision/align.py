@@ -10,6 +10,7 @@ model of plane, lens and motion can be fitted to the corners with that weight an
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -18,7 +19,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.frames import LumaImage
-from vision.markers import UNIT_CORNERS
 from vision.records import FloatArray
 from vision.template import Template
 
@@ -52,41 +52,59 @@ class CornerFit:
         Grey level of black.
     n_pixels : float
         Pixels compared.
+    move_px : ndarray, shape (4, 2)
+        Displacement of the corners that explains the picture best.
     """
 
     corners_px: FloatArray
     information: FloatArray
     gradient: FloatArray
+    move_px: FloatArray
     noise_var: float
     explained: float
     contrast: float
     level: float
     n_pixels: float
 
-    def displacement_px(self) -> FloatArray:
-        """Return the displacement, shape (8,), that explains the picture best."""
-        return np.linalg.solve(self.information, self.gradient)
 
-
-@lru_cache(maxsize=512)
+@lru_cache(maxsize=1024)
 def _grid(height: int, width: int) -> NDArray[np.float32]:
-    """Return crop coordinates (x, y, 1) of all pixels, shape (3, height * width)."""
+    """Return the pixels' places about the crop's centre in units of half its longer side, shape (2, n)."""
     y, x = np.mgrid[0:height, 0:width]
-    grid = np.stack([x.ravel(), y.ravel(), np.ones(height * width)]).astype(np.float32)
-    grid.setflags(write=False)
-    return grid
+    half = 0.5 * max(height, width)
+    grid = np.stack([(x - 0.5 * (width - 1)) / half, (y - 0.5 * (height - 1)) / half])
+    flat: NDArray[np.float32] = grid.reshape(2, -1).astype(np.float32)
+    flat.setflags(write=False)
+    return flat
 
 
 def homography_from_corners(corners_px: FloatArray) -> FloatArray:
-    """Return the map from marker coordinates (units of side, y down) to the picture, shape (3, 3)."""
-    square = UNIT_CORNERS.astype(np.float32)
-    map_px: FloatArray = cv2.getPerspectiveTransform(square, corners_px.astype(np.float32)).astype(np.float64)
-    return map_px
+    """Return the map from marker coordinates (units of side, y down) to the picture, shape (3, 3).
+
+    Source: Heckbert (1989), Fundamentals of texture mapping and image warping, square to quadrilateral.
+    """
+    (x0, y0), (x1, y1), (x2, y2), (x3, y3) = corners_px.tolist()
+    dx1, dx2, dx3 = x1 - x2, x3 - x2, x0 - x1 + x2 - x3
+    dy1, dy2, dy3 = y1 - y2, y3 - y2, y0 - y1 + y2 - y3
+    det = dx1 * dy2 - dx2 * dy1
+    if det == 0.0:
+        return np.full((3, 3), np.nan)
+    g, h = (dx3 * dy2 - dx2 * dy3) / det, (dx1 * dy3 - dx3 * dy1) / det
+    a, b, c = x1 - x0 + g * x1, x3 - x0 + h * x3, x0
+    d, e, f = y1 - y0 + g * y1, y3 - y0 + h * y3, y0
+    # From here on the square runs from -1/2 to 1/2 instead of 0 to 1.
+    return np.array(
+        [
+            [a, b, 0.5 * (a + b) + c],
+            [d, e, 0.5 * (d + e) + f],
+            [g, h, 0.5 * (g + h) + 1.0],
+        ]
+    )
 
 
 def fit_corners(
     image: LumaImage,
-    homography_px: FloatArray,
+    corners_px: FloatArray,
     template: Template,
     *,
     smear: tuple[FloatArray, ...] = (),
@@ -98,8 +116,8 @@ def fit_corners(
     Parameters
     ----------
     image : ndarray, shape (height, width)
-    homography_px : ndarray, shape (3, 3)
-        Believed map from marker coordinates (units of side, y down) to the picture.
+    corners_px : ndarray, shape (4, 2)
+        Where the corners are believed to be.
     template : Template
     smear : tuple of ndarray, shape (3, 3)
         Picture-to-picture motions over the exposure; the pattern is averaged over them.
@@ -113,44 +131,39 @@ def fit_corners(
     CornerFit or None
         None if the marker is out of the picture or too small, or the pattern has no hold there.
     """
-    box = _box(homography_px, template, image.shape)
+    box = _box(corners_px, template, image.shape)
     if box is None:
         return None
     x0, y0, x1, y1 = box
     crop = image[y0:y1, x0:x1].astype(np.float32)
     if soften_px > 0.0:
         crop = cv2.GaussianBlur(crop, (0, 0), soften_px, borderType=cv2.BORDER_REPLICATE).astype(np.float32)
-    to_crop = np.array([[1.0, 0.0, -x0], [0.0, 1.0, -y0], [0.0, 0.0, 1.0]]) @ homography_px
+    local_px = corners_px - (x0, y0)
+    to_crop = homography_from_corners(local_px)
     rendered = _render(template, to_crop, crop.shape, smear, (x0, y0))
-    columns, half_px = _columns(rendered, to_crop, crop.shape)
-    mask = rendered[3]
-    n_pixels = float(mask.sum())
-    if n_pixels < FEWEST_PIXELS:
+    inside = np.flatnonzero(rendered[:, 3] > 0.5)
+    if len(inside) < FEWEST_PIXELS:
         return None
-    columns[-1] = crop.ravel()
-    columns[-1] -= columns[-1].mean()
-    level_shift = float(crop.mean())
-    weight = mask if not robust else mask * _trust(columns, mask)
-    return _solve(columns, weight, to_crop, crop.shape, half_px, (x0, y0), level_shift)
+    rows, shift = _rows(rendered, inside, crop, to_crop)
+    if robust:
+        rows *= np.sqrt(_trust(rows))
+    return _solve(rows, corners_px, local_px, crop.shape, shift)
 
 
 def _box(
-    homography_px: FloatArray, template: Template, shape: tuple[int, ...]
+    corners_px: FloatArray, template: Template, shape: tuple[int, ...]
 ) -> tuple[int, int, int, int] | None:
     """Return the pixel box (x0, y0, x1, y1) that holds the whole template, clipped to the picture."""
-    n_samples = template.channels.shape[0]
-    ends = np.array([[-0.5, n_samples - 0.5, n_samples - 0.5, -0.5], [-0.5, -0.5, n_samples - 0.5, n_samples - 0.5]])
-    rim = homography_px @ template.unit_from_sample @ np.vstack([ends, np.ones(4)])
-    if not np.all(rim[2] > 0.0) and not np.all(rim[2] < 0.0):
+    points = corners_px.tolist()
+    xs, ys = [p[0] for p in points], [p[1] for p in points]
+    left, right, top, bottom = min(xs), max(xs), min(ys), max(ys)
+    size = max(right - left, bottom - top)
+    if not 4.0 < size < 4.0 * max(shape):  # written so that NaN also lands here
         return None
-    points = rim[:2] / rim[2]
-    if not np.all(np.isfinite(points)):
-        return None
-    low = np.maximum(np.floor(points.min(axis=1)), 0.0)
-    high = np.minimum(np.ceil(points.max(axis=1)) + 1.0, (shape[1], shape[0]))
-    if np.any(high - low < 6.0):
-        return None
-    return int(low[0]), int(low[1]), int(high[0]), int(high[1])
+    pad = template.margin * 1.5 * size
+    x0, y0 = max(math.floor(left - pad), 0), max(math.floor(top - pad), 0)
+    x1, y1 = min(math.ceil(right + pad) + 1, shape[1]), min(math.ceil(bottom + pad) + 1, shape[0])
+    return (x0, y0, x1, y1) if x1 - x0 >= 6 and y1 - y0 >= 6 else None
 
 
 def _render(
@@ -160,127 +173,115 @@ def _render(
     smear: tuple[FloatArray, ...],
     origin_px: tuple[int, int],
 ) -> NDArray[np.float32]:
-    """Return the template's channels at the crop's pixels, shape (4, n)."""
+    """Return the template's channels at the crop's pixels, shape (n, 4)."""
     size = (shape[1], shape[0])
     still = to_crop @ template.unit_from_sample
     if not smear:
-        return _planes(cv2.warpPerspective(template.channels, still, size, flags=cv2.INTER_LINEAR))
+        return cv2.warpPerspective(template.channels, still, size, flags=cv2.INTER_LINEAR).reshape(-1, 4)
     shift = np.array([[1.0, 0.0, origin_px[0]], [0.0, 1.0, origin_px[1]], [0.0, 0.0, 1.0]])
     total = np.zeros((*shape, 4), dtype=np.float32)
     for motion in smear:
         moved = np.linalg.inv(shift) @ motion @ shift @ still
         total += cv2.warpPerspective(template.channels, moved, size, flags=cv2.INTER_LINEAR)
-    return _planes(total / len(smear))
+    return (total / len(smear)).reshape(-1, 4)
 
 
-def _planes(picture: NDArray[np.float32]) -> NDArray[np.float32]:
-    return np.ascontiguousarray(picture.reshape(-1, 4).T)
-
-
-def _columns(
-    rendered: NDArray[np.float32], to_crop: FloatArray, shape: tuple[int, ...]
+def _rows(
+    rendered: NDArray[np.float32], inside: NDArray[np.intp], crop: NDArray[np.float32], to_crop: FloatArray
 ) -> tuple[NDArray[np.float32], float]:
-    """Return the design matrix as rows, shape (15, n): 8 displacements, 6 illumination terms, 1 for data."""
-    grid = _grid(*shape)
-    inverse = np.linalg.inv(to_crop)
-    unit = (inverse.astype(np.float32)) @ grid
-    per_w = 1.0 / unit[2]
-    unit_x, unit_y = unit[0] * per_w, unit[1] * per_w
-    slope_x, slope_y = rendered[1] * per_w, rendered[2] * per_w
-    toward = slope_x * unit_x + slope_y * unit_y
-    a = inverse.astype(np.float32)
-    grey_x = slope_x * a[0, 0] + slope_y * a[1, 0] - toward * a[2, 0]
-    grey_y = slope_x * a[0, 1] + slope_y * a[1, 1] - toward * a[2, 1]
-    half_px = 0.5 * max(shape)
-    x = (grid[0] - 0.5 * (shape[1] - 1)) * np.float32(1.0 / half_px)
-    y = (grid[1] - 0.5 * (shape[0] - 1)) * np.float32(1.0 / half_px)
-    rows = np.empty((9 + N_LIGHT, grid.shape[1]), dtype=np.float32)
-    np.negative(grey_x, out=rows[2])
-    np.negative(grey_y, out=rows[5])
-    np.multiply(rows[2], x, out=rows[0])
-    np.multiply(rows[2], y, out=rows[1])
-    np.multiply(rows[5], x, out=rows[3])
-    np.multiply(rows[5], y, out=rows[4])
+    """Return the design as rows, shape (15, n): 8 displacements, 6 illumination terms, the data; and its mean."""
+    seen = rendered[inside]
+    x, y = _grid(*crop.shape)[:, inside]
+    rows = np.empty((9 + N_LIGHT, len(inside)), dtype=np.float32)
+    rows[2:6:3] = _slope_map(to_crop) @ seen[:, 1:3].T
+    grey_x, grey_y = rows[2], rows[5]
+    np.multiply(grey_x, x, out=rows[0])
+    np.multiply(grey_x, y, out=rows[1])
+    np.multiply(grey_y, x, out=rows[3])
+    np.multiply(grey_y, y, out=rows[4])
     outward = rows[0] + rows[4]
     np.multiply(outward, x, out=rows[6])
     np.multiply(outward, y, out=rows[7])
-    rows[8] = rendered[3]
-    rows[9] = x
-    rows[10] = y
-    rows[11] = rendered[0]
-    np.multiply(rendered[0], x, out=rows[12])
-    np.multiply(rendered[0], y, out=rows[13])
-    return rows, half_px
+    rows[8] = 1.0
+    rows[9], rows[10] = x, y
+    rows[11] = seen[:, 0]
+    np.multiply(rows[11], x, out=rows[12])
+    np.multiply(rows[11], y, out=rows[13])
+    data = crop.ravel()[inside]
+    mean = float(data.mean())
+    np.subtract(data, np.float32(mean), out=rows[14])
+    return rows, mean
 
 
-def _trust(columns: NDArray[np.float32], mask: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Return Tukey weights of the pixels from three reweighted solutions for the illumination and displacement."""
-    weight = mask.copy()
+def _slope_map(to_crop: FloatArray) -> NDArray[np.float32]:
+    """Return minus the map from slopes per unit of side to slopes per pixel, at the marker's centre.
+
+    Perspective makes it vary by a per cent over a marker. That is left out: it changes how fast the steps converge,
+    not where they end.
+    """
+    (a, b, c), (d, e, f), (g, h, i) = to_crop.tolist()
+    a, b, d, e = a - g * c / i, b - h * c / i, d - g * f / i, e - h * f / i
+    det = (a * e - b * d) / i
+    return np.array([[-e / det, d / det], [b / det, -a / det]], dtype=np.float32)
+
+
+def _trust(rows: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Return Tukey weights of the pixels from three reweighted solutions."""
+    weight = np.ones(rows.shape[1], dtype=np.float32)
     for _ in range(3):
-        normal = (columns * weight) @ columns.T
+        normal = (rows * weight) @ rows.T
         coefficients = np.linalg.lstsq(normal[:-1, :-1], normal[:-1, -1], rcond=1e-7)[0]
-        left = columns[-1] - coefficients.astype(np.float32) @ columns[:-1]
-        scale = 1.4826 * np.median(np.abs(left[mask > 0.5])) + 1e-6
-        ratio = np.minimum((left / (4.685 * scale)) ** 2, 1.0)
-        weight = mask * (1.0 - ratio) ** 2
-    trust: NDArray[np.float32] = weight.astype(np.float32)
-    return trust
+        left = rows[-1] - coefficients.astype(np.float32) @ rows[:-1]
+        scale = 1.4826 * float(np.median(np.abs(left))) + 1e-6
+        weight = (1.0 - np.minimum((left / np.float32(4.685 * scale)) ** 2, 1.0)) ** 2
+    return weight
 
 
 def _solve(
-    columns: NDArray[np.float32],
-    weight: NDArray[np.float32],
-    to_crop: FloatArray,
+    rows: NDArray[np.float32],
+    corners_px: FloatArray,
+    local_px: FloatArray,
     shape: tuple[int, ...],
-    half_px: float,
-    origin_px: tuple[int, int],
-    level_shift: float,
+    shift: float,
 ) -> CornerFit | None:
-    normal = (columns @ (columns * weight).T).astype(np.float64)
+    normal = (rows @ rows.T).astype(np.float64)
     light = slice(8, 8 + N_LIGHT)
+    to_motion = _to_motion(local_px, shape)
     try:
         eliminate = np.linalg.solve(normal[light, light], normal[light, :])
-    except np.linalg.LinAlgError:
+        reduced = normal - normal[:, light] @ eliminate
+        contrast = float(eliminate[3, -1])
+        information = to_motion.T @ reduced[:8, :8] @ to_motion
+        gradient = to_motion.T @ reduced[:8, -1] / contrast
+        move = np.linalg.solve(information, gradient)
+    except (np.linalg.LinAlgError, ZeroDivisionError):
         return None
-    reduced = normal - normal[:, light] @ eliminate
-    data_left = reduced[-1, -1]
-    contrast = float(eliminate[3, -1])
-    n_pixels = float(weight.sum())
-    total = normal[-1, -1] - normal[8, -1] ** 2 / normal[8, 8]
-    if not (total > 0.0) or contrast == 0.0:
+    left, n_pixels = float(reduced[-1, -1]), float(normal[8, 8])
+    total = float(normal[-1, -1] - normal[8, -1] ** 2 / n_pixels)
+    gained = float(gradient @ move) * contrast**2
+    if not total > 0.0 or not math.isfinite(gained):
         return None
-    motion, pull = reduced[:8, :8], reduced[:8, -1] / contrast
-    corners_px, to_motion = _corner_frame(to_crop, shape, half_px)
-    information = to_motion.T @ motion @ to_motion
-    gradient = to_motion.T @ pull
-    try:
-        gained = float(gradient @ np.linalg.solve(information, gradient)) * contrast**2
-    except np.linalg.LinAlgError:
-        return None
-    freedom = max(n_pixels - 8 - N_LIGHT, 1.0)
     return CornerFit(
-        corners_px=corners_px + origin_px,
+        corners_px=corners_px,
         information=information,
         gradient=gradient,
-        noise_var=max(data_left - gained, 1e-9) / freedom / contrast**2,
-        explained=1.0 - data_left / total,
+        move_px=move.reshape(4, 2),
+        noise_var=max(left - gained, 1e-9) / max(n_pixels - 8 - N_LIGHT, 1.0) / contrast**2,
+        explained=1.0 - left / total,
         contrast=contrast,
-        level=float(eliminate[0, -1]) + level_shift,
+        level=float(eliminate[0, -1]) + shift,
         n_pixels=n_pixels,
     )
 
 
-def _corner_frame(
-    to_crop: FloatArray, shape: tuple[int, ...], half_px: float
-) -> tuple[FloatArray, FloatArray]:
-    """Return the corners in crop pixels and the map from corner displacements to the eight motion terms."""
-    image = to_crop @ np.vstack([UNIT_CORNERS.T, np.ones(4)])
-    corners_px = (image[:2] / image[2]).T
-    x = (corners_px[:, 0] - 0.5 * (shape[1] - 1)) / half_px
-    y = (corners_px[:, 1] - 0.5 * (shape[0] - 1)) / half_px
+def _to_motion(local_px: FloatArray, shape: tuple[int, ...]) -> FloatArray:
+    """Return the map, shape (8, 8), from corner displacements to the eight motion terms of `_rows`."""
+    half_px = 0.5 * max(shape)
+    x = (local_px[:, 0] - 0.5 * (shape[1] - 1)) / half_px
+    y = (local_px[:, 1] - 0.5 * (shape[0] - 1)) / half_px
     basis = np.zeros((8, 8))
     basis[0::2, 0], basis[0::2, 1], basis[0::2, 2] = x, y, 1.0
     basis[1::2, 3], basis[1::2, 4], basis[1::2, 5] = x, y, 1.0
     basis[0::2, 6], basis[0::2, 7] = x * x, x * y
     basis[1::2, 6], basis[1::2, 7] = x * y, y * y
-    return corners_px, np.linalg.inv(basis)
+    return np.linalg.inv(basis)

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import least_squares, minimize, minimize_scalar
 
-from vision.align import CornerFit, fit_corners, homography_from_corners
+from vision.align import CornerFit, fit_corners
 from vision.frames import LumaImage
 from vision.markers import UNIT_CORNERS, Detection, printed_modules
 from vision.records import FloatArray, MarkerSetup
@@ -152,13 +152,10 @@ def settle_corners(
     """
     fit = None
     for _ in range(steps):
-        fit = fit_corners(image, homography_from_corners(corners_px), template)
+        fit = fit_corners(image, corners_px, template)
         if fit is None:
             return None
-        try:
-            move = fit.displacement_px().reshape(4, 2)
-        except np.linalg.LinAlgError:
-            return None
+        move = fit.move_px
         limit = 0.15 * mean_side_px(fit.corners_px)
         if not np.all(np.isfinite(move)) or np.abs(move).max() > limit:
             return None
@@ -202,7 +199,7 @@ class _Rendering:
     ) -> None:
         self._image = image
         self._markers = [
-            (homography_from_corners(corners), black, mean_side_px(corners))
+            (corners, black, mean_side_px(corners))
             for corners, black in zip(corners_px, modules, strict=True)
         ]
 
@@ -214,8 +211,8 @@ class _Rendering:
         if not 0.5 <= optics.halo_px <= 5.0:
             return 10.0
         total = 0.0
-        for map_px, black, side_px in self._markers:
-            fit = fit_corners(self._image, map_px, build_template(black, side_px=side_px, optics=optics))
+        for corners, black, side_px in self._markers:
+            fit = fit_corners(self._image, corners, build_template(black, side_px=side_px, optics=optics))
             total += fit.noise_var if fit is not None else 1.0
         return total
 

@@ -50,13 +50,15 @@ class Template:
     ----------
     channels : ndarray, shape (S, S, 4), float32
         White (1) to black (0), its slopes per unit of side along x and y, and 1 where the template is valid.
-    sample_from_unit : ndarray, shape (3, 3)
-        Map from marker coordinates (units of side, centre at 0, y down) to samples of the grid.
+    unit_from_sample : ndarray, shape (3, 3)
+        Map from samples of the grid to marker coordinates (units of side, centre at 0, y down).
+    margin : float
+        Width of the surround, in sides.
     """
 
     channels: NDArray[np.float32]
-    sample_from_unit: FloatArray
     unit_from_sample: FloatArray
+    margin: float
 
 
 def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) -> Template:
@@ -79,7 +81,7 @@ def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) 
     channels = _processed(layers.astype(np.float32), optics, samples_per_px=per_side / side_px)
     offset = (0.5 + quiet) * per_side - 0.5
     sample_from_unit = np.array([[per_side, 0.0, offset], [0.0, per_side, offset], [0.0, 0.0, 1.0]])
-    return Template(channels, sample_from_unit, np.linalg.inv(sample_from_unit))
+    return Template(channels, np.linalg.inv(sample_from_unit), quiet)
 
 
 def _processed(layers: NDArray[np.float32], optics: Optics, *, samples_per_px: float) -> NDArray[np.float32]:

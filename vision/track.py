@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterable
 
 import numpy as np
 
-from vision.align import CornerFit, fit_corners, homography_from_corners
+from vision.align import CornerFit, fit_corners
 from vision.cards import CardWatcher
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
@@ -175,7 +175,7 @@ class PairTracker:
         return [
             fit_corners(
                 image,
-                homography_from_corners(corners),
+                corners,
                 pattern.soft if soft else pattern.sharp,
                 smear=smear,
                 soften_px=pattern.soften_px if soft else 0.0,
@@ -230,17 +230,14 @@ class PairTracker:
         side_px = self._patterns[m].side_px
         robust = False
         for _ in range(4):
-            try:
-                move = fit.displacement_px().reshape(4, 2)
-            except np.linalg.LinAlgError:
-                return None
+            move = fit.move_px
             largest_px = float(np.abs(move).max())
             if not np.isfinite(largest_px) or largest_px > 0.25 * side_px:
                 return None
             if largest_px < 0.12:
                 break
             again = fit_corners(
-                image, homography_from_corners(fit.corners_px + move), self._patterns[m].sharp, smear=smear,
+                image, fit.corners_px + move, self._patterns[m].sharp, smear=smear,
                 robust=robust,
             )  # fmt: skip
             if again is None or again.explained < HOLD:
