@@ -11,7 +11,7 @@ model of plane, lens and motion can be fitted to the corners with that weight an
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import cv2
@@ -54,6 +54,8 @@ class CornerFit:
         Pixels compared.
     move_px : ndarray, shape (4, 2)
         Displacement of the corners that explains the picture best.
+    design : Design
+        What the model was built from.
     """
 
     corners_px: FloatArray
@@ -65,6 +67,69 @@ class CornerFit:
     contrast: float
     level: float
     n_pixels: float
+    design: Design
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Design:
+    """The pixels that were compared and how they answer to displacement and light.
+
+    Parameters
+    ----------
+    window : tuple of slice
+        The crop of the picture.
+    inside : ndarray of int, shape (n,)
+        Pixels of the crop, flattened, that the template covers.
+    rows : ndarray, shape (15, n)
+        As `_rows` returns them.
+    normal : ndarray, shape (15, 15)
+    basis : ndarray, shape (8, 8)
+        Map from the eight motion terms to corner displacements.
+    """
+
+    window: tuple[slice, slice]
+    inside: NDArray[np.intp]
+    rows: NDArray[np.float32]
+    normal: FloatArray
+    basis: FloatArray
+
+
+class Held:
+    """The same comparison again, for pictures in which the marker has hardly moved: one product a frame.
+
+    The pattern, its slopes and the normal matrix stay those of `fit`; only the picture is new. Valid while the
+    displacement stays a small part of a pixel.
+
+    Parameters
+    ----------
+    fit : CornerFit
+        From a comparison without smear, softening or weights.
+    """
+
+    def __init__(self, fit: CornerFit) -> None:
+        self._fit = fit
+        self._rows = fit.design.rows[:-1]
+        self._inverse = np.linalg.inv(fit.design.normal[:-1, :-1])
+        self._freedom = max(fit.n_pixels - 8 - N_LIGHT, 1.0)
+
+    def again(self, image: LumaImage) -> CornerFit | None:
+        """Return the corner model under a new picture; `explained` is then that of the displaced pattern."""
+        design = self._fit.design
+        data = image[design.window].ravel()[design.inside].astype(np.float32)
+        data -= data.mean()
+        pull = (self._rows @ data).astype(np.float64)
+        answer = self._inverse @ pull
+        total, contrast = float(data @ data), float(answer[11])
+        if not total > 0.0 or contrast <= 0.0:
+            return None
+        left = max(total - float(pull @ answer), 1e-9)
+        return replace(
+            self._fit,
+            move_px=(design.basis @ answer[:8] / contrast).reshape(4, 2),
+            noise_var=left / self._freedom / contrast**2,
+            explained=1.0 - left / total,
+            contrast=contrast,
+        )
 
 
 @lru_cache(maxsize=1024)
@@ -147,7 +212,9 @@ def fit_corners(
     rows, shift = _rows(rendered, inside, crop, to_crop)
     if robust:
         rows *= np.sqrt(_trust(rows))
-    return _solve(rows, corners_px, local_px, crop.shape, shift)
+    basis = _motion_basis(local_px, crop.shape)
+    design = Design((slice(y0, y1), slice(x0, x1)), inside, rows, (rows @ rows.T).astype(np.float64), basis)
+    return _solve(design, corners_px, shift)
 
 
 def _box(
@@ -237,17 +304,11 @@ def _trust(rows: NDArray[np.float32]) -> NDArray[np.float32]:
     return weight
 
 
-def _solve(
-    rows: NDArray[np.float32],
-    corners_px: FloatArray,
-    local_px: FloatArray,
-    shape: tuple[int, ...],
-    shift: float,
-) -> CornerFit | None:
-    normal = (rows @ rows.T).astype(np.float64)
+def _solve(design: Design, corners_px: FloatArray, shift: float) -> CornerFit | None:
+    normal = design.normal
     light = slice(8, 8 + N_LIGHT)
-    to_motion = _to_motion(local_px, shape)
     try:
+        to_motion = np.linalg.inv(design.basis)
         eliminate = np.linalg.solve(normal[light, light], normal[light, :])
         reduced = normal - normal[:, light] @ eliminate
         contrast = float(eliminate[3, -1])
@@ -271,11 +332,12 @@ def _solve(
         contrast=contrast,
         level=float(eliminate[0, -1]) + shift,
         n_pixels=n_pixels,
+        design=design,
     )
 
 
-def _to_motion(local_px: FloatArray, shape: tuple[int, ...]) -> FloatArray:
-    """Return the map, shape (8, 8), from corner displacements to the eight motion terms of `_rows`."""
+def _motion_basis(local_px: FloatArray, shape: tuple[int, ...]) -> FloatArray:
+    """Return the map, shape (8, 8), from the eight motion terms of `_rows` to corner displacements."""
     half_px = 0.5 * max(shape)
     x = (local_px[:, 0] - 0.5 * (shape[1] - 1)) / half_px
     y = (local_px[:, 1] - 0.5 * (shape[0] - 1)) / half_px
@@ -284,4 +346,4 @@ def _to_motion(local_px: FloatArray, shape: tuple[int, ...]) -> FloatArray:
     basis[1::2, 3], basis[1::2, 4], basis[1::2, 5] = x, y, 1.0
     basis[0::2, 6], basis[0::2, 7] = x * x, x * y
     basis[1::2, 6], basis[1::2, 7] = x * y, y * y
-    return np.linalg.inv(basis)
+    return basis

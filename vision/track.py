@@ -8,11 +8,13 @@ and wider searches follow: turned poses under soft templates, the detector in a 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import contextmanager
 
+import cv2
 import numpy as np
 
-from vision.align import CornerFit, fit_corners
+from vision.align import CornerFit, Held, fit_corners
 from vision.cards import CardWatcher
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
@@ -36,10 +38,16 @@ HOLD = 0.55
 SEARCH_EVERY_S = 0.2
 """How often the full frame is searched while the robot is out of sight."""
 
-EXPOSURE_TRIALS = (0.0, 0.12, 0.25, 0.4, 0.6, 0.8, 1.0)
+EXPOSURE_TRIALS = (0.0, 0.15, 0.3, 0.5, 0.75, 1.0)
 """Exposure times tried, as shares of the frame interval."""
 
-EXPOSURE_VOTES = 12
+EXPOSURE_VOTES = 6
+
+HELD_PX = 0.12
+"""While no corner is farther than this from where the pattern was last rendered, it is not rendered again."""
+
+HELD_NOISE = 1.6
+"""Nor while the noise is not more than so many times what it was then."""
 
 
 class PairTracker:
@@ -77,6 +85,8 @@ class PairTracker:
         self._last_s: float | None = None
         self._last_search_s = -np.inf
         self._lost = False
+        self._held: tuple[Held, ...] = ()
+        self._held_noise: tuple[float, ...] = ()
         self._last: tuple[tuple[slice, slice], LumaImage, Sight] | None = None
         self._exposure = _ExposureVote()
 
@@ -90,6 +100,9 @@ class PairTracker:
         repeated = self._repeated(frame.luma)
         if repeated is not None:
             return repeated
+        held = self._hold(frame)
+        if held is not None:
+            return held
         step_s = frame.time_s - self._last_s if self._last_s is not None else 0.0
         if step_s <= 0.0:
             step_s = 1e-3
@@ -114,6 +127,37 @@ class PairTracker:
             )
         return None
 
+    def _hold(self, frame: Frame) -> Sight | None:
+        """Return the sight of a robot that still stands where the patterns were last rendered, or None."""
+        if not self._held:
+            return None
+        fits = [held.again(frame.luma) for held in self._held]
+        if not all(self._still(fit, noise) for fit, noise in zip(fits, self._held_noise, strict=True)):
+            self._held = ()
+            return None
+        corners_px = np.stack([fit.corners_px + fit.move_px for fit in fits if fit is not None])
+        self._corners_px = corners_px
+        self._rate = np.zeros(3)
+        self._last_s = frame.time_s
+        sight = _sight(corners_px, fits, 0.0)
+        self._remember(frame.luma, sight)
+        return sight
+
+    @staticmethod
+    def _still(fit: CornerFit | None, noise_var: float) -> bool:
+        if fit is None:
+            return False
+        return bool(np.abs(fit.move_px).max() < HELD_PX) and fit.noise_var < HELD_NOISE * noise_var
+
+    def _grip(self, fits: list[CornerFit | None], smear: tuple[FloatArray, ...]) -> None:
+        """Keep the comparisons of a robot that seems to stand, to be used again on the next frame."""
+        self._held, self._held_noise = (), ()
+        known = [fit for fit in fits if fit is not None]
+        if smear or len(known) < 2 or self._reach_px(self._plane_px, self._rate / 30.0) > HELD_PX:
+            return
+        self._held = tuple(Held(fit) for fit in known)
+        self._held_noise = tuple(fit.noise_var for fit in known)
+
     def _remember(self, image: LumaImage, sight: Sight) -> None:
         points = self._corners_px.reshape(-1, 2)
         pad = 0.15 * self._patterns[0].side_px
@@ -124,6 +168,7 @@ class PairTracker:
 
     def _lose(self, frame: Frame, step_s: float) -> None:
         self._last = None
+        self._held = ()
         self._rate = self._rate * 0.5 if not self._lost else np.zeros(3)
         if self._last_s is not None and step_s > 0.5:
             self._lost = True
@@ -222,6 +267,7 @@ class PairTracker:
         if not any(fit is not None for fit in kept):
             return None
         self._accept(plane_px, corners_px, settled, step_s)
+        self._grip(kept, smear)
         return _sight(settled, kept, _largest_move(smear, self._corners_px))
 
     def _free_marker(
@@ -483,6 +529,22 @@ def track_pair(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
     MarkersNotFound
         If no frame shows both.
     """
+    with one_thread():
+        return _track(frames, setup)
+
+
+@contextmanager
+def one_thread() -> Iterator[None]:
+    """Keep OpenCV to one thread: its pool costs more than it gives on pictures of a marker's size."""
+    before = cv2.getNumThreads()
+    cv2.setNumThreads(1)
+    try:
+        yield
+    finally:
+        cv2.setNumThreads(before)
+
+
+def _track(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
     seeker = _Seeker(setup)
     times: list[float] = []
     keys: list[bool] = []

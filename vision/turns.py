@@ -32,6 +32,9 @@ LAG_SHARE = 0.5
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
 
+BEYOND_BELIEF_SIDES = 0.06
+"""Corners that miss the rigid pair by more than this share of a marker's side show something else than the pair."""
+
 GAP_FRAMES = 3.5
 """A longer stretch without sight, in frame intervals, is a gap and is reported."""
 
@@ -93,7 +96,7 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
     known = np.isfinite(poses.heading_rad) & np.isfinite(poses.residual_px)
     if known.any():
         usual = float(np.median(poses.residual_px[known]))
-        known &= poses.residual_px < max(12.0 * usual, 0.02 * _side_px(corners))
+        known &= poses.residual_px < max(12.0 * usual, BEYOND_BELIEF_SIDES * _side_px(corners))
     heading_rad = np.unwrap(poses.heading_rad[known])
     return Seen(
         index=np.flatnonzero(known),
