@@ -46,6 +46,9 @@ FASTER = 1.5
 
 FRAMES_TO_BELIEVE = 3
 
+FULL_VIEW = 0.85
+"""A marker explained by less than this share of the usual is partly covered or smeared; its size then says little."""
+
 LIFT_SHARE = 0.005
 """A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
 
@@ -66,6 +69,8 @@ class Seen:
         Derivative of the heading (deg) by the calibration.
     left : ndarray, shape (N, 16)
         Whitened corner residuals, NaN for a marker not seen.
+    clear : ndarray of bool, shape (N,)
+        Whether both markers were in full view.
     reach_mm : float
         Distance of the markers from the middle of the pair.
     end_s : float
@@ -84,6 +89,7 @@ class Seen:
     u_heading_deg: FloatArray
     by_global: FloatArray
     left: FloatArray
+    clear: NDArray[np.bool_]
     reach_mm: float
     end_s: float
     frame_s: float
@@ -109,10 +115,17 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
         u_heading_deg=np.degrees(poses.u_heading_rad[known]),
         by_global=np.degrees(poses.by_global[known]),
         left=poses.left[known],
+        clear=_clear(corners)[known],
         reach_mm=0.5 * corners.body.base_mm,
         end_s=float(corners.time_s[-1]),
         frame_s=frame_s,
     )
+
+
+def _clear(corners: CornerTrack) -> NDArray[np.bool_]:
+    worse = np.min(np.nan_to_num(corners.explained, nan=0.0), axis=1)
+    clear: NDArray[np.bool_] = worse > FULL_VIEW * float(np.nanmedian(corners.explained))
+    return clear
 
 
 def _side_px(corners: CornerTrack) -> float:
@@ -227,8 +240,8 @@ def _judge(
     part = slice(move.first, move.last + 1)
     path_mm = float(np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum())
     _, _, wander_mm = _centre(seen, move)
-    swell = np.sort(np.abs(seen.scale[part] / np.nanmedian(seen.scale) - 1.0))
-    lifted = float(swell[-min(FRAMES_TO_BELIEVE, len(swell))])
+    swell = np.sort(np.abs(seen.scale[part][seen.clear[part]] / np.nanmedian(seen.scale) - 1.0))
+    lifted = float(swell[-min(FRAMES_TO_BELIEVE, len(swell))]) if len(swell) else 0.0
     if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)):
         return "handled", f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg"
     hidden_s = _hidden_s(seen, move)
