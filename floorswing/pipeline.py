@@ -38,7 +38,7 @@ def measure_clip(path: str | Path, setup: MarkerSetup, *, progress: Progress | N
     corners, calibration = calibrate_steadied(corners, path_seen)
     poses = solve_poses(corners, calibration)
     seen = usable_frames(corners, poses)
-    split = split_turns(seen, calibration.cov)
+    split = split_turns(seen, calibration.cov, camera_still=path_seen.still)
     return assemble(info, setup, corners, calibration, seen, split, path_seen, problems)
 
 

@@ -10,6 +10,7 @@ averaging leaves. Pooled over the rests of a clip they scale the heading's own u
 from __future__ import annotations
 
 import itertools
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -23,6 +24,9 @@ from vision.rests import Stretch
 
 if TYPE_CHECKING:
     from vision.turns import Seen, Split
+
+HAND_S = 0.3
+"""Time over which the view of a camera in the hand, held steady by cards, errs in one direction."""
 
 REDUNDANCY = 13.0
 """Corner coordinates of the pair beyond its pose."""
@@ -62,32 +66,60 @@ def frozen_share(left: FloatArray, frames: NDArray[np.intp]) -> float:
     return float(np.sum(mean**2) / REDUNDANCY)
 
 
+def pooled_share(left: FloatArray, rests: Iterable[RestHeading]) -> float:
+    """Return the mean of `frozen_share` over the rests of a clip; NaN without any."""
+    shares = [frozen_share(left, rest.after) for rest in rests if len(rest.after)]
+    return float(np.nanmean(shares)) if np.any(np.isfinite(shares)) else np.nan
+
+
+def rest_variance_deg2(seen: Seen, frames: NDArray[np.intp], clip_share: float, *, camera_still: bool) -> float:
+    """Return the variance of the mean heading of a rest.
+
+    Parameters
+    ----------
+    seen : Seen
+    frames : ndarray of int
+        Frames averaged.
+    clip_share : float
+        `pooled_share` of the clip: a rest's own share has few degrees of freedom and is drawn half way to it.
+    camera_still : bool
+        A view that is held steady by cards adds an error of its own in every frame; as it follows the slow
+        drift of a hand, only stretches of `HAND_S` count as independent.
+    """
+    own = frozen_share(seen.left, frames)
+    share = clip_share if not np.isfinite(own) else 0.5 * (own + clip_share)
+    variance = share * float(np.median(seen.u_heading_deg[frames])) ** 2
+    if camera_still or len(frames) < 3:
+        return variance
+    length_s = float(seen.time_s[frames[-1]] - seen.time_s[frames[0]])
+    return variance + float(np.var(seen.heading_deg[frames], ddof=1)) / max(length_s / HAND_S, 1.0)
+
+
 def change_uncertainty(
-    u_heading_deg: FloatArray,
-    left: FloatArray,
-    by_global: FloatArray,
-    before: RestHeading | None,
-    after: RestHeading | None,
+    seen: Seen,
+    before: RestHeading,
+    after: RestHeading,
     cov: FloatArray,
+    clip_share: float,
+    *,
+    camera_still: bool,
 ) -> float:
-    """Return the standard uncertainty (deg) of a heading change between two rests."""
-    assert before is not None and after is not None
-    total = 0.0
-    for frames in (before.after, after.before):
-        share = frozen_share(left, frames)
-        total += share * float(np.median(u_heading_deg[frames])) ** 2
-    lever = by_global[after.before].mean(axis=0) - by_global[before.after].mean(axis=0)
+    """Return the standard uncertainty (deg) of a heading change between two rests (JCGM 100, 5.1 and 5.2)."""
+    total = sum(
+        rest_variance_deg2(seen, frames, clip_share, camera_still=camera_still)
+        for frames in (before.after, after.before)
+    )
+    lever = seen.by_global[after.before].mean(axis=0) - seen.by_global[before.after].mean(axis=0)
     return float(np.sqrt(total + lever @ cov @ lever))
 
 
-def budget_of(seen: Seen, split: Split, calibration: Calibration) -> tuple[Contribution, ...]:
+def budget_of(seen: Seen, split: Split, calibration: Calibration, *, camera_still: bool) -> tuple[Contribution, ...]:
     """Return the budget of a typical heading change of the clip (medians over its turns)."""
     rests = [r for r in split.rests if len(r.before) and len(r.after)]
     if len(rests) < 2:
         return ()
-    shares = np.array([frozen_share(seen.left, rest.after) for rest in rests])
-    noise = np.array([np.median(seen.u_heading_deg[rest.after]) for rest in rests])
-    left_deg = float(np.sqrt(2.0 * np.nanmean(shares) * np.median(noise) ** 2))
+    share = pooled_share(seen.left, rests)
+    left = [rest_variance_deg2(seen, rest.after, share, camera_still=camera_still) for rest in rests]
     levers = np.array(
         [
             seen.by_global[after.before].mean(axis=0) - seen.by_global[before.after].mean(axis=0)
@@ -97,7 +129,7 @@ def budget_of(seen: Seen, split: Split, calibration: Calibration) -> tuple[Contr
     parts = [
         Contribution(
             name="what averaging over the two rests leaves",
-            u_deg=left_deg,
+            u_deg=float(np.sqrt(2.0 * np.median(left))),
             evaluation="A",
             degrees_of_freedom=REDUNDANCY * len(rests),
             basis="spread of the 13 redundant corner coordinates, rest by rest",

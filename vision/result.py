@@ -46,7 +46,7 @@ def assemble(
         turns=turns,
         events=tuple(sorted(events, key=lambda event: event.start_s)),
         plane=_plane_record(corners, calibration, cards, setup),
-        budget=budget_of(seen, split, calibration),
+        budget=budget_of(seen, split, calibration, camera_still=path.still),
         warnings=(*problems, *_warnings(calibration, cards, path)),
     )
 

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import itertools
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from vision.budget import RestHeading, change_uncertainty
+from vision.budget import RestHeading, change_uncertainty, pooled_share
 from vision.observations import CornerTrack
 from vision.poses import Poses
 from vision.records import Event, FloatArray, Turn
@@ -144,7 +145,7 @@ class Split:
     motion: Motion
 
 
-def split_turns(seen: Seen, cov: FloatArray) -> Split:
+def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Split:
     """Split seen frames into turns and events.
 
     Parameters
@@ -152,11 +153,18 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
     seen : Seen
     cov : ndarray, shape (21, 21)
         Covariance of the calibration.
+    camera_still : bool
+        Whether the camera stood still all the time.
     """
     motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm, reach_mm=seen.reach_mm)
     moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
     moves = stretches(moving)
     rests = _rests_around(seen, moves)
+    share = pooled_share(seen.left, [rest for rest in rests if rest is not None])
+
+    def uncertainty(before: RestHeading, after: RestHeading) -> float:
+        return change_uncertainty(seen, before, after, cov, share, camera_still=camera_still)
+
     turns: list[Turn] = []
     events: list[Event] = []
     states = np.where(moving, "move", "rest").astype("<U7")
@@ -164,7 +172,7 @@ def split_turns(seen: Seen, cov: FloatArray) -> Split:
         before, after = rests[number], rests[number + 1]
         kind, detail = _judge(seen, motion, move, before, after)
         if kind == "turn":
-            turns.append(_turn(seen, motion, move, before, after, cov))
+            turns.append(_turn(seen, motion, move, before, after, uncertainty))
             states[move.first : move.last + 1] = "turn"
         else:
             events.append(_event(seen, move, kind, detail))
@@ -290,15 +298,15 @@ def _turn(
     move: Stretch,
     before: RestHeading | None,
     after: RestHeading | None,
-    cov: FloatArray,
+    uncertainty: Callable[[RestHeading, RestHeading], float],
 ) -> Turn:
     part = slice(move.first, move.last + 1)
     start = float(seen.heading_deg[before.after].mean()) if before else float(seen.heading_deg[move.first])
     end = float(seen.heading_deg[after.before].mean()) if after else float(seen.heading_deg[move.last])
     change = end - start
     flags = _flags(seen, motion, move, before, after)
-    known = before is not None and after is not None
-    u = change_uncertainty(seen.u_heading_deg, seen.left, seen.by_global, before, after, cov) if known else np.nan
+    u = uncertainty(before, after) if before is not None and after is not None else np.nan
+    known = np.isfinite(u)
     centre_x, centre_y, wander = _centre(seen, move)
     overshoot, settle = _settling(seen, motion, part, end, np.sign(change))
     return Turn(
