@@ -25,7 +25,10 @@ from vision.template import Template
 N_LIGHT = 6
 """Illumination terms eliminated per marker: level and gain, each with two slopes."""
 
-FEWEST_PIXELS = 60.0
+WHOLLY = 0.999
+"""A pixel is compared only if the template covers its interpolation wholly; beyond the rim it knows nothing."""
+
+FEWEST_PIXELS = 60
 """A marker with fewer pixels in the picture is not measured."""
 
 
@@ -206,7 +209,7 @@ def fit_corners(
     local_px = corners_px - (x0, y0)
     to_crop = homography_from_corners(local_px)
     rendered = _render(template, to_crop, crop.shape, smear, (x0, y0))
-    inside = np.flatnonzero(rendered[:, 3] > 0.5)
+    inside = np.flatnonzero(rendered[:, 3] > WHOLLY)
     if len(inside) < FEWEST_PIXELS:
         return None
     rows, shift = _rows(rendered, inside, crop, to_crop)
