@@ -22,8 +22,12 @@ from vision.frames import LumaImage
 from vision.records import FloatArray
 from vision.template import Template
 
-N_LIGHT = 6
-"""Illumination terms eliminated per marker: level and gain, each with two slopes."""
+N_LIGHT = 7
+"""Terms eliminated per marker: level and gain of the light, each with two slopes, and the bleed of the edges.
+
+White bleeds over black, or black over white, where ink spreads or a tone curve bends the greys of edges. All edges
+then move by one small distance, which would make a foreshortened square look less so.
+"""
 
 WHOLLY = 0.999
 """A pixel is compared only if the template covers its interpolation wholly; beyond the rim it knows nothing."""
@@ -83,9 +87,9 @@ class Design:
         The crop of the picture.
     inside : ndarray of int, shape (n,)
         Pixels of the crop, flattened, that the template covers.
-    rows : ndarray, shape (15, n)
+    rows : ndarray, shape (16, n)
         As `_rows` returns them.
-    normal : ndarray, shape (15, 15)
+    normal : ndarray, shape (16, 16)
     basis : ndarray, shape (8, 8)
         Map from the eight motion terms to corner displacements.
     """
@@ -259,7 +263,7 @@ def _render(
 def _rows(
     rendered: NDArray[np.float32], inside: NDArray[np.intp], crop: NDArray[np.float32], to_crop: FloatArray
 ) -> tuple[NDArray[np.float32], float]:
-    """Return the design as rows, shape (15, n): 8 displacements, 6 illumination terms, the data; and its mean."""
+    """Return the design as rows, shape (16, n): 8 displacements, 7 terms of light and bleed, the data; and its mean."""
     seen = rendered[inside]
     x, y = _grid(*crop.shape)[:, inside]
     rows = np.empty((9 + N_LIGHT, len(inside)), dtype=np.float32)
@@ -277,9 +281,10 @@ def _rows(
     rows[11] = seen[:, 0]
     np.multiply(rows[11], x, out=rows[12])
     np.multiply(rows[11], y, out=rows[13])
+    np.hypot(grey_x, grey_y, out=rows[14])
     data = crop.ravel()[inside]
     mean = float(data.mean())
-    np.subtract(data, np.float32(mean), out=rows[14])
+    np.subtract(data, np.float32(mean), out=rows[15])
     return rows, mean
 
 

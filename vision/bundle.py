@@ -44,6 +44,9 @@ PRINT_SD_SIDES = 0.01
 EVIDENCE_FLOOR = 0.5
 """Narrowest learned prior, in units of what the clip can tell: some doubt must always stay in the covariance."""
 
+SECTOR_RAD = float(np.deg2rad(10.0))
+"""Frames whose headings differ by less repeat each other's errors."""
+
 N_HEADING_BINS = 72
 PER_BIN = 3
 MAX_STEPS = 40
@@ -59,7 +62,7 @@ class Calibration:
     p : ndarray, shape (21,)
         Global parameters in the order of `vision.plane.NAMES`.
     cov : ndarray, shape (21, 21)
-        Their covariance, scaled by the misfit actually found.
+        Their covariance, scaled by the misfit actually found and by how far frames repeat each other.
     units : Units
     misfit : float
         Chi-square per degree of freedom against the corners' own information: 1 for pure sensor noise, more where
@@ -141,11 +144,12 @@ def calibrate(track: CornerTrack) -> Calibration:
     poses = start_poses(corners_px, p, units)
     units = replace(units, home=np.median(poses[:, 1:], axis=0))
     p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior(units))
-    prior = learned_prior(p, cov, units)
+    repeats = len(chosen) / n_sectors(poses[:, 0])
+    prior = learned_prior(p, cov * repeats, units)
     p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior)
     return Calibration(
         p=p,
-        cov=cov,
+        cov=cov * repeats,
         units=units,
         misfit=misfit,
         n_frames=len(chosen),
@@ -328,6 +332,15 @@ def _solve(system: _Normal, damping: float) -> tuple[FloatArray, FloatArray]:
     step = np.linalg.solve(reduced, right)
     pose_steps = np.einsum("nij,nj->ni", c_inverse, system.h - np.einsum("nij,i->nj", system.b, step))
     return step, pose_steps
+
+
+def n_sectors(headings_rad: FloatArray) -> int:
+    """Return how many sectors of `SECTOR_RAD` the headings (N,) fall into.
+
+    What coding and rendering do to the corners is much the same in neighbouring frames and headings, so a sector
+    counts as one observation, however many frames it holds.
+    """
+    return len(np.unique(np.floor(np.mod(headings_rad, 2.0 * np.pi) / SECTOR_RAD)))
 
 
 def covered_rad(headings_rad: FloatArray) -> float:

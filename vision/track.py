@@ -38,6 +38,9 @@ HOLD = 0.55
 SEARCH_EVERY_S = 0.2
 """How often the full frame is searched while the robot is out of sight."""
 
+LOOK_AGAIN_S = 0.1
+"""How often the second marker is searched for while only one is seen."""
+
 EXPOSURE_TRIALS = (0.0, 0.15, 0.3, 0.5, 0.75, 1.0)
 """Exposure times tried, as shares of the frame interval."""
 
@@ -107,6 +110,8 @@ class PairTracker:
         if step_s <= 0.0:
             step_s = 1e-3
         sight = None if self._lost else self._follow(frame.luma, step_s)
+        if sight is not None and not np.all(np.isfinite(sight.corners_px)):
+            sight = self._find_other(frame, step_s) or sight
         if sight is None:
             sight = self._recover(frame, step_s)
         if sight is None:
@@ -401,6 +406,15 @@ class PairTracker:
         if not found:
             return None
         return self._restart(frame.luma, found, step_s)
+
+    def _find_other(self, frame: Frame, step_s: float) -> Sight | None:
+        """Look now and then whether the marker that is out of sight can be seen again."""
+        if frame.time_s - self._last_search_s < LOOK_AGAIN_S:
+            return None
+        self._last_search_s = frame.time_s
+        near = self._window(frame.luma.shape, margin=0.6)
+        found = self._pick(detect(frame.luma[near], self._setup.dictionary, self._ids), near)
+        return self._restart(frame.luma, found, step_s) if len(found) == 2 else None
 
     @property
     def _ids(self) -> tuple[int, int]:

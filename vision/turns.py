@@ -30,6 +30,9 @@ CODING_LAG_S = 0.4
 LAG_SHARE = 0.5
 """A coded picture settles only some time after the motion has stopped; that much of a rest is passed over."""
 
+FEWEST_AFTER_KEY = 3
+"""Frames after a key frame that are enough to do without those before it."""
+
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
 
@@ -70,8 +73,8 @@ class Seen:
         Derivative of the heading (deg) by the calibration.
     left : ndarray, shape (N, 16)
         Whitened corner residuals, NaN for a marker not seen.
-    clear : ndarray of bool, shape (N,)
-        Whether both markers were in full view.
+    clear, is_key : ndarray of bool, shape (N,)
+        Whether both markers were in full view; whether the frame was coded without reference to others.
     reach_mm : float
         Distance of the markers from the middle of the pair.
     end_s : float
@@ -91,6 +94,7 @@ class Seen:
     by_global: FloatArray
     left: FloatArray
     clear: NDArray[np.bool_]
+    is_key: NDArray[np.bool_]
     reach_mm: float
     end_s: float
     frame_s: float
@@ -117,6 +121,7 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
         by_global=np.degrees(poses.by_global[known]),
         left=poses.left[known],
         clear=_clear(corners)[known],
+        is_key=corners.is_key[known],
         reach_mm=0.5 * corners.body.base_mm,
         end_s=float(corners.time_s[-1]),
         frame_s=frame_s,
@@ -231,13 +236,23 @@ def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) 
 def _side(seen: Seen, still: Stretch, *, late: bool, from_start: bool) -> NDArray[np.intp]:
     """Return the frames of a rest to average for the turn before it (early) or after it (late)."""
     frames = np.arange(still.first, still.last + 1)
-    times = seen.time_s[frames]
-    since_s = times - times[0]
     if not from_start:
-        frames = frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
-        times = seen.time_s[frames]
+        frames = _settled(seen, frames)
+    times = seen.time_s[frames]
     near = times >= times[-1] - LONGEST_REST_S if late else times <= times[0] + LONGEST_REST_S
     return frames[near]
+
+
+def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
+    """Return the frames of a rest from which the lag of the coded picture is gone, or nearly so.
+
+    A coder refines a picture that has come to rest only slowly; the next key frame is coded afresh.
+    """
+    keys = np.flatnonzero(seen.is_key[frames])
+    if len(keys) and len(frames) - keys[0] >= FEWEST_AFTER_KEY:
+        return frames[keys[0] :]
+    since_s = seen.time_s[frames] - seen.time_s[frames[0]]
+    return frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
 
 
 def _judge(
