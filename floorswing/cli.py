@@ -18,6 +18,7 @@ EXIT_WRONG = 2
 EXIT_INTERRUPTED = 130
 
 COMMANDS: dict[str, str] = {
+    "demo": "Run the main job on the bundled clips and compare with the truth.",
     "sheets": "Make the sheets to print: robot markers and floor cards in true scale.",
     "new": "Write a trial file, asking for what it needs.",
     "measure": "Measure the turns in clips filmed from above.",

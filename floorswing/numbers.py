@@ -15,8 +15,13 @@ def rounded_pair(value: float, u: float, *, sign: bool = False) -> tuple[str, st
     plus = "+" if sign else ""
     if not (math.isfinite(u) and u > 0):
         return f"{value:{plus}.4g}", "?" if not math.isfinite(u) else "0"
-    decimals = max(0, 1 - math.floor(math.log10(float(f"{u:.1e}"))))
+    decimals = decimals_for(u)
     return f"{value:{plus}.{decimals}f}", f"{u:.{decimals}f}"
+
+
+def decimals_for(u: float) -> int:
+    """Return the decimals that show an uncertainty (above 0) with two significant digits."""
+    return max(0, 1 - math.floor(math.log10(float(f"{u:.1e}"))))
 
 
 def with_uncertainty(value: float, u: float, *, sign: bool = False) -> str:
@@ -31,5 +36,4 @@ def two_digits(value: float) -> str:
         return "?"
     if value == 0:
         return "0"
-    decimals = max(0, 1 - math.floor(math.log10(float(f"{abs(value):.1e}"))))
-    return f"{value:.{decimals}f}"
+    return f"{value:.{decimals_for(abs(value))}f}"

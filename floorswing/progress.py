@@ -51,3 +51,29 @@ class Bar(AbstractContextManager["Bar"]):
         if self._bar is not None:
             self._bar.__exit__(kind, error, trace)
             self._bar = None
+
+
+class Bars(AbstractContextManager["Bars"]):
+    """One bar after the other, as work goes on from one name to the next."""
+
+    def __init__(self) -> None:
+        self._name: str | None = None
+        self._bar: Bar | None = None
+
+    def __call__(self, name: str, fraction: float) -> None:
+        """Show that `fraction` (0 to 1) of the work called `name` is done."""
+        if name != self._name or self._bar is None:
+            self.clear()
+            self._name, self._bar = name, Bar(name)
+        self._bar(fraction)
+
+    def clear(self) -> None:
+        """End the bar that is shown, so that other lines can be written."""
+        if self._bar is not None:
+            self._bar.__exit__(None, None, None)
+        self._name = self._bar = None
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.clear()

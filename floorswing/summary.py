@@ -9,7 +9,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from floorswing.matching import MISSING_TURN
-from floorswing.numbers import two_digits, with_uncertainty
+from floorswing.numbers import decimals_for, two_digits
 from floorswing.records import MeasuredTurn, Measurement
 
 LONGEST_TABLE = 30
@@ -23,7 +23,9 @@ HEADER = ("turn", "start s", "wheel deg", "heading change deg", "flags")
 
 def turns_table(turns: Sequence[MeasuredTurn]) -> str:
     """Return the turns as a table; uncertainties are expanded (twice the standard uncertainty)."""
-    rows = [_row(turn) for turn in turns]
+    known_deg = [turn.u_heading_change_deg for turn in turns if turn.u_heading_change_deg > 0]
+    decimals = decimals_for(COVERAGE * float(np.median(known_deg))) if known_deg else 3
+    rows = [_row(turn, decimals) for turn in turns]
     if len(rows) > LONGEST_TABLE:
         half = LONGEST_TABLE // 2
         rows = [*rows[:half], ("...",) * (len(HEADER) - 1) + (f"{len(rows) - 2 * half} more",), *rows[-half:]]
@@ -35,13 +37,16 @@ def turns_table(turns: Sequence[MeasuredTurn]) -> str:
     return "\n".join(lines)
 
 
-def _row(turn: MeasuredTurn) -> tuple[str, ...]:
+def _row(turn: MeasuredTurn, decimals: int) -> tuple[str, ...]:
     commanded = turn.commanded_wheel_deg
+    change, expanded = turn.heading_change_deg, COVERAGE * turn.u_heading_change_deg
+    shown = "?" if math.isnan(change) else f"{change:+.{decimals}f}"
+    uncertain = "?" if math.isnan(expanded) else f"{expanded:.{decimals}f}"
     return (
         str(turn.turn),
         f"{turn.start_s:.2f}",
         "" if math.isnan(commanded) else f"{commanded:+g}",
-        with_uncertainty(turn.heading_change_deg, COVERAGE * turn.u_heading_change_deg, sign=True),
+        f"{shown} ± {uncertain}",
         " ".join(turn.flags),
     )
 

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -12,6 +10,7 @@ import click
 
 from floorswing.cli import EXIT_SOME_FAILED, EXIT_WRONG
 from floorswing.errors import one_line
+from floorswing.progress import Bars
 
 
 @click.command(short_help="Measure the turns in clips filmed from above.")
@@ -40,7 +39,7 @@ def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as
 
     measured: list[Measurement] = []
     failed: list[Failure] = []
-    with _bars() as progress:
+    with Bars() as progress:
         for outcome in measure_each(clips, trial, out, continued=continued, progress=progress):
             progress.clear()
             if isinstance(outcome, Failure):
@@ -91,34 +90,3 @@ def _document(one: Any) -> dict[str, Any]:
         }
     )
     return document
-
-
-class _Bars:
-    """One bar after the other, as `measure_each` goes from clip to clip."""
-
-    def __init__(self) -> None:
-        self._name: str | None = None
-        self._bar: Any = None
-
-    def __call__(self, name: str, fraction: float) -> None:
-        from floorswing.progress import Bar
-
-        if name != self._name:
-            self.clear()
-            self._name, self._bar = name, Bar(name)
-        self._bar(fraction)
-
-    def clear(self) -> None:
-        """End the bar that is shown."""
-        if self._bar is not None:
-            self._bar.__exit__(None, None, None)
-        self._name = self._bar = None
-
-
-@contextmanager
-def _bars() -> Iterator[_Bars]:
-    bars = _Bars()
-    try:
-        yield bars
-    finally:
-        bars.clear()
