@@ -2,9 +2,10 @@
 
 The steps of the command line as functions, with the same defaults::
 
-    from floorswing import measure
+    from floorswing import fit, measure
 
-    measurements = measure(["cork.mp4"], "trial.toml", "out")
+    measure(["cork.mp4"], "trial.toml", "out")
+    result = fit("out")
 """
 
 from __future__ import annotations
@@ -13,14 +14,15 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from floorswing.fitting import fit as fit
     from floorswing.measuring import measure as measure
 
 __version__ = "0.1.0"
 
-_HOMES = {"measure": "floorswing.measuring"}
+_HOMES = {"fit": "floorswing.fitting", "measure": "floorswing.measuring"}
 """Where each public function lives; loaded when first asked for, since some need a second to load."""
 
-__all__ = ["__version__", "measure"]
+__all__ = ["__version__", "fit", "measure"]
 
 
 def __getattr__(name: str) -> Any:

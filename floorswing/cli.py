@@ -22,6 +22,8 @@ COMMANDS: dict[str, str] = {
     "sheets": "Make the sheets to print: robot markers and floor cards in true scale.",
     "new": "Write a trial file, asking for what it needs.",
     "measure": "Measure the turns in clips filmed from above.",
+    "fit": "Fit heading change against commanded wheel degrees.",
+    "command": "Say what to command for wanted angles.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""
 

@@ -169,7 +169,9 @@ def _start(track: CornerTrack, units: Units) -> FloatArray:
     body = track.body
     to_units = np.diag([1.0 / units.half_px, 1.0 / units.half_px, 1.0])
     to_units[:2, 2] = -units.centre_px / units.half_px
-    shape, _ = shape_from_homography(to_units @ body.plane_px @ np.diag([units.length_mm, units.length_mm, 1.0]))
+    shape, _ = shape_from_homography(
+        to_units @ body.plane_px @ np.diag([units.length_mm, units.length_mm, 1.0])
+    )
     p = np.zeros(N_GLOBAL)
     p[SHAPE] = shape
     p[BASE] = body.base_mm / units.length_mm
@@ -350,5 +352,3 @@ def covered_rad(headings_rad: FloatArray) -> float:
     around = np.sort(np.mod(headings_rad, 2.0 * np.pi))
     gaps = np.diff(np.append(around, around[0] + 2.0 * np.pi))
     return float(2.0 * np.pi - gaps.max())
-
-

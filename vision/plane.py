@@ -23,7 +23,21 @@ from vision.records import FloatArray
 N_SHAPE = 5
 PRINT_NAMES = tuple(f"{which}_print{k}" for which in ("fore", "aft") for k in range(4))
 NAMES = (
-    *("h0", "h1", "h2", "h3", "h4", "k1", "k2", "base", "fore_rad", "aft_rad", "aft_size", "lift_x", "lift_y"),
+    *(
+        "h0",
+        "h1",
+        "h2",
+        "h3",
+        "h4",
+        "k1",
+        "k2",
+        "base",
+        "fore_rad",
+        "aft_rad",
+        "aft_size",
+        "lift_x",
+        "lift_y",
+    ),
     *PRINT_NAMES,
 )
 """Global parameters in the order in which vectors hold them; lengths in units of `Units.length_mm`."""
@@ -101,7 +115,9 @@ def shape_from_homography(homography: FloatArray) -> tuple[FloatArray, FloatArra
     back = np.linalg.inv(homography)
     origin = back[:2, 2] / back[2, 2]
     w = homography[2, :2] @ origin + homography[2, 2]
-    at_origin = homography[:2, :2] / w  # the picture point is (0, 0), so the second term of the slope vanishes
+    at_origin = (
+        homography[:2, :2] / w
+    )  # the picture point is (0, 0), so the second term of the slope vanishes
     turn_rad = float(np.arctan2(-at_origin[1, 0], at_origin[1, 1]))
     c, s = np.cos(turn_rad), np.sin(turn_rad)
     if (at_origin @ np.array([c, s]))[0] < 0.0:

@@ -76,7 +76,9 @@ def _solve_chunk(track: CornerTrack, calibration: Calibration, rows: slice) -> d
     heading_rad, x_mm, y_mm = to_floor(poses, units)
     out["heading_rad"][seen], out["x_mm"][seen], out["y_mm"][seen] = heading_rad, x_mm, y_mm
     out["u_heading_rad"][seen] = np.sqrt(cov[:, 0, 0])
-    out["by_global"][seen] = np.einsum("ni,nij->nj", cov[:, 0], pull)  # the sign of y down is undone by that of -J
+    out["by_global"][seen] = np.einsum(
+        "ni,nij->nj", cov[:, 0], pull
+    )  # the sign of y down is undone by that of -J
     out["left"][seen] = np.where(mask, left, np.nan)
     out["residual_px"][seen] = np.sqrt(2.0 * np.sum(left_px**2, axis=1) / mask.sum(axis=1))
     out["scale"][seen] = _scale(observed, poses, calibration)
@@ -125,5 +127,3 @@ def _scale(observed: FloatArray, poses: FloatArray, calibration: Calibration) ->
     meant = ideal - np.nanmean(ideal, axis=1, keepdims=True)
     size: FloatArray = np.sqrt(np.nansum(around**2, axis=(1, 2)) / np.nansum(meant**2, axis=(1, 2)))
     return size
-
-

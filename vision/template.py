@@ -77,7 +77,9 @@ def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) 
     per_side = int(np.clip(3.0 * side_px, 12 * n_modules, 24 * n_modules))
     n_samples = int(np.ceil((1.0 + 2.0 * quiet) * per_side))
     unit = (np.arange(n_samples) + 0.5) / per_side - (0.5 + quiet)
-    layers = np.stack([*_blurred(black, unit, optics.blur_px / side_px), np.ones((n_samples, n_samples))], axis=-1)
+    layers = np.stack(
+        [*_blurred(black, unit, optics.blur_px / side_px), np.ones((n_samples, n_samples))], axis=-1
+    )
     channels = _processed(layers.astype(np.float32), optics, samples_per_px=per_side / side_px)
     offset = (0.5 + quiet) * per_side - 0.5
     sample_from_unit = np.array([[per_side, 0.0, offset], [0.0, per_side, offset], [0.0, 0.0, 1.0]])
@@ -92,7 +94,9 @@ def _processed(layers: NDArray[np.float32], optics: Optics, *, samples_per_px: f
         layers[..., 0] += optics.tone * grey * (1.0 - grey)
     if optics.halo:
         seen = np.ascontiguousarray(layers[..., :3])
-        wide = cv2.GaussianBlur(seen, (0, 0), optics.halo_px * samples_per_px, borderType=cv2.BORDER_REPLICATE)
+        wide = cv2.GaussianBlur(
+            seen, (0, 0), optics.halo_px * samples_per_px, borderType=cv2.BORDER_REPLICATE
+        )
         layers[..., :3] = seen + optics.halo * (seen - wide)
     return layers
 

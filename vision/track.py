@@ -76,7 +76,9 @@ class PairTracker:
         self.optics, corners_px = tune_optics(image, corners_px, modules)
         body = body_from_corners(corners_px, setup.marker_side_mm)
         if body is None:
-            raise MarkersNotFound("the two robot markers do not look like flat squares of one size side by side")
+            raise MarkersNotFound(
+                "the two robot markers do not look like flat squares of one size side by side"
+            )
         self.body = body
         self._patterns: tuple[Pattern, ...] = tuple(
             build_pattern(black, mean_side_px(corners), self.optics)
@@ -128,7 +130,13 @@ class PairTracker:
         window, before, sight = self._last
         if np.array_equal(image[window], before):
             return Sight(
-                sight.corners_px, sight.information, sight.noise_var, sight.explained, sight.contrast, 0.0, True
+                sight.corners_px,
+                sight.information,
+                sight.noise_var,
+                sight.explained,
+                sight.contrast,
+                0.0,
+                True,
             )
         return None
 

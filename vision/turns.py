@@ -266,7 +266,10 @@ def _judge(
     swell = np.sort(np.abs(seen.scale[part][seen.clear[part]] / np.nanmedian(seen.scale) - 1.0))
     lifted = float(swell[-min(FRAMES_TO_BELIEVE, len(swell))]) if len(swell) else 0.0
     if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)):
-        return "handled", f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg"
+        return (
+            "handled",
+            f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg",
+        )
     hidden_s = _hidden_s(seen, move)
     if hidden_s * FASTER * _top_rate(motion) > 180.0 and hidden_s > GAP_FRAMES * seen.frame_s:
         return "handled", (
@@ -299,9 +302,7 @@ def _hidden_s(seen: Seen, move: Stretch) -> float:
     return float(gaps.max(initial=0.0)) if len(gaps) else 0.0
 
 
-def _change_deg(
-    seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None
-) -> float:
+def _change_deg(seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None) -> float:
     start = seen.heading_deg[before.after].mean() if before else seen.heading_deg[move.first]
     end = seen.heading_deg[after.before].mean() if after else seen.heading_deg[move.last]
     return float(end - start)
