@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 
 from demo_videos.render.printed import blotches, marker_picture, modules_of, n_modules
 from demo_videos.render.scene import Camera, Card, Mount, Robot
-from demo_videos.render.sheets import BLANK, Sheet, reduced
+from demo_videos.render.sheets import BLANK, Sheet, reduced, split
 
 FloatImage = NDArray[np.float32]
 
@@ -22,9 +22,9 @@ def mm_per_px(camera: Camera, z_mm: float) -> float:
     return float(depth_mm / camera.focal_px)
 
 
-def with_levels(picture: FloatImage) -> dict[int, FloatImage]:
+def with_levels(picture: FloatImage) -> dict[int, tuple[FloatImage, FloatImage]]:
     """Return the picture for 4, 2 and 1 samples a pixel and side."""
-    return {4: picture, 2: reduced(picture, 2), 1: reduced(picture, 4)}
+    return {4: split(picture), 2: split(reduced(picture, 2)), 1: split(reduced(picture, 4))}
 
 
 def marker_sheet(
@@ -161,9 +161,9 @@ def shadow_sheet(robot: Robot) -> Sheet:
     inset = round(margin_mm * per_mm)
     picture[inset : rows - inset, inset : cols - inset, 1] = 0.62
     picture[..., 1] = cv2.GaussianBlur(picture[..., 1], (0, 0), 16.0 * per_mm)
-    picture = rimmed(picture)
+    layers = split(rimmed(picture))
     return Sheet(
-        pictures={4: picture, 2: picture, 1: picture},
+        pictures={4: layers, 2: layers, 1: layers},
         width_mm=width_mm,
         height_mm=height_mm,
         x_mm=robot.deck_centre_mm + 8.0,

@@ -87,7 +87,7 @@ def undistort(camera: Camera, x: FloatArray, y: FloatArray) -> tuple[FloatArray,
         return x, y
     rd = np.hypot(x, y)
     r = rd.copy()
-    for _ in range(5):
+    for _ in range(4):
         r2 = r * r
         value = r * (1.0 + r2 * (camera.k1 + camera.k2 * r2)) - rd
         r -= value / (1.0 + r2 * (3.0 * camera.k1 + 5.0 * camera.k2 * r2))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import cv2
 import numpy as np
@@ -15,7 +15,7 @@ from demo_videos.render.light import exposure, glint_field, moving_shadows, stan
 from demo_videos.render.motion import Motion, Poses
 from demo_videos.render.scene import Card, Occluder, Scene, Timing
 from demo_videos.render.sensor import Development, blur
-from demo_videos.render.sheets import FLOOR, Box, Carrier, Patch, Sheet, box_of, draw, extra_variance_px2
+from demo_videos.render.sheets import FLOOR, Box, Carrier, Patch, Sheet, add_change, box_of, draw, extra_variance_px2, sheet_to_camera
 
 FloatArray = NDArray[np.float64]
 FloatImage = NDArray[np.float32]
@@ -25,6 +25,8 @@ PAD_PX = 12
 BLUR_STEP_PX = 0.35
 """Motion blur is averaged over poses no further apart than this."""
 MAX_POSES = 48
+BODY_POSES = 3
+"""All but the markers is averaged over at most so many poses."""
 
 
 def render_frames(scene: Scene, motion: Motion) -> Iterator[tuple[float, CodeImage]]:
@@ -73,10 +75,13 @@ class Renderer:
         self.height, self.width = camera.height_px + 2 * PAD_PX, camera.width_px + 2 * PAD_PX
         self.whole = Box(0, self.height, 0, self.width)
         self.steady = not camera.moves and camera.stabiliser is None
+        self.view = view_at(camera, 0.0)
         self.rays = sensor_plane(camera, PAD_PX)
+        self.coarse_rays = tuple(grid.astype(np.float32) for grid in self.rays)
         self.light = standing_light(scene.light, camera, PAD_PX)
         self.floor = textures.floor_picture(scene.floor.kind, scene.floor.seed, scene.floor.contrast)
         self.sheets = artwork.robot_sheets(robot, camera, scene.seed)
+        self.plates = [sheet for sheet in self.sheets if sheet.precise]
         self.wheels = artwork.wheel_sheets(robot, camera)
         self.glints = [(glint, glint_field(glint, camera, PAD_PX)) for glint in scene.light.glints]
         self.development = Development(scene.sensor, camera.height_px, camera.width_px, scene.seed)
@@ -91,9 +96,10 @@ class Renderer:
 
     def exposed(self, time_s: float, motion: Motion) -> FloatImage:
         """Return the linear light on the sensor, without noise; shape (height, width)."""
-        sensor, camera = self.scene.sensor, self.scene.camera
+        camera = self.scene.camera
         if camera.stabiliser is not None:
             self.rays = sensor_plane(camera, PAD_PX, time_s)
+            self.coarse_rays = tuple(grid.astype(np.float32) for grid in self.rays)
         psf_px = self.psf_at(time_s)
         self.prepare_ground(time_s, psf_px)
         picture = self.soft_ground.copy()
@@ -106,7 +112,6 @@ class Renderer:
                 picture += field * np.maximum(gloss, np.float32(glint.floor_gloss))
         picture = np.ascontiguousarray(picture[PAD_PX:-PAD_PX, PAD_PX:-PAD_PX])
         self.vary_light(picture, time_s)
-        del sensor
         return picture
 
     def psf_at(self, time_s: float) -> float:
@@ -123,13 +128,12 @@ class Renderer:
 
     def vary_light(self, picture: FloatImage, time_s: float) -> None:
         """Apply exposure, flicker and moving shadows in place."""
-        light, sensor = self.scene.light, self.scene.sensor
+        light = self.scene.light
         shadows = moving_shadows(light, self.scene.camera, time_s)
         if shadows is not None:
             picture *= shadows
         if light.flicker or light.exposure_steps:
             picture *= exposure(light, time_s + self.row_delays(0))[:, None].astype(np.float32)
-        del sensor
 
     def row_delays(self, pad_px: int) -> FloatArray:
         """Return when each row is taken, relative to the middle row, in s."""
@@ -148,7 +152,8 @@ class Renderer:
     def instant(self, times: FloatArray, motion: Motion) -> Instant:
         """Return camera and body at the given times."""
         poses = motion.at(times)
-        return Instant(view_at(self.scene.camera, times), body_carrier(poses), poses)
+        view = self.view if not self.scene.camera.moves else view_at(self.scene.camera, times)
+        return Instant(view, body_carrier(poses), poses)
 
     # --- the floor with its cards ---
 
@@ -183,7 +188,7 @@ class Renderer:
     def draw_ground(self, view: View, cards: tuple[Card, ...], samples: int) -> FloatImage:
         """Return the reflectance of floor and cards."""
         ground = draw_floor(self.scene, self.floor, self.rays, view, samples)
-        patch = Patch(0, 0, *self.rays, ground)
+        patch = Patch(0, 0, *self.rays, *self.coarse_rays, ground)
         for card in cards:
             sheet = artwork.card_sheet(card, self.scene.robot, self.scene.camera, self.scene.seed)
             box = box_of(sheet, FLOOR, view, self.scene.camera, PAD_PX)
@@ -215,61 +220,97 @@ class Renderer:
         self, time_s: float, motion: Motion, span: Instant, still: bool, psf_px: float
     ) -> tuple[Box, FloatImage, FloatImage | None]:
         """Return the changed part of the picture as light on the sensor, and its gloss."""
-        boxes, count = self.cart_boxes(span, still)
+        boxes = self.cart_boxes(span)
+        whole = boxes[0]
+        for box in boxes[1:]:
+            whole = whole.joined(box)
         margin = int(np.ceil(4.5 * psf_px)) + 2
-        inner = boxes.grown(margin, self.height, self.width)
+        inner = whole.grown(margin, self.height, self.width)
         outer = inner.grown(margin, self.height, self.width)
-        if boxes.empty:
+        if whole.empty:
             return inner, self.light[:0, :0], None
+        count = self.cart_poses(span, still)
         samples = 4 if count <= 2 else 2
         area = slice(outer.top, outer.bottom), slice(outer.left, outer.right)
-        total = np.zeros(self.ground[area].shape, dtype=np.float32)
-        shine = np.zeros_like(total) if self.glints else None
-        for sub_time_s in self.sub_times(time_s, count):
-            times = np.array([sub_time_s])
-            if self.scene.sensor.line_delay_s and not still:
-                times = sub_time_s + self.row_delays(PAD_PX)
-            light = self.ground[area].copy()
-            patch = Patch(outer.top, outer.left, self.rays[0][area], self.rays[1][area], light)
-            patch.gloss = None if shine is None else np.zeros_like(total)
-            self.draw_body(patch, self.instant(times, motion), samples)
-            total += patch.light
-            if shine is not None and patch.gloss is not None:
-                shine += patch.gloss / np.float32(count)
+        total = self.exposed_cart(self.patch_at(outer), boxes, time_s, motion, still, count, samples)
         sigma = float(np.sqrt(max(psf_px**2 - extra_variance_px2(samples), 0.0)))
-        soft = blur(total / np.float32(count) * self.light[area], sigma)
-        cut = (
-            slice(inner.top - outer.top, inner.bottom - outer.top),
-            slice(inner.left - outer.left, inner.right - outer.left),
-        )
-        return inner, soft[cut], None if shine is None else shine[cut]
+        soft = blur(total.light * self.light[area], sigma)
+        cut = total.area(inner)
+        return inner, soft[cut], None if total.gloss is None else total.gloss[cut]
 
-    def cart_boxes(self, span: Instant, still: bool) -> tuple[Box, int]:
-        """Return the part of the picture that the cart touches, and how many sub-exposures it needs."""
-        camera = self.scene.camera
-        box = Box(0, 0, 0, 0)
-        for sheet in (*self.sheets, *(wheel[0] for wheel in self.wheels)):
-            box = box.joined(box_of(sheet, span.body, span.view, camera, PAD_PX))
-        if still or not self.scene.sensor.exposure_s:
-            return box, 1
+    def patch_at(self, box: Box) -> Patch:
+        """Return the ground in a box as a patch to draw on."""
+        area = slice(box.top, box.bottom), slice(box.left, box.right)
+        gloss = np.zeros(self.ground[area].shape, dtype=np.float32) if self.glints else None
+        rays = (grid[area] for grid in (*self.rays, *self.coarse_rays))
+        return Patch(box.top, box.left, *rays, self.ground[area].copy(), gloss)
+
+    def exposed_cart(
+        self,
+        ground: Patch,
+        boxes: list[Box],
+        time_s: float,
+        motion: Motion,
+        still: bool,
+        count: int,
+        samples: int,
+    ) -> Patch:
+        """Return the ground with the cart averaged over the exposure; only markers are drawn at all its poses."""
+        middle = self.instant_at(time_s, motion, still)
+        draw(ground, self.sheets[0], middle.body, middle.view, boxes[0], 1)
+        total = ground.copy()
+        total.light[:] = 0.0
+        times = self.sub_times(time_s, count)
+        for group in np.array_split(times, min(count, BODY_POSES)):
+            base = ground.copy()
+            instant = middle if count == 1 else self.instant_at(float(group.mean()), motion, still)
+            self.paint_body(base, boxes, instant, 4 if samples == 4 else 1)
+            total.light += base.light * np.float32(len(group))
+            if total.gloss is not None and base.gloss is not None:
+                total.gloss += base.gloss * np.float32(len(group))
+            for sub_time_s in group:
+                exact = middle if count == 1 else self.instant_at(float(sub_time_s), motion, still)
+                for sheet, box in zip(self.sheets, boxes, strict=False):
+                    if sheet.precise:
+                        add_change(total, base, sheet, exact.body, exact.view, box, samples)
+        total.light /= np.float32(count)
+        if total.gloss is not None:
+            total.gloss /= np.float32(count)
+        return total
+
+    def instant_at(self, time_s: float, motion: Motion, still: bool) -> Instant:
+        """Return camera and body at one time, or at each row's time with a rolling shutter."""
+        if self.scene.sensor.line_delay_s and not still:
+            return self.instant(time_s + self.row_delays(PAD_PX), motion)
+        return self.instant(np.array([time_s]), motion)
+
+    def cart_boxes(self, span: Instant) -> list[Box]:
+        """Return what each sheet, then each wheel, can touch in the padded picture during the frame."""
+        sheets = [*self.sheets, *(wheel[0] for wheel in self.wheels)]
+        return [box_of(sheet, span.body, span.view, self.scene.camera, PAD_PX) for sheet in sheets]
+
+    def cart_poses(self, span: Instant, still: bool) -> int:
+        """Return how many sub-exposures the motion blur needs."""
         exposure_s = self.scene.sensor.exposure_s
+        if still or not exposure_s:
+            return 1
         reach_s = exposure_s + 2.0 * abs(float(self.row_delays(PAD_PX)[0]))
-        shifts = [sheet_shift_px(self.scene.camera, sheet, span) for sheet in self.sheets]
-        return box, poses_for(max(shifts) * exposure_s / reach_s)
+        shifts = [sheet_shift_px(self.scene.camera, sheet, span) for sheet in self.plates]
+        return poses_for(max(shifts) * exposure_s / reach_s)
 
-    def draw_body(self, patch: Patch, instant: Instant, samples: int) -> None:
-        """Draw all of the cart's sheets for one sub-exposure."""
-        camera = self.scene.camera
-        coarse = 4 if samples == 4 else 1
+    def paint_body(self, patch: Patch, boxes: list[Box], instant: Instant, samples: int) -> None:
+        """Draw what lies between shadow and markers, from below, with the wheels' treads as they are."""
         middle = len(instant.poses.x_mm) // 2
-        shadow, low, *upper = self.sheets
-        wheels = [
-            wheel[tread_phase(instant.poses.wheel_deg[side, middle], self.scene.robot.wheel_diameter_mm)]
-            for side, wheel in enumerate(self.wheels)
+        drawn = [
+            (sheet, box)
+            for sheet, box in zip(self.sheets[1:], boxes[1:], strict=False)
+            if not sheet.precise
         ]
-        for sheet in (shadow, low, *wheels, *upper):
-            box = box_of(sheet, instant.body, instant.view, camera, PAD_PX)
-            draw(patch, sheet, instant.body, instant.view, box, samples if sheet.precise else coarse)
+        for side, wheel in enumerate(self.wheels):
+            phase = tread_phase(instant.poses.wheel_deg[side, middle], self.scene.robot.wheel_diameter_mm)
+            drawn.insert(1, (wheel[phase], boxes[len(self.sheets) + side]))
+        for sheet, box in drawn:
+            draw(patch, sheet, instant.body, instant.view, box, samples)
 
 
 def draw_floor(
@@ -301,8 +342,6 @@ def draw_floor(
 
 def card_now(card: Card, time_s: float) -> Card:
     """Return the card where it lies at a time."""
-    from dataclasses import replace
-
     for shift in card.shifts:
         if time_s >= shift.time_s:
             card = replace(
@@ -317,10 +356,12 @@ def card_now(card: Card, time_s: float) -> Card:
 def body_carrier(poses: Poses) -> Carrier:
     """Return the body's rotation (yaw, then pitch, then roll) and origin."""
     zero = np.zeros_like(poses.heading_rad)
-    yaw = rotation_matrices(np.stack([zero, zero, poses.heading_rad], axis=1))
-    pitch = rotation_matrices(np.stack([zero, poses.pitch_rad, zero], axis=1))
-    roll = rotation_matrices(np.stack([poses.roll_rad, zero, zero], axis=1))
-    return Carrier(yaw @ pitch @ roll, np.stack([poses.x_mm, poses.y_mm, poses.lift_mm], axis=1))
+    rotation = rotation_matrices(np.stack([zero, zero, poses.heading_rad], axis=1))
+    if poses.pitch_rad.any() or poses.roll_rad.any():
+        pitch = rotation_matrices(np.stack([zero, poses.pitch_rad, zero], axis=1))
+        roll = rotation_matrices(np.stack([poses.roll_rad, zero, zero], axis=1))
+        rotation = rotation @ pitch @ roll
+    return Carrier(rotation, np.stack([poses.x_mm, poses.y_mm, poses.lift_mm], axis=1))
 
 
 def pose_rows(poses: Poses) -> tuple[FloatArray, ...]:
@@ -337,8 +378,6 @@ def poses_for(blur_px: float) -> int:
 
 def sheet_shift_px(camera: object, sheet: Sheet, span: Instant) -> float:
     """Return how far the sheet's farthest corner travels in the picture over the span."""
-    from demo_videos.render.sheets import sheet_to_camera
-
     corners = np.array([[-0.5, 0.5, 0.5, -0.5], [-0.5, -0.5, 0.5, 0.5], [1.0] * 4])
     corners[0] *= sheet.width_mm
     corners[1] *= sheet.height_mm

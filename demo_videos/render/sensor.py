@@ -32,7 +32,7 @@ class Development:
     def __init__(self, sensor: Sensor, height_px: int, width_px: int, seed: int) -> None:
         self.sensor = sensor
         self.rng = np.random.default_rng([seed, 78])
-        low, high = (0.0, 255.0) if sensor.full_range else (16.0, 235.0)
+        low, high = code_range(sensor)
         self.low, self.span = low, high - low
         self.noise = sensor.noise_grey / self.span
         self.bank = self.rng.standard_normal((height_px + 401, width_px + 401), dtype=np.float32) * self.noise
@@ -47,36 +47,50 @@ class Development:
             soft = blur(code, sensor.sharpen_radius_px)
             code = cv2.addWeighted(code, 1.0 + sensor.sharpen, soft, -sensor.sharpen, 0.0)
         top = 255.0 * self.depth if sensor.bits == 8 else 1023.0
-        code = np.clip(code * np.float32(self.depth), 0.0, top)
+        if self.depth > 1:
+            code *= np.float32(self.depth)
+        np.maximum(code, np.float32(0.0), out=code)
+        np.minimum(code, np.float32(top), out=code)
         np.rint(code, out=code)
         return code.astype(np.uint8 if sensor.bits == 8 else np.uint16)
 
     def with_noise(self, light: FloatImage) -> FloatImage:
-        """Add sensor noise: a window of the bank at a random place and sign."""
+        """Return the light with sensor noise: a window of the bank at a random place and sign."""
         if self.noise == 0.0:
-            return light
+            return light.copy()
         height, width = light.shape
         row, col = self.rng.integers(0, 401, 2)
         window = self.bank[row : row + height, col : col + width]
-        sign = np.float32(self.rng.choice((-1.0, 1.0)))
         share = np.float32(self.sensor.shot_share)
         if share:
             window = window * np.sqrt((1 - share) + share * 2.0 * np.maximum(light, 0.0))
-        return np.asarray(cv2.scaleAdd(np.ascontiguousarray(window), float(sign), light), dtype=np.float32)
+        out = np.subtract(light, window) if self.rng.random() < 0.5 else np.add(light, window)
+        return np.asarray(out, dtype=np.float32)
 
     def toned(self, light: FloatImage) -> FloatImage:
-        """Apply the tone curve and the range."""
+        """Apply the tone curve and the range, in place where possible."""
+        np.maximum(light, np.float32(0.0), out=light)
         if self.curve is None:
-            return np.clip(light, 0.0, 1.0) * np.float32(self.span) + np.float32(self.low)
-        index = np.clip(light * np.float32((LUT_STEPS - 1) / LIGHT_TOP), 0, LUT_STEPS - 1).astype(np.uint16)
-        return np.asarray(self.curve[index], dtype=np.float32) * np.float32(self.span) + np.float32(self.low)
+            np.minimum(light, np.float32(1.0), out=light)
+            light *= np.float32(self.span)
+            light += np.float32(self.low)
+            return light
+        np.minimum(light, np.float32(LIGHT_TOP), out=light)
+        light *= np.float32((LUT_STEPS - 1) / LIGHT_TOP)
+        return np.asarray(np.take(self.curve, light.astype(np.uint16)), dtype=np.float32)
 
 
 def tone_curve(sensor: Sensor) -> FloatImage | None:
-    """Return the tone curve on `LUT_STEPS` levels of light, or None when it is straight."""
+    """Return code values on `LUT_STEPS` levels of light, or None when it is straight."""
     if sensor.gamma == 1.0 and sensor.s_curve == 0.0:
         return None
-    light = np.clip(np.linspace(0.0, LIGHT_TOP, LUT_STEPS), 0.0, 1.0)
+    light = np.clip((np.arange(LUT_STEPS) + 0.5) * (LIGHT_TOP / (LUT_STEPS - 1)), 0.0, 1.0)
     value = light ** (1.0 / sensor.gamma)
     bent = value * value * (3.0 - 2.0 * value)
-    return ((1.0 - sensor.s_curve) * value + sensor.s_curve * bent).astype(np.float32)
+    low, high = code_range(sensor)
+    return (low + (high - low) * ((1.0 - sensor.s_curve) * value + sensor.s_curve * bent)).astype(np.float32)
+
+
+def code_range(sensor: Sensor) -> tuple[float, float]:
+    """Return the 8-bit code values of black and of full scale."""
+    return (0.0, 255.0) if sensor.full_range else (16.0, 235.0)

@@ -8,7 +8,7 @@ with linear interpolation, and the samples of a pixel are averaged. A straight e
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import cv2
 import numpy as np
@@ -28,8 +28,8 @@ BLANK = 2
 class Sheet:
     """A flat picture at a place in its carrier's frame (robot or floor); x to the right of the print, y up."""
 
-    pictures: dict[int, FloatImage]
-    """Samples a pixel and side -> picture (h, w, 2) of premultiplied reflectance and opacity, blank rim included."""
+    pictures: dict[int, tuple[FloatImage, FloatImage]]
+    """Samples a pixel and side -> reflectance times opacity, and opacity, both (h, w) with a blank rim."""
     width_mm: float
     height_mm: float
     """Size of the content, rim left out."""
@@ -65,14 +65,40 @@ FLOOR = Carrier(np.eye(3)[None], np.zeros((1, 3)))
 
 @dataclass(eq=False)
 class Patch:
-    """A piece of the padded picture being drawn: reflectance, gloss, and the pixels' undistorted coordinates."""
+    """A piece of the padded picture being drawn: its place, the pixels' undistorted coordinates, its content."""
 
     row: int
     col: int
     rays_x: FloatArray
     rays_y: FloatArray
+    coarse_x: FloatImage
+    coarse_y: FloatImage
+    """The same in single precision, for what need not be exact."""
     light: FloatImage
+    """Reflectance."""
     gloss: FloatImage | None = None
+
+    def copy(self) -> Patch:
+        """Return a patch with the same content to draw on."""
+        gloss = None if self.gloss is None else self.gloss.copy()
+        return replace(self, light=self.light.copy(), gloss=gloss)
+
+    def inside(self, box: Box) -> Box:
+        """Return the part of a box of the padded picture that lies in this patch."""
+        height, width = self.light.shape
+        return Box(
+            max(box.top, self.row),
+            min(box.bottom, self.row + height),
+            max(box.left, self.col),
+            min(box.right, self.col + width),
+        )
+
+    def area(self, box: Box) -> tuple[slice, slice]:
+        """Return the slices of this patch's arrays for a box that lies in it."""
+        return (
+            slice(box.top - self.row, box.bottom - self.row),
+            slice(box.left - self.col, box.right - self.col),
+        )
 
 
 @dataclass(frozen=True)
@@ -148,25 +174,39 @@ def box_of(sheet: Sheet, carrier: Carrier, view: View, camera: Camera, pad_px: i
 
 def draw(patch: Patch, sheet: Sheet, carrier: Carrier, view: View, box: Box, samples: int) -> None:
     """Draw a sheet over a patch. With several instants there is one for each row of the padded picture."""
-    height, width = patch.light.shape
-    box = Box(
-        max(box.top, patch.row),
-        min(box.bottom, patch.row + height),
-        max(box.left, patch.col),
-        min(box.right, patch.col + width),
-    )
+    box = patch.inside(box)
     if box.empty:
         return
-    rows = slice(box.top - patch.row, box.bottom - patch.row)
-    cols = slice(box.left - patch.col, box.right - patch.col)
-    picked = slice(box.top, box.bottom)
-    rays = patch.rays_x[rows, cols], patch.rays_y[rows, cols]
-    x_mm, y_mm = sheet_coordinates(sheet, carrier.rows(picked), view.rows(picked), *rays)
-    drawn = sample(sheet, x_mm, y_mm, samples)
-    clear = 1.0 - drawn[..., 1]
-    patch.light[rows, cols] = patch.light[rows, cols] * clear + drawn[..., 0]
+    area = patch.area(box)
+    value, opacity = seen(patch, sheet, carrier, view, box, samples)
+    patch.light[area] += value - opacity * patch.light[area]
     if patch.gloss is not None:
-        patch.gloss[rows, cols] = patch.gloss[rows, cols] * clear + sheet.gloss * drawn[..., 1]
+        patch.gloss[area] += opacity * (sheet.gloss - patch.gloss[area])
+
+
+def add_change(
+    total: Patch, base: Patch, sheet: Sheet, carrier: Carrier, view: View, box: Box, samples: int
+) -> None:
+    """Add to a running sum what a sheet over `base` changes in it."""
+    box = base.inside(box)
+    if box.empty:
+        return
+    area = base.area(box)
+    value, opacity = seen(base, sheet, carrier, view, box, samples)
+    total.light[area] += value - opacity * base.light[area]
+    if total.gloss is not None and base.gloss is not None:
+        total.gloss[area] += opacity * (sheet.gloss - base.gloss[area])
+
+
+def seen(
+    patch: Patch, sheet: Sheet, carrier: Carrier, view: View, box: Box, samples: int
+) -> tuple[FloatImage, FloatImage]:
+    """Return the sheet's light and opacity in a box inside the patch."""
+    area = patch.area(box)
+    picked = slice(box.top, box.bottom)
+    rays = (patch.rays_x, patch.rays_y) if sheet.precise else (patch.coarse_x, patch.coarse_y)
+    x_mm, y_mm = sheet_coordinates(sheet, carrier.rows(picked), view.rows(picked), rays[0][area], rays[1][area])
+    return sample(sheet, x_mm, y_mm, samples)
 
 
 def sheet_coordinates(
@@ -187,7 +227,7 @@ def sheet_coordinates(
 
 def across(maps: FloatArray, rays_x: FloatArray, rays_y: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Apply the inverse of one map, or of one map a row, to undistorted coordinates."""
-    m = np.linalg.inv(maps)[:, :, :, None]
+    m = np.linalg.inv(maps)[:, :, :, None].astype(rays_x.dtype)
     w = m[:, 2, 0] * rays_x + m[:, 2, 1] * rays_y + m[:, 2, 2]
     return (
         (m[:, 0, 0] * rays_x + m[:, 0, 1] * rays_y + m[:, 0, 2]) / w,
@@ -195,21 +235,36 @@ def across(maps: FloatArray, rays_x: FloatArray, rays_y: FloatArray) -> tuple[Fl
     )
 
 
-def sample(sheet: Sheet, x_mm: FloatArray, y_mm: FloatArray, samples: int) -> FloatImage:
-    """Return the pixel averages (h, w, 2) of the sheet's picture."""
-    picture = sheet.pictures[samples]
-    rows, cols = picture.shape[0] - 2 * BLANK, picture.shape[1] - 2 * BLANK
+def sample(
+    sheet: Sheet, x_mm: FloatArray, y_mm: FloatArray, samples: int
+) -> tuple[FloatImage, FloatImage]:
+    """Return the pixel averages of the sheet's reflectance times opacity, and of its opacity.
+
+    One channel at a time: with several, OpenCV rounds the coordinates to 1/32 texel.
+    """
+    value, opacity = sheet.pictures[samples]
+    rows, cols = value.shape[0] - 2 * BLANK, value.shape[1] - 2 * BLANK
     col = ((x_mm / sheet.width_mm + 0.5) * cols + (BLANK - 0.5)).astype(np.float32)
     row = ((0.5 - y_mm / sheet.height_mm) * rows + (BLANK - 0.5)).astype(np.float32)
-    size = (col.shape[1], col.shape[0])
     if samples > 1:
-        fine = (size[0] * samples, size[1] * samples)
+        fine = (col.shape[1] * samples, col.shape[0] * samples)
         col = cv2.resize(col, fine, interpolation=cv2.INTER_LINEAR)
         row = cv2.resize(row, fine, interpolation=cv2.INTER_LINEAR)
+    return looked_up(value, col, row, samples), looked_up(opacity, col, row, samples)
+
+
+def looked_up(picture: FloatImage, col: FloatImage, row: FloatImage, samples: int) -> FloatImage:
+    """Return a picture's values at the samples, averaged over each pixel."""
     values = cv2.remap(picture, col, row, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT, borderValue=0)
     if samples > 1:
+        size = (col.shape[1] // samples, col.shape[0] // samples)
         values = cv2.resize(values, size, interpolation=cv2.INTER_AREA)
     return np.asarray(values, dtype=np.float32)
+
+
+def split(picture: FloatImage) -> tuple[FloatImage, FloatImage]:
+    """Return the two layers of a picture (h, w, 2) as arrays of their own."""
+    return np.ascontiguousarray(picture[..., 0]), np.ascontiguousarray(picture[..., 1])
 
 
 def reduced(picture: FloatImage, factor: int) -> FloatImage:

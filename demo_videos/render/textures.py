@@ -6,6 +6,7 @@ from functools import lru_cache
 
 import cv2
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 
 FloatImage = NDArray[np.float32]
@@ -36,9 +37,10 @@ def grains(rng: np.random.Generator, along_mm: float, across_mm: float | None = 
     across_mm = along_mm if across_mm is None else across_mm
     hz_x = np.fft.rfftfreq(TILE_TEXELS, TEXEL_MM)[None, :]
     hz_y = np.fft.fftfreq(TILE_TEXELS, TEXEL_MM)[:, None]
-    low_pass = np.exp(-2.0 * np.pi**2 * ((along_mm * hz_x) ** 2 + (across_mm * hz_y) ** 2))
+    exponent = -2.0 * np.pi**2
+    low_pass = np.exp(exponent * (along_mm * hz_x) ** 2) * np.exp(exponent * (across_mm * hz_y) ** 2)
     white = rng.standard_normal((TILE_TEXELS, TILE_TEXELS), dtype=np.float32)
-    field = np.fft.irfft2(np.fft.rfft2(white) * low_pass, s=white.shape)
+    field = scipy.fft.irfft2(scipy.fft.rfft2(white) * low_pass.astype(np.float32), s=white.shape)
     return np.asarray((field - field.mean()) / field.std(), dtype=np.float32)
 
 
