@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.bundle import Calibration
+from vision.lag import Lag
 from vision.plane import AFT_SIZE, BASE, LENS, LIFT, PRINT, SHAPE
 from vision.records import Contribution, FloatArray
 from vision.rests import Stretch
@@ -39,11 +40,14 @@ class RestHeading:
     Parameters
     ----------
     still : Stretch
+    lags : bool
+        Whether the coded picture may lag behind: a motion came before, and no key frame since.
     before, after : ndarray of int
         Frames averaged as the end of the turn before this rest, and as the start of the turn after.
     """
 
     still: Stretch
+    lags: bool
     before: NDArray[np.intp]
     after: NDArray[np.intp]
 
@@ -103,6 +107,7 @@ def change_uncertainty(
     after: RestHeading,
     cov: FloatArray,
     clip_share: float,
+    lag: Lag,
     *,
     camera_still: bool,
 ) -> float:
@@ -111,6 +116,7 @@ def change_uncertainty(
         rest_variance_deg2(seen, frames, clip_share, camera_still=camera_still)
         for frames in (before.after, after.before)
     )
+    total += (before.lags + after.lags) * lag.u_deg**2
     lever = seen.by_global[after.before].mean(axis=0) - seen.by_global[before.after].mean(axis=0)
     return float(np.sqrt(total + lever @ cov @ lever))
 

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.budget import RestHeading, change_uncertainty, pooled_share
+from vision.lag import Lag, coding_lag, key_place
 from vision.observations import CornerTrack
 from vision.poses import Poses
 from vision.records import Event, FloatArray, Turn
@@ -29,9 +30,6 @@ LONGEST_REST_S = 2.0
 CODING_LAG_S = 0.4
 LAG_SHARE = 0.5
 """A coded picture settles only some time after the motion has stopped; that much of a rest is passed over."""
-
-FEWEST_AFTER_KEY = 3
-"""Frames after a key frame that are enough to do without those before it."""
 
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
@@ -75,8 +73,8 @@ class Seen:
         Whitened corner residuals, NaN for a marker not seen.
     clear, is_key : ndarray of bool, shape (N,)
         Whether both markers were in full view; whether the frame was coded without reference to others.
-    reach_mm : float
-        Distance of the markers from the middle of the pair.
+    reach_mm, reach_px : float
+        Distance of the markers from the middle of the pair, on the deck and, usually, in the picture.
     end_s : float
         Time of the last frame of the clip, seen or not.
     frame_s : float
@@ -96,6 +94,7 @@ class Seen:
     clear: NDArray[np.bool_]
     is_key: NDArray[np.bool_]
     reach_mm: float
+    reach_px: float
     end_s: float
     frame_s: float
 
@@ -123,9 +122,15 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
         clear=_clear(corners)[known],
         is_key=corners.is_key[known],
         reach_mm=0.5 * corners.body.base_mm,
+        reach_px=_reach_px(corners),
         end_s=float(corners.time_s[-1]),
         frame_s=frame_s,
     )
+
+
+def _reach_px(corners: CornerTrack) -> float:
+    apart = corners.corners_px[:, 0].mean(axis=1) - corners.corners_px[:, 1].mean(axis=1)
+    return 0.5 * float(np.nanmedian(np.hypot(apart[:, 0], apart[:, 1])))
 
 
 def _clear(corners: CornerTrack) -> NDArray[np.bool_]:
@@ -148,6 +153,7 @@ class Split:
     states: tuple[str, ...]
     rests: tuple[RestHeading, ...]
     motion: Motion
+    lag: Lag
 
 
 def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Split:
@@ -166,9 +172,10 @@ def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Sp
     moves = stretches(moving)
     rests = _rests_around(seen, moves)
     share = pooled_share(seen.left, [rest for rest in rests if rest is not None])
+    lag = lag_of(seen, [rest for rest in rests[1:] if rest is not None])
 
     def uncertainty(before: RestHeading, after: RestHeading) -> float:
-        return change_uncertainty(seen, before, after, cov, share, camera_still=camera_still)
+        return change_uncertainty(seen, before, after, cov, share, lag, camera_still=camera_still)
 
     turns: list[Turn] = []
     events: list[Event] = []
@@ -190,7 +197,14 @@ def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Sp
         states=tuple(str(state) for state in states),
         rests=kept,
         motion=motion,
+        lag=lag,
     )
+
+
+def lag_of(seen: Seen, rests: list[RestHeading]) -> Lag:
+    """Return the coding lag of a clip from its rests that follow a motion."""
+    stills = [np.arange(rest.still.first, rest.still.last + 1) for rest in rests]
+    return coding_lag(seen, stills, CODING_LAG_S)
 
 
 def _jumped(seen: Seen, motion: Motion) -> NDArray[np.bool_]:
@@ -226,8 +240,10 @@ def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) 
     still = Stretch(first, last)
     if seen.time_s[last] - seen.time_s[first] < 0.5 * SHORTEST_REST_S:
         return None
+    frames = np.arange(first, last + 1)
     return RestHeading(
         still=still,
+        lags=not from_start and key_place(seen, frames) is None,
         before=_side(seen, still, late=False, from_start=from_start),
         after=_side(seen, still, late=True, from_start=from_start),
     )
@@ -248,9 +264,9 @@ def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
 
     A coder refines a picture that has come to rest only slowly; the next key frame is coded afresh.
     """
-    keys = np.flatnonzero(seen.is_key[frames])
-    if len(keys) and len(frames) - keys[0] >= FEWEST_AFTER_KEY:
-        return frames[keys[0] :]
+    place = key_place(seen, frames)
+    if place is not None:
+        return frames[place:]
     since_s = seen.time_s[frames] - seen.time_s[frames[0]]
     return frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
 
