@@ -88,9 +88,7 @@ def command_for(
 
 def _signed(wheel: Estimate, side: float) -> Estimate:
     ends = sorted((side * wheel.low, side * wheel.high))
-    return Estimate(
-        value=side * wheel.value, u=wheel.u, low=ends[0], high=ends[1], confidence=wheel.confidence
-    )
+    return Estimate(value=side * wheel.value, u=wheel.u, low=ends[0], high=ends[1], confidence=wheel.confidence)
 
 
 def tells_reversal(fit: Fit) -> bool:

@@ -119,13 +119,9 @@ class Fit:
     def gain(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate:
         """Return heading change per wheel degree (deg/deg)."""
         row = self.gain_row(side)
-        return t_estimate(
-            float(row @ self.coefficients), float(np.sqrt(row @ self.cov @ row)), self.dof, confidence
-        )
+        return t_estimate(float(row @ self.coefficients), float(np.sqrt(row @ self.cov @ row)), self.dof, confidence)
 
-    def dead_band_wheel_deg(
-        self, side: float | None = None, confidence: float = CONFIDENCE
-    ) -> Estimate | None:
+    def dead_band_wheel_deg(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate | None:
         """Return the wheel degrees lost at a reversal; None where the model has none."""
         if not self.model.dead_band:
             return None
@@ -219,9 +215,7 @@ def design_of(turns: Turns, model: Model) -> FloatArray:
 def _fit_model(turns: Turns, model: Model) -> ScatterFit | None:
     along = turns.heading_deg * turns.side
     try:
-        return fit_with_scatter(
-            design_of(turns, model), along, turns.u_deg, np.abs(turns.heading_deg), model.law
-        )
+        return fit_with_scatter(design_of(turns, model), along, turns.u_deg, np.abs(turns.heading_deg), model.law)
     except (CalibError, FloatingPointError):
         return None
 
@@ -239,9 +233,7 @@ def _made(
 ) -> Fit:
     linear = scatter.linear
     if linear.coefficients[0] <= 0.0:
-        raise CalibError(
-            "the robot turned against its commands, or not at all; check the signs of the commands"
-        )
+        raise CalibError("the robot turned against its commands, or not at all; check the signs of the commands")
     size = np.abs(turns.wheel_deg)
     return Fit(
         model=model,
@@ -272,9 +264,7 @@ def _notes(turns: Turns, used: Turns, can_tell: bool) -> tuple[str, ...]:
     if np.ptp(np.abs(turns.wheel_deg)) == 0.0:
         notes.append("all commands have one size, so a gain that depends on the size cannot be seen")
     if len(used) < len(turns):
-        notes.append(
-            f"{len(turns) - len(used)} turns with unknown slack were left out of the fit of the dead band"
-        )
+        notes.append(f"{len(turns) - len(used)} turns with unknown slack were left out of the fit of the dead band")
     return tuple(notes)
 
 

@@ -140,21 +140,15 @@ def _checked(heading: ArrayLike, u_heading: ArrayLike, wheel: ArrayLike, usable:
     u_deg = np.array(u_heading, dtype=np.float64).reshape(-1)
     wheel_deg = np.array(wheel, dtype=np.float64).reshape(-1)
     if u_deg.shape != heading_deg.shape:
-        raise CalibError(
-            f"{heading_deg.size} turns came with {u_deg.size} uncertainties; one for each is needed"
-        )
+        raise CalibError(f"{heading_deg.size} turns came with {u_deg.size} uncertainties; one for each is needed")
     if not np.all(np.isfinite(wheel_deg) & (wheel_deg != 0)):
         where = int(np.flatnonzero(~(np.isfinite(wheel_deg) & (wheel_deg != 0)))[0])
-        raise CalibError(
-            f"command {where + 1} is {wheel_deg[where]:g} wheel degrees; a command is finite and not zero"
-        )
+        raise CalibError(f"command {where + 1} is {wheel_deg[where]:g} wheel degrees; a command is finite and not zero")
     mask = np.isfinite(heading_deg)
     if usable is not None:
         given = np.array(usable, dtype=bool).reshape(-1)
         if given.shape != heading_deg.shape:
-            raise CalibError(
-                f"{heading_deg.size} turns came with {given.size} usable marks; one for each is needed"
-            )
+            raise CalibError(f"{heading_deg.size} turns came with {given.size} usable marks; one for each is needed")
         mask &= given
     u_deg = np.where(np.isfinite(u_deg) & (u_deg >= 0), u_deg, 0.0)
     sign = np.sign(wheel_deg)

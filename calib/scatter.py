@@ -42,9 +42,7 @@ class ScatterFit:
     log_likelihood: float
 
 
-def fit_with_scatter(
-    design: FloatArray, data: FloatArray, u: FloatArray, size: FloatArray, law: str
-) -> ScatterFit:
+def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: FloatArray, law: str) -> ScatterFit:
     """Fit a line and the scatter about it by residual maximum likelihood (Patterson and Thompson 1971).
 
     Parameters

@@ -76,7 +76,7 @@ DEMOS = (
         drive=Drive(contact_scatter=0.008, contact_wander=0.006),
         wheel_deg=CALM,
         seed=21,
-        crf=26.0,
+        crf=28.0,
     ),
     DemoScene(
         name="rubber_rough",
@@ -101,7 +101,7 @@ DEMOS = (
         ),
         wheel_deg=ROUGH,
         seed=22,
-        crf=26.0,
+        crf=27.0,
     ),
     DemoScene(
         name="lino_mixed",
@@ -119,7 +119,7 @@ DEMOS = (
         drive=Drive(contact_scatter=0.012, contact_wander=0.008, backlash_wheel_deg=2.5, rate_wheel_deg_s=230.0),
         wheel_deg=MIXED,
         seed=23,
-        crf=26.0,
+        crf=27.0,
     ),
 )
 
@@ -170,7 +170,7 @@ def make(demo: DemoScene, folder: Path) -> Path:
     """Render one clip into `folder` with its trial file and truth; return the clip's path."""
     clip = folder / f"{demo.name}.mp4"
     motion = spin_motion(demo.wheel_deg, drive=demo.drive, seed=demo.seed, rest_s=REST_S, start=(15.0, -10.0, 20.0))
-    truth = render_clip(demo.scene, motion, clip, crf=demo.crf, preset="slow", gop=60)
+    truth = render_clip(demo.scene, motion, clip, crf=demo.crf, preset="slow", gop=30)
     clip.with_name(f"{clip.name}.truth.json").unlink()
     (folder / f"{demo.name}.toml").write_text(trial_text(demo), encoding="utf-8")
     write_truth_table(folder / f"{demo.name}.truth.csv", truth)

@@ -113,9 +113,7 @@ def measured_folders(folders: Sequence[str | Path]) -> list[Path]:
         inner = [] if (folder / "turns.csv").exists() or not folder.is_dir() else sorted(folder.iterdir())
         clips = [path for path in inner if (path / "turns.csv").is_file()]
         if inner and not clips:
-            raise FileError(
-                f"{folder}: no measured clip in it; give a folder that `floorswing measure` wrote"
-            )
+            raise FileError(f"{folder}: no measured clip in it; give a folder that `floorswing measure` wrote")
         found.extend(clips or [folder])
     return list(dict.fromkeys(found))
 
@@ -143,9 +141,7 @@ def _check_one_trial(measurements: Sequence[Measurement]) -> None:
     for what, name in (("robot", "name"), ("floor", "surface")):
         found = {getattr(getattr(one.trial, what), name) for one in measurements}
         if len(found) > 1:
-            raise FileError(
-                f"the folders are of different {what}s ({', '.join(sorted(found))}); fit each by itself"
-            )
+            raise FileError(f"the folders are of different {what}s ({', '.join(sorted(found))}); fit each by itself")
 
 
 def usable_turns(
@@ -263,9 +259,7 @@ def read_fit(path: str | Path) -> Fit:
     try:
         return _fit_of(document)
     except (KeyError, TypeError, ValueError) as error:
-        raise FileError(
-            f"{path}: does not hold what `floorswing fit` writes ({error!r}); fit again"
-        ) from error
+        raise FileError(f"{path}: does not hold what `floorswing fit` writes ({error!r}); fit again") from error
 
 
 def _fit_of(document: Mapping[str, Any]) -> Fit:
@@ -319,10 +313,7 @@ def sentences(result: FitResult) -> list[str]:
     apart = direction_difference(fitted)
     if apart is not None:
         more = "further" if apart[0].value > 0 else "less far"
-        said.append(
-            f"Counter-clockwise it turns {abs(apart[0].value):.2%} {more} than clockwise "
-            f"(p = {apart[1]:.2g})."
-        )
+        said.append(f"Counter-clockwise it turns {abs(apart[0].value):.2%} {more} than clockwise (p = {apart[1]:.2g}).")
     contact = contact_fraction(effective_track_mm(gain, result.robot, fitted.dof), result.robot)
     if contact is not None:
         said.append(contact_sentence(contact))

@@ -224,9 +224,7 @@ def fit_corners(
     return _solve(design, corners_px, shift)
 
 
-def _box(
-    corners_px: FloatArray, template: Template, shape: tuple[int, ...]
-) -> tuple[int, int, int, int] | None:
+def _box(corners_px: FloatArray, template: Template, shape: tuple[int, ...]) -> tuple[int, int, int, int] | None:
     """Return the pixel box (x0, y0, x1, y1) that holds the whole template, clipped to the picture."""
     points = corners_px.tolist()
     xs, ys = [p[0] for p in points], [p[1] for p in points]
@@ -251,13 +249,20 @@ def _render(
     size = (shape[1], shape[0])
     still = to_crop @ template.unit_from_sample
     if not smear:
-        return cv2.warpPerspective(template.channels, still, size, flags=cv2.INTER_LINEAR).reshape(-1, 4)
+        return _warped(template, still, size)
     shift = np.array([[1.0, 0.0, origin_px[0]], [0.0, 1.0, origin_px[1]], [0.0, 0.0, 1.0]])
-    total = np.zeros((*shape, 4), dtype=np.float32)
+    total = np.zeros((shape[0] * shape[1], 4), dtype=np.float32)
     for motion in smear:
         moved = np.linalg.inv(shift) @ motion @ shift @ still
-        total += cv2.warpPerspective(template.channels, moved, size, flags=cv2.INTER_LINEAR)
-    return (total / len(smear)).reshape(-1, 4)
+        total += _warped(template, moved, size)
+    total /= np.float32(len(smear))
+    return total
+
+
+def _warped(template: Template, map_: FloatArray, size: tuple[int, int]) -> NDArray[np.float32]:
+    seen = cv2.warpPerspective(template.channels, map_, size, flags=cv2.INTER_LINEAR)
+    flat: NDArray[np.float32] = np.asarray(seen, dtype=np.float32).reshape(-1, 4)
+    return flat
 
 
 def _rows(
@@ -322,7 +327,7 @@ def _solve(design: Design, corners_px: FloatArray, shift: float) -> CornerFit | 
         contrast = float(eliminate[3, -1])
         information = to_motion.T @ reduced[:8, :8] @ to_motion
         gradient = to_motion.T @ reduced[:8, -1] / contrast
-        move = np.linalg.solve(information, gradient)
+        move: FloatArray = np.asarray(np.linalg.solve(information, gradient), dtype=np.float64)
     except (np.linalg.LinAlgError, ZeroDivisionError):
         return None
     left, n_pixels = float(reduced[-1, -1]), float(normal[8, 8])

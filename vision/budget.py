@@ -76,9 +76,7 @@ def pooled_share(left: FloatArray, rests: Iterable[RestHeading]) -> float:
     return float(np.nanmean(shares)) if np.any(np.isfinite(shares)) else np.nan
 
 
-def rest_variance_deg2(
-    seen: Seen, frames: NDArray[np.intp], clip_share: float, *, camera_still: bool
-) -> float:
+def rest_variance_deg2(seen: Seen, frames: NDArray[np.intp], clip_share: float, *, camera_still: bool) -> float:
     """Return the variance of the mean heading of a rest.
 
     Parameters
@@ -121,9 +119,7 @@ def change_uncertainty(
     return float(np.sqrt(total + lever @ cov @ lever))
 
 
-def budget_of(
-    seen: Seen, split: Split, calibration: Calibration, *, camera_still: bool
-) -> tuple[Contribution, ...]:
+def budget_of(seen: Seen, split: Split, calibration: Calibration, *, camera_still: bool) -> tuple[Contribution, ...]:
     """Return the budget of a typical heading change of the clip (medians over its turns)."""
     rests = [r for r in split.rests if len(r.before) and len(r.after)]
     if len(rests) < 2:

@@ -169,9 +169,7 @@ def _start(track: CornerTrack, units: Units) -> FloatArray:
     body = track.body
     to_units = np.diag([1.0 / units.half_px, 1.0 / units.half_px, 1.0])
     to_units[:2, 2] = -units.centre_px / units.half_px
-    shape, _ = shape_from_homography(
-        to_units @ body.plane_px @ np.diag([units.length_mm, units.length_mm, 1.0])
-    )
+    shape, _ = shape_from_homography(to_units @ body.plane_px @ np.diag([units.length_mm, units.length_mm, 1.0]))
     p = np.zeros(N_GLOBAL)
     p[SHAPE] = shape
     p[BASE] = body.base_mm / units.length_mm
@@ -256,7 +254,7 @@ def _adjust(
             break
     system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
     system = _with_prior(system, p, prior)
-    cov = np.linalg.inv(_schur(system)[0])
+    cov: FloatArray = np.asarray(np.linalg.inv(_schur(system)[0]), dtype=np.float64)
     left = project_pair(p, poses, units).corners_px - corners_px
     kept = np.repeat(weight > 0.2, 8, axis=1).reshape(len(left), 16)
     return p, poses, cov, misfit, float(np.sqrt(2.0 * np.mean(left[kept] ** 2)))
@@ -322,17 +320,18 @@ def _with_prior(system: _Normal, p: FloatArray, prior: Prior) -> _Normal:
 def _schur(system: _Normal, damping: float = 0.0) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return the reduced matrix (21, 21), its right-hand side, and the inverted pose blocks."""
     c = system.c + damping * system.c * np.eye(3)
-    c_inverse = np.linalg.inv(c)
+    c_inverse: FloatArray = np.asarray(np.linalg.inv(c), dtype=np.float64)
     lift = system.b @ c_inverse
     a = system.a + damping * np.diag(np.diag(system.a))
-    reduced = a - np.einsum("nij,nkj->ik", lift, system.b)
-    return reduced, system.g - np.einsum("nij,nj->i", lift, system.h), c_inverse
+    reduced: FloatArray = a - np.einsum("nij,nkj->ik", lift, system.b)
+    right: FloatArray = system.g - np.einsum("nij,nj->i", lift, system.h)
+    return reduced, right, c_inverse
 
 
 def _solve(system: _Normal, damping: float) -> tuple[FloatArray, FloatArray]:
     reduced, right, c_inverse = _schur(system, damping)
-    step = np.linalg.solve(reduced, right)
-    pose_steps = np.einsum("nij,nj->ni", c_inverse, system.h - np.einsum("nij,i->nj", system.b, step))
+    step: FloatArray = np.asarray(np.linalg.solve(reduced, right), dtype=np.float64)
+    pose_steps: FloatArray = np.einsum("nij,nj->ni", c_inverse, system.h - np.einsum("nij,i->nj", system.b, step))
     return step, pose_steps
 
 

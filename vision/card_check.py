@@ -48,10 +48,7 @@ def check_cards(looks: list[CardLook], calibration: Calibration) -> list[CardChe
     checks = []
     for card_id in sorted({look.card_id for look in looks}):
         corners = np.stack([look.corners_px for look in looks if look.card_id == card_id])
-        points = (
-            to_plane(np.median(corners, axis=0), calibration.p, calibration.units)
-            * calibration.units.length_mm
-        )
+        points = to_plane(np.median(corners, axis=0), calibration.p, calibration.units) * calibration.units.length_mm
         turn_rad, x, y = rigid_between(UNIT_CORNERS, points)
         around = points - points.mean(axis=0)
         c, s = np.cos(turn_rad), np.sin(turn_rad)

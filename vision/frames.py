@@ -149,9 +149,7 @@ class Clip:
         except BaseException as error:  # handed to the caller's thread, never lost
             self._put(waiting, error)
 
-    def _put(
-        self, waiting: queue.Queue[Frame | BaseException | None], item: Frame | BaseException | None
-    ) -> bool:
+    def _put(self, waiting: queue.Queue[Frame | BaseException | None], item: Frame | BaseException | None) -> bool:
         while not self._stop.is_set():
             with contextlib.suppress(queue.Full):
                 waiting.put(item, timeout=0.1)
@@ -317,11 +315,11 @@ def _luma_plane(picture: Any) -> LumaImage:
     if name.startswith(("yuyv", "yvyu", "uyvy")):
         picture = picture.reformat(format="gray")
         plane = picture.planes[0]
-    wide = picture.format.components[0].bits > 8
-    dtype = np.uint16 if wide else np.uint8
-    rows = np.frombuffer(plane, dtype=dtype).reshape(plane.height, plane.line_size // dtype().itemsize)
-    luma: LumaImage = rows[:, : plane.width]
-    return luma
+    if picture.format.components[0].bits > 8:
+        deep = np.frombuffer(plane, dtype=np.uint16).reshape(plane.height, plane.line_size // 2)
+        return deep[:, : plane.width]
+    rows = np.frombuffer(plane, dtype=np.uint8).reshape(plane.height, plane.line_size)
+    return rows[:, : plane.width]
 
 
 def _reason(error: BaseException) -> str:

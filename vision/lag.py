@@ -19,11 +19,11 @@ if TYPE_CHECKING:
 FEWEST_FRAMES = 3
 """Frames before and after a key frame that are needed to see a jump."""
 
-FEWEST_JUMPS = 2
-"""With fewer jumps in a clip the lag is not evaluated from it."""
+USUAL_LAG_PX = 0.015
+"""What coders usually leave of a displacement (type B), at the markers' distance from the middle of the pair."""
 
-UNSEEN_LAG_PX = 0.015
-"""Standard uncertainty of the lag where no key frame shows it: what coders leave of a displacement (type B)."""
+USUAL_COUNTS = 2.0
+"""How many observed jumps the usual lag counts for: single rests may lag far more than the others."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,7 +35,7 @@ class Lag:
     u_deg : float
         Standard uncertainty of such a heading from the lag.
     n_jumps : int
-        Key frames that it was found from; 0 if it is a type B value.
+        Key frames that it was found from; 0 if it is the usual value alone (type B).
     """
 
     u_deg: float
@@ -60,12 +60,12 @@ def coding_lag(seen: Seen, stills: list[NDArray[np.intp]], settle_s: float) -> L
     settle_s : float
         Time after the motion from which headings of rests without a key frame are used.
     """
-    jumps = [jump for frames in stills if (jump := _jump_deg(seen, frames, settle_s)) is not None]
-    if len(jumps) >= FEWEST_JUMPS:
-        return Lag(float(np.sqrt(np.mean(np.square(jumps)))), len(jumps))
     if np.all(seen.is_key):
         return Lag(0.0, 0)
-    return Lag(float(np.degrees(UNSEEN_LAG_PX / seen.reach_px)) * _frozen(seen, stills), 0)
+    jumps = [jump for frames in stills if (jump := _jump_deg(seen, frames, settle_s)) is not None]
+    usual_deg = float(np.degrees(USUAL_LAG_PX / seen.reach_px)) * _frozen(seen, stills)
+    square = np.sum(np.square(jumps)) + USUAL_COUNTS * usual_deg**2
+    return Lag(float(np.sqrt(square / (len(jumps) + USUAL_COUNTS))), len(jumps))
 
 
 def _jump_deg(seen: Seen, frames: NDArray[np.intp], settle_s: float) -> float | None:

@@ -96,7 +96,7 @@ def as_uint8(image: LumaImage) -> NDArray[np.uint8]:
         return np.ascontiguousarray(image, dtype=np.uint8)
     low, high = np.percentile(image[::7, ::7], (0.5, 99.5))
     span = max(float(high - low), 1.0)
-    stretched = np.clip((image.astype(np.float32) - low) * (235.0 / span) + 10.0, 0.0, 255.0)
+    stretched: NDArray[np.float32] = np.clip((image.astype(np.float32) - low) * (235.0 / span) + 10.0, 0.0, 255.0)
     return stretched.astype(np.uint8)
 
 

@@ -17,7 +17,7 @@ from vision.align import CornerFit, fit_corners
 from vision.frames import LumaImage
 from vision.markers import UNIT_CORNERS, Detection, printed_modules
 from vision.records import FloatArray, MarkerSetup
-from vision.rigid import fit_homography, project, rigid, rigid_between
+from vision.rigid import fit_homography, inverse, project, rigid, rigid_between
 from vision.template import Optics, Template, build_template
 
 PROCESSED_STARTS = ((0.0, 0.15, 1.5), (0.0, 0.5, 1.0), (-0.3, 0.4, 1.0), (0.2, 0.0, 1.5), (-0.2, 0.0, 1.5))
@@ -79,7 +79,8 @@ def body_from_corners(corners_px: FloatArray, side_mm: float) -> Body | None:
         plane = np.append(p[:8] * scale[:8], 1.0).reshape(3, 3)
         aft = project(rigid(p[8], p[9] * side_mm, p[10] * side_mm), square)
         both = project(plane, np.concatenate([square, aft]))
-        return np.nan_to_num((both - seen.reshape(-1, 2)).ravel(), nan=10.0)
+        apart: FloatArray = np.nan_to_num((both - seen.reshape(-1, 2)).ravel(), nan=10.0)
+        return apart
 
     scale = np.array([1 / side_mm, 1 / side_mm, 1.0] * 2 + [1 / side_mm, 1 / side_mm])
     plane0 = (first / first[2, 2]).ravel()[:8] / scale
@@ -102,7 +103,7 @@ def _in_body_frame(points_mm: FloatArray, plane_px: FloatArray) -> Body | None:
     heading_rad = float(np.arctan2(*(fore - aft)[::-1]))
     middle = 0.5 * (fore + aft)
     place = rigid(heading_rad, middle[0], middle[1])
-    return Body(project(np.linalg.inv(place), points_mm), plane_px @ place)
+    return Body(project(inverse(place), points_mm), plane_px @ place)
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -194,13 +195,10 @@ def tune_optics(
 class _Rendering:
     """How much of the markers' picture some optics leave unexplained, the markers held in place."""
 
-    def __init__(
-        self, image: LumaImage, corners_px: FloatArray, modules: tuple[NDArray[np.bool_], ...]
-    ) -> None:
+    def __init__(self, image: LumaImage, corners_px: FloatArray, modules: tuple[NDArray[np.bool_], ...]) -> None:
         self._image = image
         self._markers = [
-            (corners, black, mean_side_px(corners))
-            for corners, black in zip(corners_px, modules, strict=True)
+            (corners, black, mean_side_px(corners)) for corners, black in zip(corners_px, modules, strict=True)
         ]
 
     def left(self, values: FloatArray) -> float:

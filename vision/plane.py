@@ -115,9 +115,7 @@ def shape_from_homography(homography: FloatArray) -> tuple[FloatArray, FloatArra
     back = np.linalg.inv(homography)
     origin = back[:2, 2] / back[2, 2]
     w = homography[2, :2] @ origin + homography[2, 2]
-    at_origin = (
-        homography[:2, :2] / w
-    )  # the picture point is (0, 0), so the second term of the slope vanishes
+    at_origin = homography[:2, :2] / w  # the picture point is (0, 0), so the second term of the slope vanishes
     turn_rad = float(np.arctan2(-at_origin[1, 0], at_origin[1, 1]))
     c, s = np.cos(turn_rad), np.sin(turn_rad)
     if (at_origin @ np.array([c, s]))[0] < 0.0:
@@ -139,7 +137,8 @@ def body_points(p: FloatArray, units: Units) -> FloatArray:
 
 def _turned(points: FloatArray, turn_rad: float) -> FloatArray:
     c, s = np.cos(turn_rad), np.sin(turn_rad)
-    return points @ np.array([[c, s], [-s, c]])
+    turned: FloatArray = points @ np.array([[c, s], [-s, c]])
+    return turned
 
 
 def distort(points: FloatArray, lens: FloatArray) -> FloatArray:

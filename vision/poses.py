@@ -8,9 +8,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.bundle import Calibration, start_poses, whitening
+from vision.observations import CornerTrack
 from vision.plane import N_GLOBAL, Projection, Units, project_pair, to_floor, to_plane
 from vision.records import FloatArray
-from vision.observations import CornerTrack
 
 CHUNK = 4096
 """Frames solved at once: bounds the memory on long clips."""
@@ -76,9 +76,7 @@ def _solve_chunk(track: CornerTrack, calibration: Calibration, rows: slice) -> d
     heading_rad, x_mm, y_mm = to_floor(poses, units)
     out["heading_rad"][seen], out["x_mm"][seen], out["y_mm"][seen] = heading_rad, x_mm, y_mm
     out["u_heading_rad"][seen] = np.sqrt(cov[:, 0, 0])
-    out["by_global"][seen] = np.einsum(
-        "ni,nij->nj", cov[:, 0], pull
-    )  # the sign of y down is undone by that of -J
+    out["by_global"][seen] = np.einsum("ni,nij->nj", cov[:, 0], pull)  # the sign of y down is undone by that of -J
     out["left"][seen] = np.where(mask, left, np.nan)
     out["residual_px"][seen] = np.sqrt(2.0 * np.sum(left_px**2, axis=1) / mask.sum(axis=1))
     out["scale"][seen] = _scale(observed, poses, calibration)

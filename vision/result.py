@@ -99,13 +99,8 @@ def _held_by_hand(path: CameraPath) -> bool:
 def _moved(path: CameraPath) -> list[Event]:
     if path.still:
         return []
-    detail = (
-        f"the floor cards shifted by up to {path.shift_px:.1f} px; {path.n_cards} cards hold the view steady"
-    )
-    return [
-        Event(start_s=start_s, end_s=end_s, kind="camera moved", detail=detail)
-        for start_s, end_s in path.spans
-    ]
+    detail = f"the floor cards shifted by up to {path.shift_px:.1f} px; {path.n_cards} cards hold the view steady"
+    return [Event(start_s=start_s, end_s=end_s, kind="camera moved", detail=detail) for start_s, end_s in path.spans]
 
 
 def _pose_track(corners: CornerTrack, seen: Seen, split: Split, frame: FloorFrame) -> PoseTrack:

@@ -29,6 +29,11 @@ def projected_slope(homography: FloatArray, points: FloatArray) -> tuple[FloatAr
     return mapped, slope
 
 
+def inverse(map_: FloatArray) -> FloatArray:
+    """Return the inverse of a map, shape (3, 3)."""
+    return np.asarray(np.linalg.inv(map_), dtype=np.float64)
+
+
 def rigid(turn_rad: float, x: float, y: float) -> FloatArray:
     """Return the motion that turns by `turn_rad` about the origin, then shifts, shape (3, 3)."""
     c, s = np.cos(turn_rad), np.sin(turn_rad)

@@ -186,9 +186,7 @@ def steady(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> CornerTr
     units = units_for(corners.image_px, side_mm=1.0, length_mm=1.0)
     keep = [k for k, number in enumerate(looks.ids) if number not in path.strays]
     straight = undistort((looks.corners_px[:, keep] - units.centre_px) / units.half_px, lens)
-    smooth = _averaged(
-        straight, looks.time_s, _step_px(looks, keep) / units.half_px, STILL_PX / units.half_px
-    )
+    smooth = _averaged(straight, looks.time_s, _step_px(looks, keep) / units.half_px, STILL_PX / units.half_px)
     reference = smooth[_reference(looks)]
     maps = [_map_or_none(seen, reference) for seen in smooth]
     moved = corners.corners_px.copy()

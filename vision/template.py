@@ -77,9 +77,7 @@ def build_template(black: NDArray[np.bool_], *, side_px: float, optics: Optics) 
     per_side = int(np.clip(3.0 * side_px, 12 * n_modules, 24 * n_modules))
     n_samples = int(np.ceil((1.0 + 2.0 * quiet) * per_side))
     unit = (np.arange(n_samples) + 0.5) / per_side - (0.5 + quiet)
-    layers = np.stack(
-        [*_blurred(black, unit, optics.blur_px / side_px), np.ones((n_samples, n_samples))], axis=-1
-    )
+    layers = np.stack([*_blurred(black, unit, optics.blur_px / side_px), np.ones((n_samples, n_samples))], axis=-1)
     channels = _processed(layers.astype(np.float32), optics, samples_per_px=per_side / side_px)
     offset = (0.5 + quiet) * per_side - 0.5
     sample_from_unit = np.array([[per_side, 0.0, offset], [0.0, per_side, offset], [0.0, 0.0, 1.0]])
@@ -94,16 +92,12 @@ def _processed(layers: NDArray[np.float32], optics: Optics, *, samples_per_px: f
         layers[..., 0] += optics.tone * grey * (1.0 - grey)
     if optics.halo:
         seen = np.ascontiguousarray(layers[..., :3])
-        wide = cv2.GaussianBlur(
-            seen, (0, 0), optics.halo_px * samples_per_px, borderType=cv2.BORDER_REPLICATE
-        )
+        wide = cv2.GaussianBlur(seen, (0, 0), optics.halo_px * samples_per_px, borderType=cv2.BORDER_REPLICATE)
         layers[..., :3] = seen + optics.halo * (seen - wide)
     return layers
 
 
-def _blurred(
-    black: NDArray[np.bool_], unit: FloatArray, blur: float
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def _blurred(black: NDArray[np.bool_], unit: FloatArray, blur: float) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return the picture and its slopes on the grid `unit` x `unit`, blur in units of side."""
     edges = np.linspace(-0.5, 0.5, black.shape[0] + 1)
     standard = (unit[:, None] - edges) / blur

@@ -29,8 +29,7 @@ from vision.pair import (
     tune_optics,
 )
 from vision.records import FloatArray, MarkerSetup
-from vision.rigid import fit_homography, project, projected_slope, rigid, rigid_between
-from vision.template import Optics
+from vision.rigid import fit_homography, inverse, project, projected_slope, rigid, rigid_between
 
 HOLD = 0.55
 """Least share of a marker's variance that the pattern must explain for the marker to count as seen."""
@@ -76,9 +75,7 @@ class PairTracker:
         self.optics, corners_px = tune_optics(image, corners_px, modules)
         body = body_from_corners(corners_px, setup.marker_side_mm)
         if body is None:
-            raise MarkersNotFound(
-                "the two robot markers do not look like flat squares of one size side by side"
-            )
+            raise MarkersNotFound("the two robot markers do not look like flat squares of one size side by side")
         self.body = body
         self._patterns: tuple[Pattern, ...] = tuple(
             build_pattern(black, mean_side_px(corners), self.optics)
@@ -254,7 +251,7 @@ class PairTracker:
             information += trust * slope.T @ fit.information @ slope
             gradient += trust * slope.T @ fit.gradient
         try:
-            return np.linalg.solve(information, gradient)
+            return np.asarray(np.linalg.solve(information, gradient), dtype=np.float64)
         except np.linalg.LinAlgError:
             return None
 
@@ -304,13 +301,11 @@ class PairTracker:
             fit = again
         return fit.corners_px + move, fit
 
-    def _accept(
-        self, plane_px: FloatArray, corners_px: FloatArray, settled: FloatArray, step_s: float
-    ) -> None:
+    def _accept(self, plane_px: FloatArray, corners_px: FloatArray, settled: FloatArray, step_s: float) -> None:
         """Move the remembered pose and corners on; mend the plane where the rigid pair no longer fits it."""
         known = np.isfinite(settled[:, 0, 0])
         self._corners_px = np.where(known[:, None, None], settled, corners_px)
-        before = project(np.linalg.inv(self._plane_px), self._corners_px[known].reshape(-1, 2))
+        before = project(inverse(self._plane_px), self._corners_px[known].reshape(-1, 2))
         move = np.array(rigid_between(self.body.points_mm[known].reshape(-1, 2), before))
         self._rate = move / step_s if step_s > 2e-3 else self._rate
         self._plane_px = self._plane_px @ rigid(*move)
@@ -454,7 +449,7 @@ class PairTracker:
         if len(found) == 2:
             plane_px = fit_homography(points_mm, seen_px)
         else:
-            move = rigid_between(points_mm, project(np.linalg.inv(self._plane_px), seen_px))
+            move = rigid_between(points_mm, project(inverse(self._plane_px), seen_px))
             plane_px = self._plane_px @ rigid(*move) if np.all(np.isfinite(move)) else None
         if plane_px is None:
             return None

@@ -223,10 +223,7 @@ def _rests_around(seen: Seen, moves: list[Stretch]) -> list[RestHeading | None]:
     n_frames = len(seen.time_s)
     borders = [-1, *(x for move in moves for x in (move.first, move.last)), n_frames]
     gaps = [(borders[2 * k] + 1, borders[2 * k + 1] - 1) for k in range(len(moves) + 1)]
-    return [
-        _rest(seen, first, last, from_start=k == 0, to_end=k == len(moves))
-        for k, (first, last) in enumerate(gaps)
-    ]
+    return [_rest(seen, first, last, from_start=k == 0, to_end=k == len(moves)) for k, (first, last) in enumerate(gaps)]
 
 
 def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) -> RestHeading | None:
@@ -256,7 +253,8 @@ def _side(seen: Seen, still: Stretch, *, late: bool, from_start: bool) -> NDArra
         frames = _settled(seen, frames)
     times = seen.time_s[frames]
     near = times >= times[-1] - LONGEST_REST_S if late else times <= times[0] + LONGEST_REST_S
-    return frames[near]
+    chosen: NDArray[np.intp] = frames[near]
+    return chosen
 
 
 def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
@@ -268,7 +266,8 @@ def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
     if place is not None:
         return frames[place:]
     since_s = seen.time_s[frames] - seen.time_s[frames[0]]
-    return frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
+    settled: NDArray[np.intp] = frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
+    return settled
 
 
 def _judge(
@@ -385,9 +384,7 @@ def _pushes(seen: Seen, motion: Motion, move: Stretch) -> int:
     return pushes
 
 
-def _settling(
-    seen: Seen, motion: Motion, part: slice, end_deg: float, direction: float
-) -> tuple[float, float]:
+def _settling(seen: Seen, motion: Motion, part: slice, end_deg: float, direction: float) -> tuple[float, float]:
     """Return how far the heading went beyond its resting place, and the time from the main stop to rest."""
     along = direction * (seen.heading_deg[part] - end_deg)
     beyond = float(along.max())
@@ -416,9 +413,7 @@ def _centre(seen: Seen, move: Stretch) -> tuple[float, float, float]:
 
 
 def _event(seen: Seen, move: Stretch, kind: str, detail: str) -> Event:
-    return Event(
-        start_s=float(seen.time_s[move.first]), end_s=float(seen.time_s[move.last]), kind=kind, detail=detail
-    )
+    return Event(start_s=float(seen.time_s[move.first]), end_s=float(seen.time_s[move.last]), kind=kind, detail=detail)
 
 
 def _gap_events(seen: Seen) -> list[Event]:
@@ -444,9 +439,7 @@ def _flag_handled(turns: list[Turn], events: list[Event]) -> list[Turn]:
     flagged = []
     last_s = 0.0
     for turn in turns:
-        touched = any(
-            event.kind in SLACK_LOST and last_s <= event.end_s <= turn.start_s + 0.05 for event in events
-        )
+        touched = any(event.kind in SLACK_LOST and last_s <= event.end_s <= turn.start_s + 0.05 for event in events)
         flagged.append(replace(turn, flags=(*turn.flags, "handled_before")) if touched else turn)
         last_s = turn.end_s
     return flagged

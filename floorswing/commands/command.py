@@ -17,9 +17,7 @@ if TYPE_CHECKING:
     short_help="Say what to command for wanted angles.",
     context_settings={"ignore_unknown_options": True},
 )
-@click.option(
-    "--fit", "fit_file", required=True, type=click.Path(path_type=Path), help="fit.json that `fit` wrote."
-)
+@click.option("--fit", "fit_file", required=True, type=click.Path(path_type=Path), help="fit.json that `fit` wrote.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON instead of a table.")
 @click.argument("angles", nargs=-1, required=True, metavar="ANGLE...")
 def command(fit_file: Path, as_json: bool, angles: tuple[str, ...]) -> None:

@@ -21,9 +21,7 @@ LABELS = {
 
 @click.command(short_help="Fit heading change against commanded wheel degrees.")
 @click.argument("folders", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="DIR...")
-@click.option(
-    "--out", type=click.Path(path_type=Path), help="File to write.  [default: fit.json in the first DIR]"
-)
+@click.option("--out", type=click.Path(path_type=Path), help="File to write.  [default: fit.json in the first DIR]")
 @click.option("--json", "as_json", is_flag=True, help="Print fit.json instead of tables.")
 def command(folders: tuple[Path, ...], out: Path | None, as_json: bool) -> None:
     """Fit the relation to the measured clips in each DIR: folders that `measure` wrote.
