@@ -66,7 +66,7 @@ def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: 
     def cost(scatter: float) -> float:
         return -_residual_likelihood(design, data, u**2 + scatter**2 * shape)
 
-    found = minimize_scalar(cost, bounds=(0.0, 3.0 * top), method="bounded", options={"xatol": 1e-7 * top})
+    found = minimize_scalar(cost, bounds=(0.0, 3.0 * top), method="bounded", options={"xatol": 1e-5 * top})
     scatter = float(found.x) if found.fun < cost(0.0) else 0.0
     variance = u**2 + scatter**2 * shape
     return _made(least_squares(design, data, 1.0 / variance), scatter, typical, law, variance, design, data)
@@ -95,7 +95,10 @@ def _made(
 
 
 def _residual_likelihood(design: FloatArray, data: FloatArray, variance: FloatArray) -> float:
-    variance = np.maximum(variance, np.finfo(float).tiny)
-    linear = least_squares(design, data, 1.0 / variance)
-    _, log_det = np.linalg.slogdet(linear.unscaled_cov)
-    return -0.5 * float(np.sum(np.log(variance) + linear.residuals**2 / variance) - log_det)
+    """Return the logarithm of the residual likelihood up to a constant; by normal equations, since it is searched."""
+    weight = 1.0 / np.maximum(variance, np.finfo(float).tiny)
+    weighted = design * weight[:, None]
+    normal = design.T @ weighted
+    left = data - design @ np.linalg.solve(normal, weighted.T @ data)
+    _, log_det = np.linalg.slogdet(normal)
+    return 0.5 * float(np.sum(np.log(weight)) - weight @ left**2 - log_det)
