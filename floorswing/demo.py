@@ -42,8 +42,9 @@ def truth_sentence(check: TruthCheck) -> str:
     invented = "none invented" if check.n_invented == 0 else f"{check.n_invented} invented"
     if check.n_found == 0:
         return f"Against the truth: {found}, {invented}."
+    rms, worst = two_digits(check.rms_deg), two_digits(check.worst_deg)
     return (
         f"Against the truth: {found}, {invented}, {check.n_right_command} with the right command; "
-        f"heading changes off by {two_digits(check.rms_deg)} degrees (root mean square), {two_digits(check.worst_deg)} at most; "
+        f"heading changes off by {rms} degrees (root mean square), {worst} at most; "
         f"{check.n_within} of {check.n_found} within their stated 95 % interval."
     )

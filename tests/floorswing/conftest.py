@@ -2,7 +2,12 @@
 
 from __future__ import annotations
 
+import fcntl
+import json
+import subprocess
+import sys
 from collections.abc import Callable, Iterable
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -101,6 +106,33 @@ def clip_result(changes_deg: Iterable[float], *, events: tuple[Event, ...] = ())
         ),
         warnings=("the light changed",),
     )
+
+
+@dataclass(frozen=True)
+class DemoRun:
+    """A finished run of the demo: what it printed, and the folder that it wrote."""
+
+    code: int
+    stdout: str
+    stderr: str
+    folder: Path
+
+
+@pytest.fixture(scope="session")
+def demo_run(tmp_path_factory: pytest.TempPathFactory, worker_id: str) -> DemoRun:
+    """Run the demo as a user would, once for all workers of a test run."""
+    base = tmp_path_factory.getbasetemp()
+    place = (base if worker_id == "master" else base.parent) / "demo-run"
+    place.mkdir(exist_ok=True)
+    said = place / "said.json"
+    with (place / "lock").open("w") as lock:
+        fcntl.flock(lock, fcntl.LOCK_EX)
+        if not said.exists():
+            command = [sys.executable, "-m", "floorswing", "demo"]
+            result = subprocess.run(command, cwd=place, capture_output=True, text=True, timeout=400)
+            said.write_text(json.dumps([result.returncode, result.stdout, result.stderr]))
+    code, stdout, stderr = json.loads(said.read_text())
+    return DemoRun(code=code, stdout=stdout, stderr=stderr, folder=place / "floorswing-demo")
 
 
 Fake = Callable[..., None]
