@@ -68,7 +68,7 @@ DEMOS = (
             camera=Camera(tilt_deg=14.0, tilt_azimuth_deg=-80.0, k1=-0.07, distance_mm=1350.0, roll_deg=3.0),
             robot=Robot(deck_height_mm=85.0),
             cards=cards((-330.0, 190.0, 12.0), (340.0, 170.0, -30.0), (-300.0, -180.0, 75.0), (330.0, -170.0, 200.0)),
-            floor=Floor(kind="cork", seed=4, contrast=0.6),
+            floor=Floor(kind="cork", seed=4, contrast=0.45),
             light=Light(gradient=0.25, vignette=0.2),
             sensor=sensor(),
             seed=11,
@@ -76,7 +76,7 @@ DEMOS = (
         drive=Drive(contact_scatter=0.008, contact_wander=0.006),
         wheel_deg=CALM,
         seed=21,
-        crf=28.0,
+        crf=30.0,
     ),
     DemoScene(
         name="rubber_rough",

@@ -232,7 +232,7 @@ def _adjust(
 ) -> tuple[FloatArray, FloatArray, FloatArray, float, float]:
     """Levenberg-Marquardt over all parameters, poses eliminated; Cauchy weights per marker and frame."""
     damping, misfit = 1e-3, 1.0
-    cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
+    _, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
     for _ in range(MAX_STEPS):
         system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
         system = _with_prior(system, p, prior)
@@ -249,7 +249,7 @@ def _adjust(
             continue
         p, poses = trial_p, trial_poses
         damping = max(damping * 0.2, 1e-9)
-        cost, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
+        _, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
         if now_cost - trial_cost < 1e-6 * max(trial_cost, 1.0):
             break
     system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)

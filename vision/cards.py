@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from vision.align import CornerFit
 from vision.frames import Frame
 from vision.markers import Detection, detect, printed_modules
 from vision.observations import CardLook
@@ -84,7 +85,9 @@ class CardWatcher:
         if time_s - self._stirred_s > CALM_S:
             self._next_s = time_s + LOOK_EVERY_S
 
-    def _find_again(self, frame: Frame, card_id: int, corners_px: FloatArray, template: Template):  # type: ignore[no-untyped-def]
+    def _find_again(
+        self, frame: Frame, card_id: int, corners_px: FloatArray, template: Template
+    ) -> tuple[FloatArray, CornerFit] | None:
         low, high = corners_px.min(axis=0), corners_px.max(axis=0)
         pad = 1.5 * mean_side_px(corners_px)
         limit = (frame.luma.shape[1], frame.luma.shape[0])
@@ -93,7 +96,7 @@ class CardWatcher:
         found = detect(frame.luma[y0:y1, x0:x1], self._setup.dictionary, (card_id,))
         if len(found) != 1:
             return None
-        return settle_corners(frame.luma, found[0].corners_px + (x0, y0), template)
+        return settle_corners(frame.luma, found[0].corners_px + np.array([x0, y0]), template)
 
     def _note(
         self, card_id: int, time_s: float, corners_px: FloatArray, information: FloatArray, noise_var: float

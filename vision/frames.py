@@ -158,10 +158,8 @@ class Clip:
 
     def _decode(self) -> Iterator[Frame]:
         clock = _Clock(self._stream)
-        n_frames = 0
-        for picture in self._pictures(clock):
-            yield Frame(n_frames, clock.time_s(picture), self._luma(picture), bool(picture.key_frame))
-            n_frames += 1
+        for index, picture in enumerate(self._pictures(clock)):
+            yield Frame(index, clock.time_s(picture), self._luma(picture), bool(picture.key_frame))
 
     def _pictures(self, clock: _Clock) -> Iterator[Any]:
         """Yield decoded pictures, stepping over packets that cannot be decoded."""

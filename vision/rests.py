@@ -15,6 +15,9 @@ SLOPE_WINDOW_S = 0.08
 POSSIBLY, SURELY = 5.0, 10.0
 """A speed beyond so many standard deviations of its still level may be, and surely is, a motion."""
 
+WHITE_MARGIN = 4.0
+"""Coded pictures jump now and then; their slopes are this much noisier than those of white noise."""
+
 SHORTEST_REST_S = 0.2
 """A shorter stillness is a pause within one turn."""
 
@@ -69,9 +72,11 @@ def find_motion(
     speed = np.hypot(_slope(time_s, x_mm), _slope(time_s, y_mm))
     noise_deg = _still_noise(heading_deg)
     swept_mm_s = np.abs(np.deg2rad(rate)) * reach_mm
-    top_mm_s = max(_top(swept_mm_s), _top(speed))
-    turning = _significant(swept_mm_s, top_mm_s)
-    sliding = _significant(speed, top_mm_s)
+    swept_still = min(_still_level(swept_mm_s), _white_level(time_s, np.deg2rad(heading_deg) * reach_mm))
+    speed_still = min(_still_level(speed), np.hypot(_white_level(time_s, x_mm), _white_level(time_s, y_mm)))
+    top_mm_s = max(_top(swept_mm_s, swept_still), _top(speed, speed_still))
+    turning = _significant(swept_mm_s, swept_still, top_mm_s)
+    sliding = _significant(speed, speed_still, top_mm_s)
     return Motion(rate_deg_s=rate, speed_mm_s=speed, moving=turning | sliding, noise_deg=noise_deg)
 
 
@@ -97,9 +102,9 @@ def _slope(time_s: FloatArray, value: FloatArray) -> FloatArray:
     return np.where(below > 1e-12, above / np.maximum(below, 1e-12), 0.0)
 
 
-def _still_noise(heading_deg: FloatArray) -> float:
+def _still_noise(value: FloatArray) -> float:
     """Return the noise of single frames from the smaller half of second differences."""
-    second = np.abs(np.diff(heading_deg, 2))
+    second = np.abs(np.diff(value, 2))
     if len(second) == 0:
         return 0.0
     # For a normal variable the first quartile of |x| is 0.3186 sd; a second difference has sqrt(6) the noise.
@@ -113,15 +118,23 @@ def _still_level(size: FloatArray) -> float:
     return float(np.quantile(size, 0.2) / 0.2533)  # |normal| has its first fifth below 0.2533 sd
 
 
-def _top(size: FloatArray) -> float:
+def _white_level(time_s: FloatArray, value: FloatArray) -> float:
+    """Return the standard deviation of a slope from the value's own noise, for clips that hardly ever rest."""
+    steps = np.diff(time_s)
+    frame_s = float(np.median(steps)) if len(steps) else 1.0
+    half = max(int(SLOPE_WINDOW_S / max(frame_s, 1e-6)), 1)
+    spread = np.sqrt(half * (half + 1) * (2 * half + 1) / 3.0)  # root of the sum of squares from -half to half
+    return WHITE_MARGIN * _still_noise(value) / (max(frame_s, 1e-6) * float(spread))
+
+
+def _top(size: FloatArray, still: float) -> float:
     """Return what the faster motions of the clip reach, outliers left out."""
-    fast = size[size > SURELY * _still_level(size)]
+    fast = size[size > SURELY * still]
     return float(np.quantile(fast, 0.75)) if len(fast) else 0.0
 
 
-def _significant(size: FloatArray, top: float) -> NDArray[np.bool_]:
+def _significant(size: FloatArray, still: float, top: float) -> NDArray[np.bool_]:
     """Return where a speed is above its still level, in stretches that somewhere are surely above it."""
-    still = _still_level(size)
     low, high = max(POSSIBLY * still, 0.01 * top), max(SURELY * still, 0.06 * top)
     above = size > low
     keep = np.zeros(len(size), dtype=bool)

@@ -223,7 +223,7 @@ def deck_sheet(robot: Robot, camera: Camera, seed: int) -> Sheet:
 def draw_packets(board: FloatImage, robot: Robot, per_mm: float, seed: int) -> None:
     """Draw a row of paper packets between the markers, with a dark rack around them."""
     rng = np.random.default_rng([seed, 76])
-    rows, cols = board.shape
+    rows = board.shape[0]
     middle_mm = 0.5 * (robot.fore.x_mm + robot.aft.x_mm) - robot.deck_centre_mm + robot.deck_length_mm / 2
     reach_mm = 0.5 * abs(robot.fore.x_mm - robot.aft.x_mm) - 0.75 * robot.marker_side_mm - 6
     if reach_mm < 8:

@@ -132,7 +132,9 @@ def open_stream(
         settings.setdefault("preset", preset)
     if codec == "hevc":
         settings.setdefault("x265-params", "log-level=error:pools=none:frame-threads=1")
-    stream = container.add_stream(ENCODERS[codec], rate=Fraction(scene.timing.fps).limit_denominator(1001), options=settings)
+    stream = container.add_stream(
+        ENCODERS[codec], rate=Fraction(scene.timing.fps).limit_denominator(1001), options=settings
+    )
     stream.width, stream.height = scene.camera.width_px, scene.camera.height_px
     stream.pix_fmt = pix_fmt or default_format(codec, scene)
     stream.codec_context.time_base = TIME_BASE

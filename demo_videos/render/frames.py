@@ -15,7 +15,18 @@ from demo_videos.render.light import exposure, glint_field, moving_shadows, stan
 from demo_videos.render.motion import Motion, Poses
 from demo_videos.render.scene import Card, Occluder, Scene, Timing
 from demo_videos.render.sensor import Development, blur
-from demo_videos.render.sheets import FLOOR, Box, Carrier, Patch, Sheet, add_change, box_of, draw, extra_variance_px2, sheet_to_camera
+from demo_videos.render.sheets import (
+    FLOOR,
+    Box,
+    Carrier,
+    Patch,
+    Sheet,
+    add_change,
+    box_of,
+    draw,
+    extra_variance_px2,
+    sheet_to_camera,
+)
 
 FloatArray = NDArray[np.float64]
 FloatImage = NDArray[np.float32]
@@ -301,11 +312,7 @@ class Renderer:
     def paint_body(self, patch: Patch, boxes: list[Box], instant: Instant, samples: int) -> None:
         """Draw what lies between shadow and markers, from below, with the wheels' treads as they are."""
         middle = len(instant.poses.x_mm) // 2
-        drawn = [
-            (sheet, box)
-            for sheet, box in zip(self.sheets[1:], boxes[1:], strict=False)
-            if not sheet.precise
-        ]
+        drawn = [(sheet, box) for sheet, box in zip(self.sheets[1:], boxes[1:], strict=False) if not sheet.precise]
         for side, wheel in enumerate(self.wheels):
             phase = tread_phase(instant.poses.wheel_deg[side, middle], self.scene.robot.wheel_diameter_mm)
             drawn.insert(1, (wheel[phase], boxes[len(self.sheets) + side]))
@@ -325,7 +332,9 @@ def draw_floor(
     for top in range(0, height, 128):
         band = slice(top, min(top + 128, height))
         part = view.rows(band)
-        maps = part.rotation @ np.concatenate([axes[:, :, :2].repeat(len(part.zoom), 0), -part.centre_mm[:, :, None]], 2)
+        maps = part.rotation @ np.concatenate(
+            [axes[:, :, :2].repeat(len(part.zoom), 0), -part.centre_mm[:, :, None]], 2
+        )
         maps[:, :2] *= part.zoom[:, None, None]
         inverse = np.linalg.inv(maps)[:, :, :, None]
         x, y = rays[0][band], rays[1][band]

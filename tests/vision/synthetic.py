@@ -45,14 +45,16 @@ def corner_track(headings_deg, *, p, units, noise_px=0.02, seed=0, place=(1.2, -
     )
 
 
-def profile(turns_deg, *, rate_deg_s=90.0, rest_s=0.8, frame_s=1 / 30.0, start_deg=0.0):
-    """Return times and headings of spins with short ramps between rests."""
+def profile(turns_deg, *, rate_deg_s=90.0, rest_s=0.8, frame_s=1 / 30.0, start_deg=0.0, ramp_s=0.15):
+    """Return times and headings of spins at a constant rate, with linear ramps, between rests."""
     headings = [np.full(round(rest_s / frame_s), start_deg)]
     now = start_deg
     for turn in turns_deg:
-        n = max(int(np.ceil(abs(turn) / rate_deg_s / frame_s)), 4)
-        share = np.linspace(0, 1, n + 1)[1:]
-        headings += [now + turn * (share - np.sin(2 * np.pi * share) / (2 * np.pi)), np.full(round(rest_s / frame_s), now + turn)]
+        length_s = max(abs(turn) / rate_deg_s, ramp_s) + ramp_s
+        t = np.arange(1, int(np.ceil(length_s / frame_s)) + 1) * frame_s
+        pace = np.clip(np.minimum(t, length_s - t) / ramp_s, 0.0, 1.0)
+        share = np.cumsum(pace) / pace.sum()
+        headings += [now + turn * share, np.full(round(rest_s / frame_s), now + turn)]
         now += turn
     heading = np.concatenate(headings)
     return np.arange(len(heading)) * frame_s, heading

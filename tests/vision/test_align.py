@@ -72,7 +72,7 @@ def test_light_that_falls_off_and_a_change_of_gain_do_not_matter():
 
 
 def test_a_tone_curve_bends_edges_but_not_angles():
-    """Whatever a bent tone curve does to a marker turns with it: the angle is off by the same small amount everywhere."""
+    """What a bent tone curve does to a marker turns with it: the angle is off by the same small amount everywhere."""
     square = UNIT_CORNERS * 38.0
     off_deg = []
     for turn_rad in np.deg2rad([10, 55, 100, 145, 190, 235]):

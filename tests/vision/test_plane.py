@@ -117,7 +117,8 @@ def board():
     data = numbers("opencv-left-corners.csv")
     views = columns("opencv-left-corners.csv")["view"]
     names = sorted(set(views))
-    seen = [np.array([[u, v] for w, u, v in zip(views, data["u_px"], data["v_px"], strict=True) if w == n]) for n in names]
+    found = np.column_stack([data["u_px"], data["v_px"]])
+    seen = [found[np.array(views) == name] for name in names]
     grid = np.array([[c, r] for w, c, r in zip(views, data["col"], data["row"], strict=True) if w == names[0]])
     return grid * 25.0, seen
 

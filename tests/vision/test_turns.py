@@ -93,8 +93,8 @@ def test_two_pushes_are_one_turn():
 
 
 def test_driving_is_an_event():
-    time_s, heading = profile([90.0, 0.0, 90.0], rest_s=1.0)
-    x_mm = 120.0 / (1.0 + np.exp(-(time_s - 3.1) * 8.0))
+    time_s, heading = profile([90.0, 90.0], rest_s=3.0)
+    x_mm = 120.0 / (1.0 + np.exp(-(time_s - 5.6) * 8.0))  # in the middle of the second rest
     result = split(time_s, heading, x_mm=x_mm)
     assert_allclose(changes(result), [90.0, 90.0], atol=0.01)
     assert [event.kind for event in result.events] == ["driven"]
@@ -122,7 +122,8 @@ def test_uncertainty_holds_the_truth():
 
 def test_overshoot_and_settling():
     time_s, heading = profile([90.0])
-    ringing = 3.0 * np.exp(-(time_s - 1.75) / 0.08) * (time_s > 1.75)
+    stop_s = 1.93
+    ringing = 3.0 * np.exp(-(time_s - stop_s) / 0.08) * (time_s > stop_s)
     result = split(time_s, heading + ringing)
     assert result.turns[0].overshoot_deg > 1.0
     assert_allclose(changes(result), [90.0], atol=0.02)
