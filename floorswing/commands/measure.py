@@ -15,18 +15,14 @@ from floorswing.progress import Bars
 
 @click.command(short_help="Measure the turns in clips filmed from above.")
 @click.argument("clips", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="CLIP...")
-@click.option(
-    "--trial", required=True, type=click.Path(path_type=Path), help="Trial file (TOML) of these clips."
-)
+@click.option("--trial", required=True, type=click.Path(path_type=Path), help="Trial file (TOML) of these clips.")
 @click.option(
     "--out",
     required=True,
     type=click.Path(path_type=Path),
     help="Folder to write into; each clip gets a folder of its own there.",
 )
-@click.option(
-    "--continued", is_flag=True, help="The commands run on from one clip to the next, in this order."
-)
+@click.option("--continued", is_flag=True, help="The commands run on from one clip to the next, in this order.")
 @click.option("--json", "as_json", is_flag=True, help="Print the turns as JSON instead of tables.")
 def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as_json: bool) -> None:
     """Measure the turns in each CLIP and write them to a folder named after it.
@@ -68,6 +64,8 @@ def _report(one: Any, as_json: bool) -> None:
 
     for warning in one.warnings:
         click.echo(f"Warning: {about(one.source.path, warning)}", err=True)
+    if (one.folder / "fit.json").exists():
+        click.echo(f"Warning: {one.folder / 'fit.json'} is of an earlier measurement; fit again", err=True)
     if as_json:
         return
     click.echo(turns_table(one.turns))
