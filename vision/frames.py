@@ -98,6 +98,7 @@ class Clip:
         self.problems: list[str] = []
         """What went wrong while reading, a sentence each; complete once `frames` is exhausted."""
         self._stop = threading.Event()
+        self._worker: threading.Thread | None = None
 
     def __enter__(self) -> Self:
         return self
@@ -108,12 +109,14 @@ class Clip:
         self.close()
 
     def close(self) -> None:
-        """Stop the decoder thread and close the file."""
+        """Stop the decoder thread, wait for it, and only then close the file that it reads."""
         self._stop.set()
+        if self._worker is not None:
+            self._worker.join()
         self._container.close()
 
     def frames(self) -> Iterator[Frame]:
-        """Yield the frames in presentation order, decoding ahead in a thread of its own.
+        """Yield the frames in presentation order, once, decoding ahead in a thread of its own.
 
         Raises
         ------
@@ -121,24 +124,19 @@ class Clip:
             If not a single frame can be decoded.
         """
         waiting: queue.Queue[Frame | BaseException | None] = queue.Queue(maxsize=FRAMES_AHEAD)
-        worker = threading.Thread(target=self._decode_into, args=(waiting,), name="decode", daemon=True)
-        worker.start()
+        self._worker = threading.Thread(target=self._decode_into, args=(waiting,), name="decode", daemon=True)
+        self._worker.start()
+        n_frames = 0
         try:
-            n_frames = 0
             while (item := waiting.get()) is not None:
                 if isinstance(item, BaseException):
                     raise item
                 n_frames += 1
                 yield item
-            if n_frames == 0:
-                raise ClipError(f"{self.path.name}: no picture in it can be decoded; is the file complete?")
         finally:
             self._stop.set()
-            with contextlib.suppress(queue.Empty):
-                while True:
-                    waiting.get_nowait()
-            worker.join()
-            self._stop.clear()
+        if n_frames == 0:
+            raise ClipError(f"{self.path.name}: no picture in it can be decoded; is the file complete?")
 
     def _decode_into(self, waiting: queue.Queue[Frame | BaseException | None]) -> None:
         try:
