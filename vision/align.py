@@ -250,11 +250,12 @@ def _render(
     still = to_crop @ template.unit_from_sample
     if not smear:
         return _warped(template, still, size)
-    shift = np.array([[1.0, 0.0, origin_px[0]], [0.0, 1.0, origin_px[1]], [0.0, 0.0, 1.0]])
+    there = np.array([[1.0, 0.0, origin_px[0]], [0.0, 1.0, origin_px[1]], [0.0, 0.0, 1.0]])
+    back = np.array([[1.0, 0.0, -origin_px[0]], [0.0, 1.0, -origin_px[1]], [0.0, 0.0, 1.0]])
+    in_picture = there @ still
     total = np.zeros((shape[0] * shape[1], 4), dtype=np.float32)
     for motion in smear:
-        moved = np.linalg.inv(shift) @ motion @ shift @ still
-        total += _warped(template, moved, size)
+        total += _warped(template, back @ motion @ in_picture, size)
     total /= np.float32(len(smear))
     return total
 

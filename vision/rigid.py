@@ -30,8 +30,18 @@ def projected_slope(homography: FloatArray, points: FloatArray) -> tuple[FloatAr
 
 
 def inverse(map_: FloatArray) -> FloatArray:
-    """Return the inverse of a map, shape (3, 3)."""
-    return np.asarray(np.linalg.inv(map_), dtype=np.float64)
+    """Return the inverse of a map, shape (3, 3), by cofactors (NaN where it has none)."""
+    (a, b, c), (d, e, f), (g, h, i) = map_.tolist()
+    p, q, r = e * i - f * h, f * g - d * i, d * h - e * g
+    det = a * p + b * q + c * r
+    if det == 0.0:
+        return np.full((3, 3), np.nan)
+    cofactors = [
+        [p, c * h - b * i, b * f - c * e],
+        [q, a * i - c * g, c * d - a * f],
+        [r, b * g - a * h, a * e - b * d],
+    ]
+    return np.array(cofactors, dtype=np.float64) / np.float64(det)
 
 
 def rigid(turn_rad: float, x: float, y: float) -> FloatArray:

@@ -43,10 +43,22 @@ LOOK_AGAIN_S = 0.1
 EXPOSURE_TRIALS = (0.0, 0.15, 0.3, 0.5, 0.75, 1.0)
 """Exposure times tried, as shares of the frame interval."""
 
-EXPOSURE_VOTES = 6
+LEAST_SMEAR_PX = 1.0
+"""A shorter smear is no more than a little blur."""
+
+EXPOSURE_VOTES = 5
+
+JOINT_PX = 0.5
+"""A joint step smaller than this is left to the free corners."""
+
+MOVING_PX = 0.25
+"""Corners of a smeared picture need not be rendered again nearer than this."""
 
 HELD_PX = 0.12
 """While no corner is farther than this from where the pattern was last rendered, it is not rendered again."""
+
+STRANGE_NOISE = 2.5
+"""More than so many times the usual noise shows a glint, a shadow's edge or a finger on a marker."""
 
 HELD_NOISE = 1.6
 """Nor while the noise is not more than so many times what it was then."""
@@ -87,6 +99,7 @@ class PairTracker:
         self._last_s: float | None = None
         self._last_search_s = -np.inf
         self._lost = False
+        self._usual_noise = [np.inf, np.inf]
         self._held: tuple[Held, ...] = ()
         self._held_noise: tuple[float, ...] = ()
         self._last: tuple[tuple[slice, slice], LumaImage, Sight] | None = None
@@ -193,7 +206,7 @@ class PairTracker:
         before_px = self._plane_px
         plane_px = before_px @ rigid(*move)
         # Corners carry what the rigid model does not yet know; only their motion is predicted.
-        corners_px = project(plane_px @ np.linalg.inv(before_px), self._corners_px)
+        corners_px = project(plane_px @ inverse(before_px), self._corners_px)
         smear = self._smear(plane_px, move, step_s)
         found = self._joint(image, plane_px, corners_px, smear)
         if found is None:
@@ -209,17 +222,17 @@ class PairTracker:
         self, image: LumaImage, plane_px: FloatArray, corners_px: FloatArray, smear: tuple[FloatArray, ...]
     ) -> tuple[FloatArray, FloatArray, list[CornerFit | None]] | None:
         """Take joint rigid steps until they are small."""
-        for step in range(8):
+        for _ in range(8):
             fits = self._compare(image, corners_px, smear)
             move = self._joint_step(plane_px, fits)
             if move is None:
                 return None
             moved_px = plane_px @ rigid(*move)
-            after_px = project(moved_px @ np.linalg.inv(plane_px), corners_px)
+            after_px = project(moved_px @ inverse(plane_px), corners_px)
             largest_px = float(np.nanmax(np.abs(after_px - corners_px)))
             if not np.isfinite(largest_px) or largest_px > self._patterns[0].side_px:
                 return None
-            if largest_px < (0.12 if step else 0.06):
+            if largest_px < JOINT_PX:
                 return plane_px, corners_px, fits
             plane_px, corners_px = moved_px, after_px
         return plane_px, corners_px, self._compare(image, corners_px, smear)
@@ -284,22 +297,33 @@ class PairTracker:
         self, image: LumaImage, m: int, fit: CornerFit, smear: tuple[FloatArray, ...]
     ) -> tuple[FloatArray, CornerFit] | None:
         side_px = self._patterns[m].side_px
-        robust = False
+        near_px = MOVING_PX if smear else HELD_PX
         for _ in range(4):
             move = fit.move_px
             largest_px = float(np.abs(move).max())
             if not np.isfinite(largest_px) or largest_px > 0.25 * side_px:
                 return None
-            if largest_px < 0.12:
+            if largest_px < near_px:
                 break
             again = fit_corners(
                 image, fit.corners_px + move, self._patterns[m].sharp, smear=smear,
-                robust=robust,
             )  # fmt: skip
             if again is None or again.explained < HOLD:
                 return None
             fit = again
-        return fit.corners_px + move, fit
+        if not smear:
+            fit = self._without_strangers(image, m, fit)
+        return fit.corners_px + fit.move_px, fit
+
+    def _without_strangers(self, image: LumaImage, m: int, fit: CornerFit) -> CornerFit:
+        """Where there is more noise than usual, compare once more with little weight on what is not the marker."""
+        usual = self._usual_noise[m]
+        if fit.noise_var <= STRANGE_NOISE * usual:
+            self._usual_noise[m] = fit.noise_var if not np.isfinite(usual) else 0.9 * usual + 0.1 * fit.noise_var
+            return fit
+        sturdy = fit_corners(image, fit.corners_px + fit.move_px, self._patterns[m].sharp, robust=True)
+        known = sturdy is not None and np.abs(sturdy.move_px).max() < 0.1 * self._patterns[m].side_px
+        return sturdy if known and sturdy is not None else fit
 
     def _accept(self, plane_px: FloatArray, corners_px: FloatArray, settled: FloatArray, step_s: float) -> None:
         """Move the remembered pose and corners on; mend the plane where the rigid pair no longer fits it."""
@@ -335,10 +359,10 @@ class PairTracker:
 
     def _smear_for(self, plane_px: FloatArray, move: FloatArray, share: float) -> tuple[FloatArray, ...]:
         reach_px = share * self._reach_px(plane_px, move)
-        if reach_px < 0.7:
+        if reach_px < LEAST_SMEAR_PX:
             return ()
-        n_looks = min(2 * int(np.ceil(reach_px / 1.6)) + 1, 11)
-        back = np.linalg.inv(plane_px)
+        n_looks = min(2 * int(np.ceil(reach_px / 3.0)) + 1, 11)
+        back = inverse(plane_px)
         shares = (np.arange(n_looks) - 0.5 * (n_looks - 1)) / n_looks * share
         return tuple(plane_px @ rigid(*(part * move)) @ back for part in shares)
 
@@ -382,7 +406,7 @@ class PairTracker:
     def _soft_pose(self, image: LumaImage, move: FloatArray) -> tuple[float, FloatArray] | None:
         """Return how well a softened picture is explained near a motion, and the motion found."""
         before_px = self._plane_px
-        back = np.linalg.inv(before_px)
+        back = inverse(before_px)
         plane_px = before_px @ rigid(*move)
         explained = -1.0
         for _ in range(5):
