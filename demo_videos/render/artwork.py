@@ -8,23 +8,30 @@ from numpy.typing import NDArray
 
 from demo_videos.render.printed import blotches, marker_picture, modules_of, n_modules
 from demo_videos.render.scene import Camera, Card, Mount, Robot
-from demo_videos.render.sheets import BLANK, Sheet, reduced, split
+from demo_videos.render.sheets import BLANK, Sheet, reduced, softened
 
 FloatImage = NDArray[np.float32]
 
+MARKER_SAMPLES = 8
+"""Samples a pixel and side for markers that stand still."""
 TREAD_PHASES = 6
 TREAD_PITCH_MM = 5.0
 
 
 def mm_per_px(camera: Camera, z_mm: float) -> float:
-    """Return the floor length that a pixel covers at the look-at point raised by `z_mm`."""
-    depth_mm = camera.distance_mm - z_mm * np.cos(np.deg2rad(camera.tilt_deg))
-    return float(depth_mm / camera.focal_px)
+    """Return the length in mm that a pixel covers at the look-at point raised by `z_mm`, mean of both axes."""
+    lean = np.cos(np.deg2rad(camera.tilt_deg))
+    return float((camera.distance_mm - z_mm * lean) / camera.focal_px / np.sqrt(lean))
 
 
-def with_levels(picture: FloatImage) -> dict[int, tuple[FloatImage, FloatImage]]:
-    """Return the picture for 4, 2 and 1 samples a pixel and side."""
-    return {4: split(picture), 2: split(reduced(picture, 2)), 1: split(reduced(picture, 4))}
+def with_levels(picture: FloatImage, finest: int = 4) -> dict[int, tuple[FloatImage, FloatImage]]:
+    """Return the picture for `finest` samples a pixel and side, and for each half of that down to one."""
+    levels = {}
+    factor = 1
+    while factor <= finest:
+        levels[finest // factor] = softened(picture if factor == 1 else reduced(picture, factor))
+        factor *= 2
+    return levels
 
 
 def marker_sheet(
@@ -43,11 +50,11 @@ def marker_sheet(
     if item.mirrored:
         modules = modules[:, ::-1]
     count = n_modules(dictionary)
-    texels = max(4, 4 * round(side_mm / count / mm_px))
+    texels = max(16, 8 * round(2.0 * side_mm / count / mm_px))
     picture = marker_picture(
         modules,
         texels=texels,
-        quiet_modules=quiet_modules,
+        quiet_texels=8 * round(quiet_modules * texels / 8),
         ink=item.ink,
         paper=item.paper,
         dirt=item.dirt,
@@ -63,7 +70,7 @@ def marker_sheet(
         picture = creased(picture, item.crease_deg)
         relief = lambda x, _y: slope * np.maximum(x, 0.0)  # noqa: E731
     return Sheet(
-        pictures=with_levels(picture),
+        pictures=with_levels(picture, MARKER_SAMPLES),
         width_mm=width_mm,
         height_mm=width_mm,
         x_mm=item.x_mm,
@@ -161,7 +168,7 @@ def shadow_sheet(robot: Robot) -> Sheet:
     inset = round(margin_mm * per_mm)
     picture[inset : rows - inset, inset : cols - inset, 1] = 0.62
     picture[..., 1] = cv2.GaussianBlur(picture[..., 1], (0, 0), 16.0 * per_mm)
-    layers = split(rimmed(picture))
+    layers = softened(rimmed(picture))
     return Sheet(
         pictures={4: layers, 2: layers, 1: layers},
         width_mm=width_mm,
@@ -176,7 +183,7 @@ def shadow_sheet(robot: Robot) -> Sheet:
 def block_sheet(robot: Robot, z_mm: float, reflectance: float, mm_px: float) -> Sheet:
     """Return a dark cut through the body, a little smaller than the deck, so that its sides show in perspective."""
     width_mm, height_mm = robot.deck_length_mm - 10, robot.deck_width_mm - 8
-    picture, per_mm = canvas(width_mm, height_mm, mm_px / 4)
+    picture, per_mm = canvas(width_mm, height_mm, mm_px / 8)
     picture[..., 1] = rounded_mask(picture.shape[:2], 10 * per_mm)
     picture[..., 0] = reflectance * picture[..., 1]
     return Sheet(
@@ -191,9 +198,7 @@ def block_sheet(robot: Robot, z_mm: float, reflectance: float, mm_px: float) -> 
 
 def deck_sheet(robot: Robot, camera: Camera, seed: int) -> Sheet:
     """Return the deck: a grey board with light rails, four screws, and a rack of seed packets in the middle."""
-    picture, per_mm = canvas(
-        robot.deck_length_mm, robot.deck_width_mm, mm_per_px(camera, robot.deck_height_mm) / 4
-    )
+    picture, per_mm = canvas(robot.deck_length_mm, robot.deck_width_mm, mm_per_px(camera, robot.deck_height_mm) / 8)
     rows, cols = picture.shape[:2]
     board = np.full((rows, cols), 0.24, dtype=np.float32)
     board *= 1.0 + 0.05 * cv2.GaussianBlur(
@@ -265,7 +270,7 @@ def wheel_sheets(robot: Robot, camera: Camera) -> list[list[Sheet]]:
     z_mm = 0.8 * robot.wheel_diameter_mm
     length_mm = 0.8 * robot.wheel_diameter_mm
     offset_mm = 0.5 * (robot.inner_track_mm + robot.tyre_width_mm)
-    picture, per_mm = canvas(length_mm, robot.tyre_width_mm, mm_per_px(camera, z_mm) / 4)
+    picture, per_mm = canvas(length_mm, robot.tyre_width_mm, mm_per_px(camera, z_mm) / 8)
     rows, cols = picture.shape[:2]
     along_mm = (np.arange(cols) / per_mm)[None, :]
     across = np.abs(np.linspace(-1, 1, rows))[:, None]

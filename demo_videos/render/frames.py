@@ -177,14 +177,14 @@ class Renderer:
         self.ground_key, self.cart_key = key, None
         count = 1 if self.steady else self.camera_poses(time_s)
         total = np.zeros((self.height, self.width), dtype=np.float32)
-        samples = 4 if self.steady else 1
+        samples = artwork.MARKER_SAMPLES if self.steady else 4
         for sub_time_s in self.sub_times(time_s, count):
             times = np.array([sub_time_s])
             if not self.steady and self.scene.sensor.line_delay_s:
                 times = sub_time_s + self.row_delays(PAD_PX)
             total += self.draw_ground(view_at(self.scene.camera, times), cards, samples)
         self.ground = total / np.float32(count)
-        sigma = np.sqrt(max(psf_px**2 - extra_variance_px2(4), 0.0))
+        sigma = np.sqrt(max(psf_px**2 - extra_variance_px2(samples), 0.0))
         self.soft_ground = blur(self.ground * self.light, float(sigma))
 
     def camera_poses(self, time_s: float) -> int:
@@ -197,13 +197,13 @@ class Renderer:
         return poses_for(2.0 * float(np.hypot(*(px[:, -1] - px[:, 0]).T).max()))
 
     def draw_ground(self, view: View, cards: tuple[Card, ...], samples: int) -> FloatImage:
-        """Return the reflectance of floor and cards."""
-        ground = draw_floor(self.scene, self.floor, self.rays, view, samples)
+        """Return the reflectance of floor and cards, the cards with `samples` a pixel and side."""
+        ground = draw_floor(self.scene, self.floor, self.rays, view, 4 if self.steady else 1)
         patch = Patch(0, 0, *self.rays, *self.coarse_rays, ground)
         for card in cards:
             sheet = artwork.card_sheet(card, self.scene.robot, self.scene.camera, self.scene.seed)
             box = box_of(sheet, FLOOR, view, self.scene.camera, PAD_PX)
-            draw(patch, sheet, FLOOR, view, box, 4)
+            draw(patch, sheet, FLOOR, view, box, samples)
         return ground
 
     # --- the cart ---
@@ -241,7 +241,7 @@ class Renderer:
         if whole.empty:
             return inner, self.light[:0, :0], None
         count = self.cart_poses(span, still)
-        samples = 4 if count <= 2 else 2
+        samples = artwork.MARKER_SAMPLES if count <= 2 else 4 if count <= 4 else 2
         area = slice(outer.top, outer.bottom), slice(outer.left, outer.right)
         total = self.exposed_cart(self.patch_at(outer), boxes, time_s, motion, still, count, samples)
         sigma = float(np.sqrt(max(psf_px**2 - extra_variance_px2(samples), 0.0)))
@@ -275,7 +275,7 @@ class Renderer:
         for group in np.array_split(times, min(count, BODY_POSES)):
             base = ground.copy()
             instant = middle if count == 1 else self.instant_at(float(group.mean()), motion, still)
-            self.paint_body(base, boxes, instant, 4 if samples == 4 else 1)
+            self.paint_body(base, boxes, instant, 4 if count <= 2 else 1)
             total.light += base.light * np.float32(len(group))
             if total.gloss is not None and base.gloss is not None:
                 total.gloss += base.gloss * np.float32(len(group))

@@ -194,9 +194,7 @@ class Motion:
     def at(self, time_s: ArrayLike) -> Poses:
         """Return the body's pose at M times; before the start and after the end it stands still."""
         times = np.atleast_1d(np.asarray(time_s, dtype=float))
-        x, y, heading, lift, pitch, roll, left, right = (
-            np.interp(times, self.time_s, row) for row in self.state
-        )
+        x, y, heading, lift, pitch, roll, left, right = (np.interp(times, self.time_s, row) for row in self.state)
         return Poses(x, y, heading, lift, pitch, roll, np.stack([left, right]))
 
     def heading_deg(self, time_s: ArrayLike) -> FloatArray:

@@ -36,7 +36,7 @@ def marker_picture(
     modules: NDArray[np.bool_],
     *,
     texels: int,
-    quiet_modules: float,
+    quiet_texels: int,
     ink: float,
     paper: float,
     dirt: float = 0.0,
@@ -47,9 +47,8 @@ def marker_picture(
     Module edges fall exactly on texel edges; `texels` is the number of texels along a module. Two clear texels
     surround the paper.
     """
-    quiet = round(quiet_modules * texels)
     inside = np.kron(modules, np.ones((texels, texels), dtype=bool))
-    sheet = np.pad(np.where(inside, paper, ink), quiet, constant_values=paper).astype(np.float32)
+    sheet = np.pad(np.where(inside, paper, ink), quiet_texels, constant_values=paper).astype(np.float32)
     if dirt > 0.0:
         sheet *= 1.0 - 0.6 * blotches(sheet.shape, dirt, texels * 1.5, seed)
     picture = np.stack([sheet, np.ones_like(sheet)], axis=-1)
