@@ -99,6 +99,8 @@ class PairTracker:
         self._last_s: float | None = None
         self._last_search_s = -np.inf
         self._lost = False
+        self._tuned_at_rest = False
+        self._has_moved = False
         self._usual_noise = [np.inf, np.inf]
         self._held: tuple[Held, ...] = ()
         self._held_noise: tuple[float, ...] = ()
@@ -172,12 +174,30 @@ class PairTracker:
             return False
         return bool(np.abs(fit.move_px).max() < HELD_PX) and fit.noise_var < HELD_NOISE * noise_var
 
-    def _grip(self, fits: list[CornerFit | None], smear: tuple[FloatArray, ...]) -> None:
+    def _retune(self, image: LumaImage) -> bool:
+        """Find the optics again at the first rest of a clip that did not begin with one; True if they changed."""
+        black = tuple(pattern.black for pattern in self._patterns)
+        optics, _ = tune_optics(image, self._corners_px, black)
+        if optics == self.optics:
+            return False
+        self.optics = optics
+        self._patterns = tuple(
+            build_pattern(pattern.black, pattern.side_px, optics) for pattern in self._patterns
+        )
+        self._usual_noise = [np.inf, np.inf]
+        return True
+
+    def _grip(self, image: LumaImage, fits: list[CornerFit | None], smear: tuple[FloatArray, ...]) -> None:
         """Keep the comparisons of a robot that seems to stand, to be used again on the next frame."""
         self._held, self._held_noise = (), ()
         known = [fit for fit in fits if fit is not None]
         if smear or len(known) < 2 or self._reach_px(self._plane_px, self._rate / 30.0) > HELD_PX:
+            self._has_moved = True
             return
+        if not self._tuned_at_rest:
+            self._tuned_at_rest = True
+            if self._has_moved and self._retune(image):
+                return
         self._held = tuple(Held(fit) for fit in known)
         self._held_noise = tuple(fit.noise_var for fit in known)
 
@@ -290,7 +310,7 @@ class PairTracker:
         if not any(fit is not None for fit in kept):
             return None
         self._accept(plane_px, corners_px, settled, step_s)
-        self._grip(kept, smear)
+        self._grip(image, kept, smear)
         return _sight(settled, kept, _largest_move(smear, self._corners_px))
 
     def _free_marker(
