@@ -68,6 +68,17 @@ def frame_times(timing: Timing, motion: Motion, seed: int) -> FloatArray:
     return out
 
 
+def stamp_times(timing: Timing, times: FloatArray, seed: int) -> FloatArray:
+    """Return the frames' time stamps, from 0; a share of them repeats the stamp before."""
+    stamps = times - times[0]
+    if timing.repeated_share:
+        rng = np.random.default_rng([seed, 80])
+        for index in range(1, len(stamps)):
+            if rng.random() < timing.repeated_share:
+                stamps[index] = stamps[index - 1]
+    return stamps
+
+
 @dataclass(frozen=True, eq=False)
 class Instant:
     """Camera and body for one sub-exposure: one pose, or one for each row of the padded picture."""
@@ -94,6 +105,7 @@ class Renderer:
         self.sheets = artwork.robot_sheets(robot, camera, scene.seed)
         self.plates = [sheet for sheet in self.sheets if sheet.precise]
         self.wheels = artwork.wheel_sheets(robot, camera)
+        self.card_sheets: dict[Card, Sheet] = {}
         self.glints = [(glint, glint_field(glint, camera, PAD_PX)) for glint in scene.light.glints]
         self.development = Development(scene.sensor, camera.height_px, camera.width_px, scene.seed)
         self.ground_key: tuple[object, ...] | None = None
@@ -201,10 +213,21 @@ class Renderer:
         ground = draw_floor(self.scene, self.floor, self.rays, view, 4 if self.steady else 1)
         patch = Patch(0, 0, *self.rays, *self.coarse_rays, ground)
         for card in cards:
-            sheet = artwork.card_sheet(card, self.scene.robot, self.scene.camera, self.scene.seed)
+            sheet = self.card_sheet(card)
             box = box_of(sheet, FLOOR, view, self.scene.camera, PAD_PX)
             draw(patch, sheet, FLOOR, view, box, samples)
         return ground
+
+    def card_sheet(self, card: Card) -> Sheet:
+        """Return the sheet of a card, drawn once however often it moves."""
+        key = replace(card, x_mm=0.0, y_mm=0.0, angle_deg=0.0, shifts=())
+        if key not in self.card_sheets:
+            self.card_sheets[key] = artwork.card_sheet(key, self.scene.robot, self.scene.camera, self.scene.seed)
+        return replace(self.card_sheets[key], x_mm=card.x_mm, y_mm=card.y_mm, angle_deg=card.angle_deg)
+
+    def view_now(self, time_s: float) -> View:
+        """Return the camera's pose at one time."""
+        return self.view if not self.scene.camera.moves else view_at(self.scene.camera, time_s)
 
     # --- the cart ---
 

@@ -219,6 +219,8 @@ class Timing:
     jitter: float = 0.0
     """Standard deviation of a frame interval, relative to the nominal one."""
     dropped_share: float = 0.0
+    repeated_share: float = 0.0
+    """Share of frames whose time stamp is wrong: that of the frame before (Matroska only)."""
     slow_spans: tuple[tuple[float, float, float], ...] = ()
     """(start, end, fps): stretches in which the camera lowers its rate."""
 
