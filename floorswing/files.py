@@ -67,9 +67,7 @@ def write_measurement(measurement: Measurement, out: Path | str) -> Measurement:
         HEADING_FILE: heading_csv(measurement.track),
         MEASUREMENT_FILE: measurement_json(measurement),
     }
-    return replace(
-        measurement, folder=write_folder(Path(out), measurement.name, contents, mark=MEASUREMENT_FILE)
-    )
+    return replace(measurement, folder=write_folder(Path(out), measurement.name, contents, mark=MEASUREMENT_FILE))
 
 
 def read_measurement(folder: Path | str, *, with_track: bool = False) -> Measurement:
@@ -89,9 +87,7 @@ def read_measurement(folder: Path | str, *, with_track: bool = False) -> Measure
     """
     folder = Path(folder)
     if not folder.is_dir():
-        raise FileError(
-            f"{folder}: {'is not a folder' if folder.exists() else 'no such folder'}; {_EXPECTED}"
-        )
+        raise FileError(f"{folder}: {'is not a folder' if folder.exists() else 'no such folder'}; {_EXPECTED}")
     path = folder / MEASUREMENT_FILE
     document = read_json(path, KIND, "floorswing measure")
     turns = read_turns(folder)
@@ -113,9 +109,7 @@ def read_measurement(folder: Path | str, *, with_track: bool = False) -> Measure
             warnings=tuple(document["warnings"]),
         )
     except (KeyError, TypeError, ValueError, AttributeError) as error:
-        raise FileError(
-            f"{path}: does not hold what `floorswing measure` writes ({error!r}); {_AGAIN}"
-        ) from error
+        raise FileError(f"{path}: does not hold what `floorswing measure` writes ({error!r}); {_AGAIN}") from error
 
 
 _EXPECTED = "expected a folder that `floorswing measure` wrote for a clip"
@@ -165,9 +159,9 @@ def plain(value: object) -> Any:
         return plain(value.item())
     if isinstance(value, float):
         return value if math.isfinite(value) else None
-    if value is None or isinstance(value, bool | int | str):
+    if value is None or isinstance(value, bool | int):
         return value
-    return str(value)
+    return str(value).encode("utf-8", "replace").decode("utf-8")  # a file's name may be no text
 
 
 def read_json(path: Path, kind: str, command: str) -> dict[str, Any]:
@@ -194,9 +188,7 @@ def read_json(path: Path, kind: str, command: str) -> dict[str, Any]:
     if not isinstance(document, dict) or document.get("kind") != kind:
         raise FileError(f'{path}: not a file that `{command}` writes; its key kind is not "{kind}"')
     if document.get("format") != FORMAT:
-        raise FileError(
-            f"{path}: format {document.get('format')!r} where {FORMAT} is read; use `{command}` again"
-        )
+        raise FileError(f"{path}: format {document.get('format')!r} where {FORMAT} is read; use `{command}` again")
     return document
 
 
@@ -218,9 +210,7 @@ def events_csv(events: Iterable[Event]) -> str:
 
 def heading_csv(track: PoseTrack) -> str:
     """Return the text of ``heading.csv``."""
-    columns = [
-        [_cell(value, n) for value in getattr(track, name).tolist()] for name, n in HEADING_DECIMALS.items()
-    ]
+    columns = [[_cell(value, n) for value in getattr(track, name).tolist()] for name, n in HEADING_DECIMALS.items()]
     return _csv(HEADING_COLUMNS, zip(*columns, track.state, strict=True))
 
 
@@ -367,7 +357,6 @@ def read_heading(path: Path | str) -> PoseTrack:
     table = _Table(_file_in(path, HEADING_FILE), HEADING_COLUMNS)
     records = list(table.records())
     columns = {
-        name: np.array([table.number(line, fields, name) for line, fields in records])
-        for name in HEADING_DECIMALS
+        name: np.array([table.number(line, fields, name) for line, fields in records]) for name in HEADING_DECIMALS
     }
     return PoseTrack(state=tuple(fields["state"] for _, fields in records), **columns)

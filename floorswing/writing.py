@@ -54,7 +54,7 @@ def write_whole(path: Path | str, content: str | bytes) -> Path:
 
 def _write_flushed(path: Path, content: str | bytes) -> None:
     with path.open("wb") as file:
-        file.write(content.encode("utf-8") if isinstance(content, str) else content)
+        file.write(content.encode("utf-8", "replace") if isinstance(content, str) else content)
         file.flush()
         os.fsync(file.fileno())
 
@@ -158,9 +158,7 @@ def _replaceable(target: Path, out: Path, mark: str) -> Path:
         if not target.is_dir():
             raise FileError(f"{target}: a file is in the way; move it or choose another output folder")
         if any(target.iterdir()) and not (target / mark).exists():
-            raise FileError(
-                f"{target}: holds other files and no {mark}; move it or choose another output folder"
-            )
+            raise FileError(f"{target}: holds other files and no {mark}; move it or choose another output folder")
     return target
 
 

@@ -21,9 +21,7 @@ FASTEST_OF = 5
 
 
 def run(*arguments: str) -> subprocess.CompletedProcess[str]:
-    return subprocess.run(
-        [sys.executable, "-m", "floorswing", *arguments], capture_output=True, text=True, timeout=60
-    )
+    return subprocess.run([sys.executable, "-m", "floorswing", *arguments], capture_output=True, text=True, timeout=60)
 
 
 def test_the_list_shows_every_command_in_its_own_words():
@@ -75,9 +73,7 @@ def test_version_and_list_load_no_numerical_library():
         "print(sorted({'numpy', 'scipy', 'cv2', 'av'} & set(sys.modules)))"
     )
     for option in ("--version", "--help"):
-        result = subprocess.run(
-            [sys.executable, "-c", code, option], capture_output=True, text=True, check=True
-        )
+        result = subprocess.run([sys.executable, "-c", code, option], capture_output=True, text=True, check=True)
         assert result.stdout.splitlines()[-1] == "[]"
 
 

@@ -42,6 +42,7 @@ def test_there_are_three_small_clips_of_three_kinds():
         assert signs == {1.0, -1.0}
 
 
+@pytest.mark.slow
 def test_the_demo_runs_and_says_what_to_look_at(demo_run: DemoRun):
     assert demo_run.code == 0, demo_run.stderr
     assert "Traceback" not in demo_run.stderr
@@ -54,6 +55,7 @@ def test_the_demo_runs_and_says_what_to_look_at(demo_run: DemoRun):
         assert (demo_run.folder.parent / path).exists(), path
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("name", CLIPS)
 def test_every_turn_is_found_matched_and_within_its_promise(demo_run: DemoRun, name: str):
     measurement = read_measurement(demo_run.folder / name)
@@ -67,6 +69,7 @@ def test_every_turn_is_found_matched_and_within_its_promise(demo_run: DemoRun, n
     assert all(turn.flags == () for turn in measurement.turns)
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("name", CLIPS)
 def test_the_files_of_a_clip_agree_with_each_other(demo_run: DemoRun, name: str):
     measurement = read_measurement(demo_run.folder / name, with_track=True)
@@ -93,6 +96,7 @@ def run(*arguments: object, cwd: Path) -> subprocess.CompletedProcess[str]:
     return subprocess.run(command, cwd=cwd, capture_output=True, text=True, timeout=300)
 
 
+@pytest.mark.slow
 def test_commands_that_do_not_fit_a_real_clip(tmp_path: Path):
     clip = CLIPS["lino_mixed"]
     trial = tmp_path / "t.toml"
@@ -106,6 +110,7 @@ def test_commands_that_do_not_fit_a_real_clip(tmp_path: Path):
     assert not (tmp_path / "out").exists()
 
 
+@pytest.mark.slow
 def test_wrong_ids_and_half_wrong_ids_on_a_real_clip(tmp_path: Path):
     """Rounds off the faults that need a real picture: no marker of these ids, and one only."""
     clip = CLIPS["lino_mixed"]
@@ -160,9 +165,7 @@ def test_missing_clips_are_said(tmp_path: Path):
 
 
 def test_the_sentence_on_the_truth_counts_what_went_wrong():
-    wrong = TruthCheck(
-        n_true=5, n_found=4, n_invented=2, n_right_command=3, n_within=2, rms_deg=0.1234, worst_deg=0.2
-    )
+    wrong = TruthCheck(n_true=5, n_found=4, n_invented=2, n_right_command=3, n_within=2, rms_deg=0.1234, worst_deg=0.2)
     assert truth_sentence(wrong) == (
         "Against the truth: 4 of 5 turns found, 2 invented, 3 with the right command; heading changes off by "
         "0.12 degrees (root mean square), 0.20 at most; 2 of 4 within their stated 95 % interval."

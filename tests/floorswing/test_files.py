@@ -81,9 +81,7 @@ def test_the_columns_are_those_documented(measurement: Measurement, tmp_path: Pa
     assert (folder / "heading.csv").read_text().splitlines()[0] == (
         "time_s,heading_deg,u_heading_deg,x_mm,y_mm,scale,residual_px,state"
     )
-    assert (folder / "heading.csv").read_text().splitlines()[
-        4
-    ] == "0.30000,,,0.000,0.000,1.000000,0.0300,hidden"
+    assert (folder / "heading.csv").read_text().splitlines()[4] == "0.30000,,,0.000,0.000,1.000000,0.0300,hidden"
 
 
 def test_everything_comes_back(measurement: Measurement, tmp_path: Path):
@@ -161,9 +159,7 @@ def test_any_turn_comes_back(
     flags: tuple[str, ...],
     factor: str,
 ):
-    rest = dict.fromkeys(
-        set(TURN_COLUMNS) - {"turn", "heading_change_deg", "commanded_wheel_deg", "flags"}, 1.0
-    )
+    rest = dict.fromkeys(set(TURN_COLUMNS) - {"turn", "heading_change_deg", "commanded_wheel_deg", "flags"}, 1.0)
     turn = MeasuredTurn(
         turn=1,
         heading_change_deg=heading_change_deg,
@@ -208,9 +204,7 @@ DAMAGE = {
 
 
 @pytest.mark.parametrize("damage", DAMAGE)
-def test_a_damaged_table_is_refused_with_line_and_column(
-    measurement: Measurement, tmp_path: Path, damage: str
-):
+def test_a_damaged_table_is_refused_with_line_and_column(measurement: Measurement, tmp_path: Path, damage: str):
     folder = write_measurement(measurement, tmp_path).folder
     assert folder is not None
     (old, new), message = DAMAGE[damage]

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import os
+import sys
 from collections.abc import Callable
 from pathlib import Path
 
@@ -11,6 +13,7 @@ from click.testing import CliRunner, Result
 
 import floorswing
 from floorswing.cli import cli
+from floorswing.files import read_measurement
 from vision.errors import ClipError, MarkersNotFound
 
 from .conftest import Fake, clip_result
@@ -28,9 +31,7 @@ def out(tmp_path: Path) -> Path:
     return tmp_path / "out"
 
 
-def test_prints_a_table_a_sentence_and_the_folder(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_prints_a_table_a_sentence_and_the_folder(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     fake_pipeline(cork=clip_result(GOOD))
     path = clip("cork.mp4")
     result = measure(path, "--trial", trial_file, "--out", out)
@@ -45,9 +46,7 @@ def test_prints_a_table_a_sentence_and_the_folder(
     assert result.stderr == f"Warning: {path}: the light changed\n"
 
 
-def test_json_is_all_there_is_on_standard_output(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_json_is_all_there_is_on_standard_output(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     fake_pipeline(a=clip_result(GOOD), b=clip_result(GOOD[:3]))
     result = measure(clip("a.mp4"), clip("b.mp4"), "--trial", trial_file, "--out", out, "--json")
     a, b = json.loads(result.stdout)
@@ -71,9 +70,7 @@ def failures(result: Result) -> list[str]:
     return [line for line in result.stderr.splitlines() if line.startswith("Error")]
 
 
-def test_one_failing_clip_is_one_line_and_exit_code_1(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_one_failing_clip_is_one_line_and_exit_code_1(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     a, b = clip("a.mp4"), clip("b.mp4")
     fake_pipeline(a=MarkersNotFound(f"{a}: no marker with id 0 or 1"), b=clip_result(GOOD))
     result = measure(a, b, "--trial", trial_file, "--out", out)
@@ -82,9 +79,7 @@ def test_one_failing_clip_is_one_line_and_exit_code_1(
     assert [path.name for path in out.iterdir()] == ["b"]
 
 
-def test_no_markers_in_the_only_clip_is_exit_code_1(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_no_markers_in_the_only_clip_is_exit_code_1(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     a = clip("a.mp4")
     fake_pipeline(a=MarkersNotFound("no marker with id 0 or 1"))
     result = measure(a, "--trial", trial_file, "--out", out)
@@ -93,9 +88,7 @@ def test_no_markers_in_the_only_clip_is_exit_code_1(
     assert not out.exists()
 
 
-def test_a_file_that_is_no_clip_is_exit_code_2(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_a_file_that_is_no_clip_is_exit_code_2(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     a = clip("a.txt")
     fake_pipeline(a=ClipError("a.txt: not a clip"))
     result = measure(a, "--trial", trial_file, "--out", out)
@@ -103,9 +96,7 @@ def test_a_file_that_is_no_clip_is_exit_code_2(
     assert failures(result) == [f"Error: {a}: not a clip"]
 
 
-def test_commands_that_do_not_fit_are_exit_code_2(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_commands_that_do_not_fit_are_exit_code_2(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     fake_pipeline(a=clip_result([45.0, -180, 90, 45, -60, -30, 20, 135, 90, 180, 270, -45]))
     result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
     assert result.exit_code == 2
@@ -114,9 +105,7 @@ def test_commands_that_do_not_fit_are_exit_code_2(
     assert not out.exists()
 
 
-def test_wrong_paths_are_one_line_and_exit_code_2(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path
-):
+def test_wrong_paths_are_one_line_and_exit_code_2(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     a = clip("a.mp4")
     for arguments in [
         ("no.mp4", "--trial", trial_file, "--out", out),
@@ -159,3 +148,15 @@ def test_the_function_writes_what_the_command_writes(
     floorswing.measure(path, trial_file, tmp_path / "again")
     for file in sorted((out / "a").iterdir()):
         assert file.read_bytes() == (tmp_path / "again" / "a" / file.name).read_bytes()
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="elsewhere the system refuses such a name")
+def test_a_clip_whose_name_is_no_text_is_measured(fake_pipeline: Fake, tmp_path: Path, trial_file: Path, out: Path):
+    path = tmp_path / os.fsdecode(b"b\xffd.mp4")
+    path.write_bytes(b"clip")
+    fake_pipeline(**{path.stem: clip_result(GOOD)})
+    result = measure(path, "--trial", trial_file, "--out", out, "--json")
+    assert result.exit_code == 0, result.output
+    (one,) = json.loads(result.stdout)
+    assert one["folder"] == str(out / "b_d")
+    assert read_measurement(out / "b_d").name == "b_d"

@@ -32,9 +32,7 @@ def test_measures_and_writes(fake_pipeline: Fake, clip: MakeClip, trial_file: Pa
     assert document["clip"]["sha256"] == hashlib.sha256(b"not a real clip: cork.mp4").hexdigest()
     assert document["settings"]["markers"]["marker_side_mm"] == 40.0
     assert document["settings"]["doubtful_match_below"] == 0.95
-    assert {"floorswing", "python", "numpy", "scipy", "av", "opencv-python-headless"} <= set(
-        document["versions"]
-    )
+    assert {"floorswing", "python", "numpy", "scipy", "av", "opencv-python-headless"} <= set(document["versions"])
     assert "unknown" not in document["versions"].values()
     assert document["plane"]["tilt_deg"] == 12.5
     assert document["budget"][0]["name"] == "rest before"
@@ -69,9 +67,7 @@ def test_the_only_clip_raises_its_own_error(fake_pipeline: Fake, clip: MakeClip,
         measure(clip("a.mp4"), trial_file)
 
 
-def test_the_same_stem_twice_gets_two_folders(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, tmp_path: Path
-):
+def test_the_same_stem_twice_gets_two_folders(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, tmp_path: Path):
     fake_pipeline(run=clip_result(GOOD))
     measure([clip("a/run.mp4"), clip("b/run.mov")], trial_file, tmp_path / "out")
     assert folders_in(tmp_path / "out") == ["run", "run-2"]
@@ -82,9 +78,7 @@ def test_the_same_stem_twice_gets_two_folders(
     assert len(digests) == 2
 
 
-def test_each_clip_shows_all_commands_unless_they_run_on(
-    fake_pipeline: Fake, clip: MakeClip, trial_file: Path
-):
+def test_each_clip_shows_all_commands_unless_they_run_on(fake_pipeline: Fake, clip: MakeClip, trial_file: Path):
     fake_pipeline(a=clip_result(GOOD[:2]), b=clip_result(GOOD[2:]))
     clips = [clip("a.mp4"), clip("b.mp4")]
     apart = measure(clips, trial_file)

@@ -25,9 +25,7 @@ ALL = {
     "--wheel-deg": "190, 190; -190 -190.5",
 }
 NEEDED = {
-    name: value
-    for name, value in ALL.items()
-    if name not in ("--inner-track-mm", "--tyre-width-mm", "--card-side-mm")
+    name: value for name, value in ALL.items() if name not in ("--inner-track-mm", "--tyre-width-mm", "--card-side-mm")
 }
 
 

@@ -54,9 +54,7 @@ def detected(picture: np.ndarray, dictionary: str) -> list[tuple[int, np.ndarray
     stop = (cv2.TERM_CRITERIA_EPS + cv2.TERM_CRITERIA_MAX_ITER, 100, 1e-4)
     refined = [cv2.cornerSubPix(picture, quad.reshape(4, 1, 2), (9, 9), (-1, -1), stop) for quad in corners]
     # a pixel's centre is at whole numbers, the paper's corner half a pixel before the first one
-    return [
-        (number, (quad.reshape(4, 2) + 0.5) / PX_PER_MM) for number, quad in zip(found, refined, strict=True)
-    ]
+    return [(number, (quad.reshape(4, 2) + 0.5) / PX_PER_MM) for number, quad in zip(found, refined, strict=True)]
 
 
 @functools.cache
@@ -91,9 +89,7 @@ def test_both_bars_on_every_sheet_are_true(paper: str):
         _, _, stats, _ = cv2.connectedComponentsWithStats((picture < 128).astype(np.uint8))
         sizes_mm = stats[1:, [cv2.CC_STAT_WIDTH, cv2.CC_STAT_HEIGHT]] / PX_PER_MM
         for length_mm, along in ((BAR_MM, 0), (SHORT_BAR_MM, 1)):
-            is_bar = (np.abs(sizes_mm[:, along] - length_mm) < 0.1) & (
-                np.abs(sizes_mm[:, 1 - along] - 3.0) < 0.1
-            )
+            is_bar = (np.abs(sizes_mm[:, along] - length_mm) < 0.1) & (np.abs(sizes_mm[:, 1 - along] - 3.0) < 0.1)
             assert is_bar.sum() == 1
 
 
@@ -130,9 +126,7 @@ def test_the_white_border_is_white(paper: str):
         for _, corners_mm in page:
             low, high = corners_mm.min(axis=0), corners_mm.max(axis=0)
             module_mm = (high - low).mean() / 8
-            outer = np.round((np.array([low - module_mm + 0.3, high + module_mm - 0.3])) * PX_PER_MM).astype(
-                int
-            )
+            outer = np.round((np.array([low - module_mm + 0.3, high + module_mm - 0.3])) * PX_PER_MM).astype(int)
             inner = np.round((np.array([low - 0.3, high + 0.3])) * PX_PER_MM).astype(int)
             patch = picture[outer[0, 1] : outer[1, 1], outer[0, 0] : outer[1, 0]].copy()
             (x0, y0), (x1, y1) = inner - outer[0]
@@ -140,9 +134,7 @@ def test_the_white_border_is_white(paper: str):
             assert patch.min() > 250
 
 
-@pytest.mark.parametrize(
-    "dictionary", ["4X4_50", "5X5_100", "APRILTAG_16h5", "ARUCO_MIP_36h12", "ARUCO_ORIGINAL"]
-)
+@pytest.mark.parametrize("dictionary", ["4X4_50", "5X5_100", "APRILTAG_16h5", "ARUCO_MIP_36h12", "ARUCO_ORIGINAL"])
 def test_other_dictionaries_are_true_as_well(dictionary: str):
     order = SheetOrder(
         dictionary=dictionary, fore_id=3, aft_id=4, card_ids=[10], marker_sides_mm=[35.0], card_side_mm=50.0
@@ -176,17 +168,13 @@ def test_outlines_fill_to_the_same_picture(black: np.ndarray):
 
 def test_pieces_do_not_overlap_and_stay_on_the_page():
     pieces = [
-        Piece(marker_id=i, side_mm=20.0 + 7 * (i % 8), n_modules=8, title="card", has_arrow=False)
-        for i in range(40)
+        Piece(marker_id=i, side_mm=20.0 + 7 * (i % 8), n_modules=8, title="card", has_arrow=False) for i in range(40)
     ]
     for paper in PAPERS.values():
         pages = arranged([pieces[:10], pieces[10:]], paper)
         assert [placed.piece.marker_id for page in pages for placed in page] == list(range(40))
         for page in pages:
-            boxes = [
-                (p.left_mm, p.top_mm, p.left_mm + p.piece.width_mm, p.top_mm + p.piece.height_mm)
-                for p in page
-            ]
+            boxes = [(p.left_mm, p.top_mm, p.left_mm + p.piece.width_mm, p.top_mm + p.piece.height_mm) for p in page]
             for i, a in enumerate(boxes):
                 assert a[0] >= paper.side_mm
                 assert a[2] <= paper.width_mm - paper.side_mm
@@ -234,10 +222,7 @@ def test_the_command_takes_ids_from_a_trial_file(tmp_path: Path, trial_file: Pat
     trial_file.write_text(text.replace("[10, 29]", "[20, 22]"))
     result = sheets("--trial", trial_file, "--out", tmp_path / "s.pdf", "--marker-mm", 25)
     assert result.exit_code == 0, result.output
-    assert (
-        "robot markers of 25 mm (ids 5 fore and 1 aft, 4X4_50), floor cards of 60 mm (ids 20 to 22)"
-        in result.stdout
-    )
+    assert "robot markers of 25 mm (ids 5 fore and 1 aft, 4X4_50), floor cards of 60 mm (ids 20 to 22)" in result.stdout
 
 
 def test_the_command_refuses_what_cannot_be(tmp_path: Path, trial_file: Path):

@@ -258,9 +258,7 @@ def tried(path: Path) -> Trial | None:
 
 JUNK = st.one_of(
     st.text(max_size=20),
-    st.sampled_from(
-        ["= ", "[", "]", '"', "nan", "-inf", "1e999", "\x00", "''", "{}", "[[robot]]", "#", "\u2028"]
-    ),
+    st.sampled_from(["= ", "[", "]", '"', "nan", "-inf", "1e999", "\x00", "''", "{}", "[[robot]]", "#", "\u2028"]),
 )
 
 
@@ -276,11 +274,7 @@ def test_random_damage_gives_a_trial_or_a_trial_error(tmp_path: Path, start: int
 
 
 @settings(max_examples=200, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
-@given(
-    content=st.one_of(
-        st.binary(max_size=60), st.text(max_size=60).map(lambda t: ("wheel_deg\n" + t).encode())
-    )
-)
+@given(content=st.one_of(st.binary(max_size=60), st.text(max_size=60).map(lambda t: ("wheel_deg\n" + t).encode())))
 def test_random_commands_files_give_commands_or_a_trial_error(tmp_path: Path, content: bytes):
     path = trial_with_commands(tmp_path, content)
     trial = tried(path)

@@ -62,9 +62,7 @@ def test_a_turn_without_a_number_is_within_nothing():
 def test_the_file_and_its_faults(tmp_path: Path):
     path = tmp_path / "a.truth.csv"
     path.write_text("turn,commanded_wheel_deg,heading_change_deg,start_s,end_s\n1,190,90.5,1.0,2.5\n")
-    assert read_truth(path) == (
-        TrueTurn(commanded_wheel_deg=190.0, heading_change_deg=90.5, start_s=1.0, end_s=2.5),
-    )
+    assert read_truth(path) == (TrueTurn(commanded_wheel_deg=190.0, heading_change_deg=90.5, start_s=1.0, end_s=2.5),)
     for text in (
         "turn,start_s\n1,2\n",
         "turn,commanded_wheel_deg,heading_change_deg,start_s,end_s\n1,a,2,3,4\n",

@@ -111,9 +111,7 @@ def test_write_folder_leaves_the_older_result_when_interrupted(
     assert (tmp_path / "clip" / "turns.csv").read_text() == "old"
 
 
-def test_write_folder_puts_the_older_result_back_when_the_swap_fails(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-):
+def test_write_folder_puts_the_older_result_back_when_the_swap_fails(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
     write_folder(tmp_path, "clip", {"turns.csv": "old", MARK: "old"}, mark=MARK)
     rename, calls = os.rename, []
 
