@@ -44,7 +44,7 @@ PRINT_SD_SIDES = 0.01
 EVIDENCE_FLOOR = 0.5
 """Narrowest learned prior, in units of what the clip can tell: some doubt must always stay in the covariance."""
 
-SECTOR_RAD = float(np.deg2rad(10.0))
+SECTOR_RAD = float(np.deg2rad(6.0))
 """Frames whose headings differ by less repeat each other's errors."""
 
 N_HEADING_BINS = 72

@@ -22,7 +22,7 @@ FEWEST_FRAMES = 3
 USUAL_LAG_PX = 0.015
 """What coders usually leave of a displacement (type B), at the markers' distance from the middle of the pair."""
 
-USUAL_COUNTS = 2.0
+USUAL_COUNTS = 1.0
 """How many observed jumps the usual lag counts for: single rests may lag far more than the others."""
 
 
