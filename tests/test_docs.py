@@ -10,6 +10,7 @@ import click
 import pytest
 
 from floorswing.cli import COMMANDS, cli
+from floorswing.fitting import NOT_COUNTED
 
 ROOT = Path(__file__).resolve().parent.parent
 FILMING = (ROOT / "docs" / "filming.md").read_text(encoding="utf-8")
@@ -17,9 +18,7 @@ PAGES = [ROOT / "README.md", ROOT / "CHANGELOG.md", *sorted((ROOT / "docs").glob
 
 
 def source(*rooms: str) -> str:
-    return "\n".join(
-        path.read_text(encoding="utf-8") for room in rooms for path in (ROOT / room).rglob("*.py")
-    )
+    return "\n".join(path.read_text(encoding="utf-8") for room in rooms for path in (ROOT / room).rglob("*.py"))
 
 
 def table_after(heading: str) -> list[str]:
@@ -32,11 +31,15 @@ def table_after(heading: str) -> list[str]:
 
 def test_every_flag_is_explained_and_every_explained_flag_exists():
     code = source("vision", "floorswing")
-    used = set(re.findall(r'flags\.append\("(\w+)"\)', code)) | set(
-        re.findall(r'\*turn\.flags, "(\w+)"\)', code)
-    )
+    used = set(re.findall(r'flags\.append\("(\w+)"\)', code)) | set(re.findall(r'\*turn\.flags, "(\w+)"\)', code))
     used |= {"extra", "doubtful_match"}
     assert set(table_after("### Flags in `turns.csv`")) == used
+
+
+def test_whether_a_flagged_turn_counts_is_said_as_it_is():
+    part = FILMING.split("### Flags in `turns.csv`", 1)[1].split("\n##", 1)[0]
+    counts = dict(re.findall(r"^\| `(\w+)` \| (yes|no) \|", part, flags=re.MULTILINE))
+    assert {flag for flag, answer in counts.items() if answer == "no"} == set(NOT_COUNTED)
 
 
 def test_every_kind_of_event_is_explained_and_exists():

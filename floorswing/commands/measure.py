@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -42,7 +43,7 @@ def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as
                 failed.append(outcome)
                 click.echo(f"Error: {about(outcome.clip, outcome.error)}", err=True)
                 continue
-            measured.append(outcome)
+            measured.append(replace(outcome, track=None))  # long clips have long tracks
             _report(outcome, as_json)
     if as_json:
         click.echo(json.dumps([_document(one) for one in measured], indent=2, ensure_ascii=False))
