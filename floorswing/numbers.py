@@ -1,37 +1,20 @@
-"""Numbers as people read them: a value with its uncertainty, rounded together."""
+"""Numbers as people read them: with as many decimals as their uncertainty deserves."""
 
 from __future__ import annotations
 
 import math
 
 
-def rounded_pair(value: float, u: float, *, sign: bool = False) -> tuple[str, str]:
-    """Return a value and its uncertainty with as many decimals as the uncertainty deserves.
-
-    The uncertainty keeps two significant digits and the value is rounded to match (JCGM 100:2008, 7.2.6).
-    """
-    if not math.isfinite(value):
-        return "?", "?"
-    plus = "+" if sign else ""
-    if not (math.isfinite(u) and u > 0):
-        return f"{value:{plus}.4g}", "?" if not math.isfinite(u) else "0"
-    decimals = decimals_for(u)
-    return f"{value:{plus}.{decimals}f}", f"{u:.{decimals}f}"
-
-
 def decimals_for(u: float) -> int:
-    """Return the decimals that show an uncertainty (above 0) with two significant digits."""
+    """Return the decimals that show an uncertainty (above 0) with two significant digits.
+
+    The value that it belongs to is printed with the same decimals (JCGM 100:2008, 7.2.6).
+    """
     return max(0, 1 - math.floor(math.log10(float(f"{u:.1e}"))))
 
 
-def with_uncertainty(value: float, u: float, *, sign: bool = False) -> str:
-    """Return `value ± u`, rounded together."""
-    shown, uncertain = rounded_pair(value, u, sign=sign)
-    return f"{shown} ± {uncertain}"
-
-
 def two_digits(value: float) -> str:
-    """Return a positive number with two significant digits, without an exponent."""
+    """Return a number with two significant digits, or as a whole number, without an exponent."""
     if not math.isfinite(value):
         return "?"
     if value == 0:
