@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 import json
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from fractions import Fraction
 from pathlib import Path
 from typing import TypedDict, Unpack
@@ -33,7 +33,7 @@ TIME_BASE = Fraction(1, 90000)
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class Truth:
-    """What really happened in a clip. Times count from the first frame."""
+    """What really happened in a clip. Times count from the first frame; a turn cut by the clip's ends reaches over."""
 
     turns: tuple[TurnTruth, ...]
     events: tuple[EventTruth, ...]
@@ -53,14 +53,16 @@ class Truth:
 
 
 def truth_of(scene: Scene, motion: Motion) -> Truth:
-    """Return the truth of a clip without rendering it."""
+    """Return the truth of a clip without rendering it; turns and events wholly outside the clip are left out."""
     times = frame_times(scene.timing, motion, scene.seed)
-    stamps = stamp_times(scene.timing, times, scene.seed)
+    begin_s, end_s = float(times[0]), float(times[-1])
+    turns = [turn for turn in motion.turns if turn.end_s > begin_s and turn.start_s < end_s]
+    events = [event for event in motion.events if event.end_s >= begin_s and event.start_s <= end_s]
     return Truth(
-        turns=motion.turns,
-        events=motion.events,
+        turns=tuple(replace(turn, start_s=turn.start_s - begin_s, end_s=turn.end_s - begin_s) for turn in turns),
+        events=tuple(replace(event, start_s=event.start_s - begin_s, end_s=event.end_s - begin_s) for event in events),
         commands=motion.commands,
-        frame_s=stamps,
+        frame_s=stamp_times(scene.timing, times, scene.seed),
         frame_heading_deg=motion.heading_deg(times),
     )
 

@@ -52,11 +52,11 @@ def render_frames(scene: Scene, motion: Motion) -> Iterator[tuple[float, CodeIma
 
 def frame_times(timing: Timing, motion: Motion, seed: int) -> FloatArray:
     """Return the times at which frames are taken."""
-    duration_s = motion.duration_s if timing.duration_s is None else timing.duration_s
+    end_s = motion.duration_s if timing.duration_s is None else timing.begin_s + timing.duration_s
     rng = np.random.default_rng([seed, 79])
     times: list[float] = []
-    now_s = 0.0
-    while now_s <= duration_s:
+    now_s = timing.begin_s
+    while now_s <= end_s + 1e-9:
         times.append(now_s)
         fps = next((rate for start, end, rate in timing.slow_spans if start <= now_s < end), timing.fps)
         now_s += max(0.2, 1.0 + timing.jitter * rng.standard_normal()) / fps

@@ -213,7 +213,9 @@ class Timing:
 
     fps: float = 30.0
     duration_s: float | None = None
-    """The motion's duration when None."""
+    """How long is filmed; to the end of the motion when None."""
+    begin_s: float = 0.0
+    """Time of the motion at which filming begins."""
     first_s: float = 0.0
     """Presentation time of the first frame in the container."""
     jitter: float = 0.0
