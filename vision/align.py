@@ -181,6 +181,7 @@ def fit_corners(
     *,
     smear: tuple[FloatArray, ...] = (),
     soften_px: float = 0.0,
+    thin: int = 1,
     robust: bool = False,
 ) -> CornerFit | None:
     """Compare a marker's pattern with the picture and return the corner model.
@@ -195,6 +196,8 @@ def fit_corners(
         Picture-to-picture motions over the exposure; the pattern is averaged over them.
     soften_px : float
         Extra blur given to the picture; the template should have been built with it too.
+    thin : int
+        Compare only every so many-th pixel: quicker, and less sharp by its root.
     robust : bool
         Give little weight to pixels that the pattern cannot explain (glint, shadow edge, finger).
 
@@ -213,7 +216,7 @@ def fit_corners(
     local_px = corners_px - (x0, y0)
     to_crop = homography_from_corners(local_px)
     rendered = _render(template, to_crop, crop.shape, smear, (x0, y0))
-    inside = np.flatnonzero(rendered[:, 3] > WHOLLY)
+    inside = np.flatnonzero(rendered[:, 3] > WHOLLY)[::thin]
     if len(inside) < FEWEST_PIXELS:
         return None
     rows, shift = _rows(rendered, inside, crop, to_crop)

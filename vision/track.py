@@ -48,11 +48,14 @@ LEAST_SMEAR_PX = 1.0
 
 EXPOSURE_VOTES = 5
 
+IN_MOTION_PX, THIN = 1.0, 2
+"""Of a pair that moves by more than this in a frame only every second pixel is compared: rests are what counts."""
+
 JOINT_PX = 0.5
 """A joint step smaller than this is left to the free corners."""
 
 MOVING_PX = 0.25
-"""Corners of a smeared picture need not be rendered again nearer than this."""
+"""Corners of a moving pair need not be rendered again nearer than this."""
 
 HELD_PX = 0.12
 """While no corner is farther than this from where the pattern was last rendered, it is not rendered again."""
@@ -99,6 +102,7 @@ class PairTracker:
         self._last_s: float | None = None
         self._last_search_s = -np.inf
         self._lost = False
+        self._in_motion = False
         self._tuned_at_rest = False
         self._has_moved = False
         self._usual_noise = [np.inf, np.inf]
@@ -225,6 +229,7 @@ class PairTracker:
         """Align from a believed motion since the last frame; None if the patterns find no hold."""
         before_px = self._plane_px
         plane_px = before_px @ rigid(*move)
+        self._in_motion = self._reach_px(before_px, move) > IN_MOTION_PX
         # Corners carry what the rigid model does not yet know; only their motion is predicted.
         corners_px = project(plane_px @ inverse(before_px), self._corners_px)
         smear = self._smear(plane_px, move, step_s)
@@ -267,6 +272,7 @@ class PairTracker:
                 pattern.soft if soft else pattern.sharp,
                 smear=smear,
                 soften_px=pattern.soften_px if soft else 0.0,
+                thin=THIN if smear or soft or self._in_motion else 1,
             )
             if np.all(np.isfinite(corners))
             else None
@@ -317,7 +323,7 @@ class PairTracker:
         self, image: LumaImage, m: int, fit: CornerFit, smear: tuple[FloatArray, ...]
     ) -> tuple[FloatArray, CornerFit] | None:
         side_px = self._patterns[m].side_px
-        near_px = MOVING_PX if smear else HELD_PX
+        near_px = MOVING_PX if smear or self._in_motion else HELD_PX
         for _ in range(4):
             move = fit.move_px
             largest_px = float(np.abs(move).max())
@@ -326,8 +332,12 @@ class PairTracker:
             if largest_px < near_px:
                 break
             again = fit_corners(
-                image, fit.corners_px + move, self._patterns[m].sharp, smear=smear,
-            )  # fmt: skip
+                image,
+                fit.corners_px + move,
+                self._patterns[m].sharp,
+                smear=smear,
+                thin=THIN if smear or self._in_motion else 1,
+            )
             if again is None or again.explained < HOLD:
                 return None
             fit = again

@@ -63,7 +63,7 @@ def test_lag_from_the_jumps_at_key_frames():
     heading = np.where(time_s > 1.0, 0.02, 0.0)
     keys = np.zeros(90, bool)
     keys[31] = True
-    seen = replace(seen_from(time_s, heading, noise_deg=1e-6), is_key=keys)
+    seen = replace(seen_from(time_s, heading, noise_deg=1e-6), is_key=keys, u_heading_deg=np.full(90, 0.01))
     found = coding_lag(seen, [np.arange(15, 60)], 0.4)
     usual = np.degrees(0.015 / seen.reach_px)
     assert found.n_jumps == 1
