@@ -185,9 +185,7 @@ class PairTracker:
         if optics == self.optics:
             return False
         self.optics = optics
-        self._patterns = tuple(
-            build_pattern(pattern.black, pattern.side_px, optics) for pattern in self._patterns
-        )
+        self._patterns = tuple(build_pattern(pattern.black, pattern.side_px, optics) for pattern in self._patterns)
         self._usual_noise = [np.inf, np.inf]
         return True
 
