@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 import cv2
 import numpy as np
 from numpy.typing import NDArray
@@ -16,14 +18,32 @@ LIGHT_TOP = 1.25
 
 
 def blur(image: FloatImage, sigma_px: float) -> FloatImage:
-    """Blur with a Gaussian; below 0.15 px the sampled kernel means nothing and the image is returned as it is."""
-    if sigma_px < 0.15:
+    """Blur with a Gaussian of this standard deviation."""
+    if sigma_px < 1e-3:
         return image
-    half = max(2, int(np.ceil(4.5 * sigma_px)))
-    kernel = np.exp(-0.5 * (np.arange(-half, half + 1) / sigma_px) ** 2)
-    kernel = (kernel / kernel.sum()).astype(np.float32)
+    kernel = gaussian_kernel(round(float(sigma_px), 6))
     out = cv2.sepFilter2D(image, cv2.CV_32F, kernel, kernel, borderType=cv2.BORDER_REPLICATE)
     return np.asarray(out, dtype=np.float32)
+
+
+@lru_cache(maxsize=512)
+def gaussian_kernel(sigma_px: float) -> FloatImage:
+    """Return a sampled Gaussian whose variance over the pixels is exactly as asked.
+
+    Below about 0.7 px the samples of a Gaussian of that width would be narrower than it.
+    """
+    half = max(2, int(np.ceil(4.5 * sigma_px)))
+    place2 = np.arange(-half, half + 1.0) ** 2
+    low, high = 0.5 * sigma_px, sigma_px + 0.6
+    for _ in range(60):
+        middle = 0.5 * (low + high)
+        kernel = np.exp(-0.5 * place2 / middle**2)
+        kernel /= kernel.sum()
+        if float(kernel @ place2) < sigma_px**2:
+            low = middle
+        else:
+            high = middle
+    return kernel.astype(np.float32)
 
 
 class Development:

@@ -139,5 +139,5 @@ def test_truth_is_written_beside_the_clip(tmp_path):
 @pytest.mark.parametrize("storage", [{"codec": "film"}, {"rotation_deg": 45}, {"codec": "vp9"}])
 def test_impossible_storage_is_refused(tmp_path, storage):
     scene = Scene(camera=CAMERA, sensor=Sensor(bits=10))
-    with pytest.raises(ValueError, match="codec|rotation|bits"):
+    with pytest.raises(ValueError, match=r"codec|rotation|bits"):
         render_clip(scene, MOTION, tmp_path / "clip.mp4", **storage)
