@@ -202,20 +202,31 @@ def _choose(track: CornerTrack, p: FloatArray, units: Units) -> NDArray[np.intp]
 
 def whitening(information: NDArray[np.float32]) -> FloatArray:
     """Return factors W, shape (N, 2, 8, 8), with ``W.T @ W`` the information of each marker's corners."""
-    values, vectors = np.linalg.eigh(information.astype(np.float64))
-    scaled: FloatArray = np.sqrt(np.maximum(values, 0.0))[..., None] * np.swapaxes(vectors, -1, -2)
-    return scaled
+    full = information.astype(np.float64)
+    # A marker that was not seen has no information at all; a grain of it keeps the factor defined and weighs nothing.
+    grain = 1e-9 * np.maximum(np.trace(full, axis1=-2, axis2=-1), 1e-9)
+    lower = np.linalg.cholesky(full + grain[..., None, None] * np.eye(full.shape[-1]))
+    factors: FloatArray = np.swapaxes(lower, -1, -2)
+    return factors
 
 
 def start_poses(corners_px: FloatArray, p: FloatArray, units: Units) -> FloatArray:
     """Return a first pose (N, 3) of each frame from whichever markers it shows; NaN where it shows none."""
     points = to_plane(corners_px.reshape(-1, 8, 2), p, units)
-    body = body_points(p, units).reshape(8, 2)
-    poses = np.full((len(points), 3), np.nan)
-    for n, seen in enumerate(points):
-        known = np.isfinite(seen[:, 0])
-        if known.any():
-            poses[n] = rigid_between(body[known], seen[known])
+    known = np.isfinite(points[..., :1])
+    count = np.maximum(known.sum(axis=1), 1)
+    seen = np.where(known, points, 0.0)
+    body = np.where(known, body_points(p, units).reshape(8, 2), 0.0)
+    middle_seen, middle_body = seen.sum(axis=1) / count, body.sum(axis=1) / count
+    a = np.where(known, body - middle_body[:, None], 0.0)
+    b = np.where(known, seen - middle_seen[:, None], 0.0)
+    turn = np.arctan2(np.sum(a[..., 0] * b[..., 1] - a[..., 1] * b[..., 0], axis=1), np.sum(a * b, axis=(1, 2)))
+    c, s = np.cos(turn), np.sin(turn)
+    moved = np.column_stack(
+        [c * middle_body[:, 0] - s * middle_body[:, 1], s * middle_body[:, 0] + c * middle_body[:, 1]]
+    )
+    poses = np.column_stack([turn, middle_seen - moved])
+    poses[~known.any(axis=(1, 2))] = np.nan
     return poses
 
 

@@ -12,10 +12,10 @@ from vision.pair import mean_side_px, settle_corners
 from vision.records import FloatArray, MarkerSetup
 from vision.template import Optics, Template, build_template
 
-LOOK_EVERY_S = 0.25
+LOOK_EVERY_S = 0.5
 """How often the cards are looked at while the camera stands still."""
 
-CALM_S = 0.6
+CALM_S = 0.3
 """A camera that has stood still for so long is believed to stand; until then the cards are looked at in every frame."""
 
 STIR_PX = 0.1
