@@ -10,6 +10,7 @@ import sys
 import time
 from pathlib import Path
 
+import av
 import pytest
 from click.testing import CliRunner
 
@@ -96,29 +97,38 @@ def run(*arguments: object, cwd: Path) -> subprocess.CompletedProcess[str]:
     return subprocess.run(command, cwd=cwd, capture_output=True, text=True, timeout=300)
 
 
-@pytest.mark.slow
-def test_commands_that_do_not_fit_a_real_clip(tmp_path: Path):
-    clip = CLIPS["lino_mixed"]
+@pytest.fixture
+def short_clip(tmp_path: Path) -> Path:
+    """Return the first seconds of a bundled clip, three turns, with its packets as they are."""
+    path = tmp_path / "short.mp4"
+    with av.open(CLIPS["lino_mixed"].clip) as whole, av.open(path, "w") as short:
+        stream = short.add_stream_from_template(whole.streams.video[0])
+        for packet in whole.demux(video=0):
+            if packet.pts is not None and packet.pts * packet.time_base < 7.2:
+                packet.stream = stream
+                short.mux(packet)
+    return path
+
+
+def test_commands_that_do_not_fit_a_real_clip(short_clip: Path, tmp_path: Path):
     trial = tmp_path / "t.toml"
-    lines = clip.trial.read_text().splitlines()
-    trial.write_text("\n".join("wheel_deg = [190, 60]" if "wheel_deg" in line else line for line in lines))
-    result = run("measure", clip.clip, "--trial", trial, "--out", "out", cwd=tmp_path)
+    lines = CLIPS["lino_mixed"].trial.read_text().splitlines()
+    trial.write_text("\n".join("wheel_deg = [-285]" if "wheel_deg" in line else line for line in lines))
+    result = run("measure", short_clip, "--trial", trial, "--out", "out", cwd=tmp_path)
     assert result.returncode == 2
     assert result.stdout == ""
-    assert "12 turns seen, 2 commands in the trial" in result.stderr
+    assert "3 turns seen, 1 command in the trial, 1 fit" in result.stderr
     assert len(result.stderr.splitlines()) == 1
     assert not (tmp_path / "out").exists()
 
 
-@pytest.mark.slow
-def test_wrong_ids_and_half_wrong_ids_on_a_real_clip(tmp_path: Path):
+def test_wrong_ids_and_half_wrong_ids_on_a_real_clip(short_clip: Path, tmp_path: Path):
     """Rounds off the faults that need a real picture: no marker of these ids, and one only."""
-    clip = CLIPS["lino_mixed"]
-    text = clip.trial.read_text()
+    text = CLIPS["lino_mixed"].trial.read_text()
     for fore, aft, words in [(40, 41, "not found"), (0, 41, "only robot marker 0")]:
         trial = tmp_path / f"t{fore}.toml"
         trial.write_text(text.replace("fore = 0", f"fore = {fore}").replace("aft = 1", f"aft = {aft}"))
-        result = run("measure", clip.clip, "--trial", trial, "--out", "out", cwd=tmp_path)
+        result = run("measure", short_clip, "--trial", trial, "--out", "out", cwd=tmp_path)
         assert result.returncode == 1
         assert words in result.stderr
         assert len(result.stderr.splitlines()) == 1
