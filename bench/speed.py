@@ -1,7 +1,7 @@
 """Cost of measuring a clip against decoding it: ``python -m bench.speed [--runs 3] [--minutes 10] [CLIP TRIAL]``.
 
-Printed side by side from one run: time to decode the clip's luma alone with PyAV, time of the whole measurement, time of
-the script that anybody would write (OpenCV capture, detection on every full frame, sub-pixel corners), the ratios as
+Printed side by side from one run: time to decode the clip's luma alone with PyAV, time of the whole measurement, time
+of the script that anybody would write (OpenCV capture, detection on every full frame, sub-pixel corners), ratios as
 medians of paired runs, and the peak memory on the clip and on a long one made of copies of it.
 """
 
