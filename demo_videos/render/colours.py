@@ -34,8 +34,11 @@ class Colours:
             self.ground, self.ground_key = self.draw_ground(time_s), key
         pair = [plane.copy() for plane in self.ground]
         body = body_carrier(motion.at(time_s))
+        neutral = (0.0, 0.0)
+        for wheel in renderer.wheels:
+            self.fill(pair, wheel[0], body, time_s, neutral, 0.0)
         for sheet in renderer.sheets[1:]:
-            tint = (0.0, 0.0) if sheet.precise else DECK_TINT
+            tint = neutral if sheet.precise else DECK_TINT
             self.fill(pair, sheet, body, time_s, tint, 0.25 * renderer.development.span)
         depth = renderer.development.depth
         kind = np.uint8 if depth == 1 else np.uint16
