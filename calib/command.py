@@ -9,8 +9,9 @@ import numpy as np
 from scipy import stats
 
 from calib.errors import NotIdentified
-from calib.fit import CONFIDENCE, SIDE_NAMES, Fit
+from calib.fit import CONFIDENCE, Fit
 from calib.intervals import Estimate, ratio_estimate
+from calib.models import SIDE_NAMES
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -61,7 +62,8 @@ def command_for(
             f"no turn of the fit is {SIDE_NAMES[side]}, so nothing is known for {wanted_deg:g} deg; drive some"
         )
     size = abs(wanted_deg)
-    gain, lost = fit.gain_row(side), fit.lost_row() * float(after_reversal)
+    gain = fit.gain_row(side)
+    lost = fit.lost_row() * float(after_reversal) - fit.offset_row(side)
     wheel = ratio_estimate(
         size + float(lost @ fit.coefficients),
         float(gain @ fit.coefficients),

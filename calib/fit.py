@@ -1,14 +1,14 @@
 """The relation between what the wheels were told and what the robot did.
 
-Along the direction of the command, ``heading change = gain * (|wheel degrees| - dead band * reversed)``, with one gain
-or one for each direction, with or without a dead band, and with one of three laws for the scatter of single turns.
-Which of these the data support is decided by the corrected information criterion (Hurvich and Tsai 1989); the
-runners-up are kept. What a plan cannot tell apart is said, not invented.
+Along the direction of the command, ``heading change = gain * (|wheel degrees| - dead band * reversed)``, plus an offset
+whatever the direction, with one gain or one for each direction, with or without dead band and offset, and with one of
+three laws for the scatter of single turns. Which of these the data support is decided by the corrected information
+criterion; the runners-up are kept. Strays are left out and named, and a fit that they pull little at stands beside.
+What a plan cannot tell apart is said, not invented.
 """
 
 from __future__ import annotations
 
-import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,46 +17,35 @@ from scipy import stats
 
 from calib.errors import CalibError, NotEnoughTurns
 from calib.intervals import Estimate, ratio_estimate, sd_estimate, t_estimate
-from calib.scatter import LAWS, ScatterFit, fit_with_scatter
+from calib.linear import TINY
+from calib.models import (
+    SIDE_NAMES,
+    Candidate,
+    Model,
+    aicc,
+    can_tell_dead_band,
+    design_of,
+    possible_models,
+    sides_of,
+)
+from calib.robust import RobustFit, robust_fit
+from calib.scatter import LAWS, ScatterFit, fit_with_scatter, shape_of
+from calib.strays import FEWEST_DOF, STRAGGLER_LEVEL, STRAY_LEVEL, extreme_residuals, most_strays
 from calib.turns import Turns
 
 FloatArray = NDArray[np.float64]
 
 CONFIDENCE = 0.95
 FEWEST_TURNS = 3
-SIDES = (1.0, -1.0)
-SIDE_NAMES = {1.0: "counter-clockwise", -1.0: "clockwise"}
+UNKNOWN_SLACK = "the slack of the wheels before it is not known, and a dead band is fitted"
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
-class Robot:
-    """What turns gains into lengths; None where it is not known."""
+class NotFitted:
+    """A turn, by its place among those given, that the fit does not rest on, with the reason."""
 
-    wheel_diameter_mm: float | None = None
-    inner_track_mm: float | None = None
-    tyre_width_mm: float | None = None
-
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class Model:
-    """Which terms a relation has."""
-
-    separate_gains: bool
-    dead_band: bool
-    law: str
-
-    def __str__(self) -> str:
-        gains = "a gain for each direction" if self.separate_gains else "one gain"
-        band = "with dead band" if self.dead_band else "no dead band"
-        return f"{gains}, {band}, {self.law} scatter"
-
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class Candidate:
-    """A model that was tried, with its corrected information criterion (smaller is better)."""
-
-    model: Model
-    aicc: float
+    index: int
+    reason: str
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -69,7 +58,8 @@ class Fit:
     sides : tuple of float
         Directions that the turns have: +1 counter-clockwise, -1 clockwise.
     coefficients : ndarray, shape (P,)
-        Gains (one, or one for each of `sides`), then the heading lost at a reversal in deg, if the model has it.
+        Gains (one, or one for each of `sides`), then the heading lost at a reversal and the offset in deg, if the
+        model has them.
     cov : ndarray, shape (P, P)
     dof : int
     scatter_deg, size_deg : float
@@ -83,6 +73,17 @@ class Fit:
         What the data could not tell, a sentence each.
     residuals_deg, standardised : ndarray, shape (N,)
         Along the command's direction; the latter in units of the fitted scatter.
+    u_typical_deg : float
+        Root mean square of the turns' own measurement uncertainties.
+    not_fitted : tuple of NotFitted
+        Turns given that the fit does not rest on.
+    stragglers : tuple of int
+        Turns given that lie far out, but not far enough to be left out.
+    robust : RobustFit or None
+        The same model fitted to strays too, with errors that expect some.
+    dead_band_if_any, difference_if_any : Estimate or None
+        Dead band (wheel deg), and relative difference of the gains, by the best model that has them, whether or not it
+        was chosen; None where the turns cannot tell.
     """
 
     model: Model
@@ -98,6 +99,12 @@ class Fit:
     notes: tuple[str, ...]
     residuals_deg: FloatArray
     standardised: FloatArray
+    u_typical_deg: float = 0.0
+    not_fitted: tuple[NotFitted, ...] = ()
+    stragglers: tuple[int, ...] = ()
+    robust: RobustFit | None = None
+    dead_band_if_any: Estimate | None = None
+    difference_if_any: Estimate | None = None
 
     def gain_row(self, side: float | None) -> FloatArray:
         """Return the weights that pick a direction's gain out of the coefficients; None for the mean gain."""
@@ -113,13 +120,28 @@ class Fit:
         """Return the weights that pick the heading lost at a reversal; all zero without a dead band."""
         row = np.zeros(len(self.coefficients))
         if self.model.dead_band:
-            row[-1] = 1.0
+            row[-2 if self.model.offset else -1] = 1.0
+        return row
+
+    def offset_row(self, side: float | None) -> FloatArray:
+        """Return the weights of the offset along a direction; all zero without one, and for the mean of both."""
+        row = np.zeros(len(self.coefficients))
+        if self.model.offset and side is not None:
+            row[-1] = side
         return row
 
     def gain(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate:
         """Return heading change per wheel degree (deg/deg)."""
         row = self.gain_row(side)
         return t_estimate(float(row @ self.coefficients), float(np.sqrt(row @ self.cov @ row)), self.dof, confidence)
+
+    def robust_gain(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate | None:
+        """Return the gain by the fit that strays pull little at."""
+        if self.robust is None:
+            return None
+        row = self.gain_row(side)
+        u = float(np.sqrt(row @ self.robust.cov @ row))
+        return t_estimate(float(row @ self.robust.coefficients), u, self.dof, confidence)
 
     def dead_band_wheel_deg(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate | None:
         """Return the wheel degrees lost at a reversal; None where the model has none."""
@@ -136,17 +158,42 @@ class Fit:
             confidence=confidence,
         )
 
+    def offset_deg(self, confidence: float = CONFIDENCE) -> Estimate | None:
+        """Return the heading added to every turn whatever its direction; None where the model has none."""
+        if not self.model.offset:
+            return None
+        u = float(np.sqrt(self.cov[-1, -1]))
+        return t_estimate(float(self.coefficients[-1]), u, self.dof, confidence)
+
     def repeatability_deg(self, confidence: float = CONFIDENCE) -> Estimate:
         """Return the standard deviation of single turns of `size_deg` (ISO 5725-1, repeatability)."""
-        return sd_estimate(self.scatter_deg, self.dof, confidence)
+        return sd_estimate(self.scatter_deg, self.dof, confidence, beside=self.u_typical_deg)
 
     def scatter_at_deg(self, size_deg: float) -> float:
         """Return the standard deviation of single turns of a given size."""
         return float(self.scatter_deg * (abs(size_deg) / self.size_deg) ** LAWS[self.model.law])
 
 
-def fit_turns(turns: Turns) -> Fit:
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class _Choice:
+    """The models fitted to one set of turns, best first."""
+
+    turns: Turns
+    ranked: tuple[tuple[Candidate, ScatterFit], ...]
+
+    @property
+    def best(self) -> tuple[Model, ScatterFit]:
+        return self.ranked[0][0].model, self.ranked[0][1]
+
+
+def fit_turns(turns: Turns, *, keep_strays: bool = False) -> Fit:
     """Fit the relation to usable turns.
+
+    Parameters
+    ----------
+    turns : Turns
+    keep_strays : bool
+        Whether turns far from all others stay in the fit.
 
     Raises
     ------
@@ -161,140 +208,183 @@ def fit_turns(turns: Turns) -> Fit:
             n_seen=len(turns),
             n_needed=FEWEST_TURNS,
         )
-    known = np.isfinite(turns.reversed_)
-    can_tell = _can_tell_dead_band(turns.take(known)) if known.any() else False
-    judged = turns.take(known) if can_tell else turns
-    tried = [(model, _fit_model(judged, model)) for model in _models(judged, dead_band=can_tell)]
-    fitted = [(model, found) for model, found in tried if found is not None]
-    if not fitted:
-        raise CalibError("no model can be fitted to these turns")
-    ranked = sorted(
-        (Candidate(model=model, aicc=_aicc(found, len(judged))) for model, found in fitted),
-        key=lambda candidate: candidate.aicc,
-    )
-    best = ranked[0].model
-    final = judged if best.dead_band else turns
-    scatter = _fit_model(final, best)
-    assert scatter is not None
-    return _made(final, best, scatter, tuple(ranked), _notes(turns, final, can_tell))
+    _check_direction(turns)
+    strays: tuple[int, ...] = ()
+    choice, place = _choose(turns, np.ones(len(turns), dtype=bool))
+    for _ in range(0 if keep_strays else 3):
+        found = _far_out(turns, choice, STRAY_LEVEL)
+        if set(found) <= set(strays):
+            break
+        strays = tuple(sorted({*strays, *found}))
+        kept = np.ones(len(turns), dtype=bool)
+        kept[list(strays)] = False
+        choice, place = _choose(turns, kept)
+    return _concluded(turns, choice, place, strays)
 
 
-def _can_tell_dead_band(turns: Turns) -> bool:
-    return bool(np.sum(turns.reversed_ == 1.0) >= 2 and np.sum(turns.reversed_ == 0.0) >= 2)
+def _check_direction(turns: Turns) -> None:
+    if float(np.median(turns.heading_deg * turns.side / np.abs(turns.wheel_deg))) <= 0.0:
+        raise CalibError("the robot turned against its commands, or not at all; check the signs of the commands")
 
 
-def _models(turns: Turns, *, dead_band: bool) -> list[Model]:
-    both = len(_sides(turns)) == 2 and min(np.sum(turns.side == s) for s in SIDES) >= 2
-    sizes = np.ptp(np.abs(turns.wheel_deg)) > 0.2 * np.abs(turns.wheel_deg).max()
-    return [
-        Model(separate_gains=separate, dead_band=band, law=law)
-        for separate, band, law in itertools.product(
-            (False, True) if both else (False,),
-            (False, True) if dead_band else (False,),
-            LAWS if sizes else ("constant",),
-        )
+def _choose(turns: Turns, kept: NDArray[np.bool_]) -> tuple[_Choice, NDArray[np.intp]]:
+    """Fit all models to the turns kept; return them with the places of the turns the best rests on."""
+    known = kept & np.isfinite(turns.reversed_)
+    can_tell = can_tell_dead_band(turns.take(known)) if known.any() else False
+    chosen = known if can_tell else kept
+    choice = _ranked(turns.take(chosen), dead_band=can_tell)
+    if can_tell and not choice.best[0].dead_band and np.any(chosen != kept):
+        plain = _ranked(turns.take(kept), dead_band=False)
+        same = [one for one in plain.ranked if one[0].model == choice.best[0]]
+        chosen = kept
+        choice = _Choice(turns=turns.take(kept), ranked=(*same, *choice.ranked[1:]))
+    return choice, np.flatnonzero(chosen)
+
+
+def _ranked(turns: Turns, *, dead_band: bool) -> _Choice:
+    tried = [(model, _fit_model(turns, model)) for model in possible_models(turns, dead_band=dead_band)]
+    fitted = [
+        (Candidate(model=model, aicc=aicc(found, len(turns))), found) for model, found in tried if found is not None
     ]
+    if not fitted:
+        raise CalibError("no model can be fitted to these turns; more turns, or more different ones, are needed")
+    return _Choice(turns=turns, ranked=tuple(sorted(fitted, key=lambda one: one[0].aicc)))
 
 
-def _sides(turns: Turns) -> tuple[float, ...]:
-    return tuple(side for side in SIDES if np.any(turns.side == side))
-
-
-def design_of(turns: Turns, model: Model) -> FloatArray:
-    """Return the design matrix of a model, shape (N, P)."""
+def nominal_size_deg(turns: Turns) -> FloatArray:
+    """Return the size of turn that each command aims at, from the middle of all gains."""
     size = np.abs(turns.wheel_deg)
-    if model.separate_gains:
-        columns = [np.where(turns.side == side, size, 0.0) for side in _sides(turns)]
-    else:
-        columns = [size]
-    if model.dead_band:
-        columns.append(-turns.reversed_)
-    return np.column_stack(columns)
+    return np.asarray(size * float(np.median(turns.heading_deg * turns.side / size)))
 
 
 def _fit_model(turns: Turns, model: Model) -> ScatterFit | None:
     along = turns.heading_deg * turns.side
     try:
-        return fit_with_scatter(design_of(turns, model), along, turns.u_deg, np.abs(turns.heading_deg), model.law)
+        return fit_with_scatter(design_of(turns, model), along, turns.u_deg, nominal_size_deg(turns), model.law)
     except (CalibError, FloatingPointError):
         return None
 
 
-def _aicc(found: ScatterFit, n_turns: int) -> float:
-    n_free = len(found.linear.coefficients) + 1
-    spare = n_turns - n_free - 1
-    if spare <= 0:
-        return np.inf
-    return -2.0 * found.log_likelihood + 2.0 * n_free + 2.0 * n_free * (n_free + 1) / spare
+def _far_out(turns: Turns, choice: _Choice, level: float) -> tuple[int, ...]:
+    """Return which of all turns lie too far from the chosen model."""
+    model, found = choice.best
+    usable = np.isfinite(turns.reversed_) if model.dead_band else np.ones(len(turns), dtype=bool)
+    rows = turns.take(usable)
+    design = design_of(rows, model)
+    if len(rows) - design.shape[1] < FEWEST_DOF:
+        return ()
+    shape = shape_of(nominal_size_deg(rows), found.size_deg, model.law)
+    variance = np.maximum(rows.u_deg**2 + found.scatter_deg**2 * shape, TINY)
+    far = extreme_residuals(
+        design, rows.heading_deg * rows.side, variance.min() / variance, most=most_strays(len(rows)), level=level
+    )
+    places = np.flatnonzero(usable)
+    return tuple(int(places[index]) for index in far.strays)
 
 
-def _made(
-    turns: Turns, model: Model, scatter: ScatterFit, candidates: tuple[Candidate, ...], notes: tuple[str, ...]
-) -> Fit:
-    linear = scatter.linear
-    if linear.coefficients[0] <= 0.0:
+def _concluded(turns: Turns, choice: _Choice, place: NDArray[np.intp], strays: tuple[int, ...]) -> Fit:
+    model, scatter = choice.best
+    if scatter.linear.coefficients[0] <= 0.0:
         raise CalibError("the robot turned against its commands, or not at all; check the signs of the commands")
-    size = np.abs(turns.wheel_deg)
+    size = np.abs(choice.turns.wheel_deg)
+    left = set(range(len(turns))) - set(place.tolist())
+    not_fitted = [
+        NotFitted(index=n, reason=_stray_reason(turns, n, model, scatter) if n in strays else UNKNOWN_SLACK)
+        for n in sorted(left)
+    ]
+    band, difference = _if_any(choice)
     return Fit(
         model=model,
-        sides=_sides(turns),
-        coefficients=linear.coefficients,
-        cov=linear.unscaled_cov,
-        dof=linear.dof,
+        sides=sides_of(choice.turns),
+        coefficients=scatter.linear.coefficients,
+        cov=scatter.linear.unscaled_cov,
+        dof=scatter.linear.dof,
         scatter_deg=scatter.scatter_deg,
         size_deg=scatter.size_deg,
-        n_turns=len(turns),
+        n_turns=len(choice.turns),
         tried_wheel_deg=(float(size.min()), float(size.max())),
-        candidates=candidates,
-        notes=notes,
-        residuals_deg=linear.residuals,
-        standardised=linear.residuals / np.sqrt(scatter.variance_deg2),
+        candidates=tuple(candidate for candidate, _ in choice.ranked),
+        notes=_notes(choice.turns),
+        residuals_deg=scatter.linear.residuals,
+        standardised=scatter.linear.residuals / np.sqrt(scatter.variance_deg2),
+        u_typical_deg=float(np.sqrt(np.mean(choice.turns.u_deg**2))),
+        not_fitted=tuple(not_fitted),
+        stragglers=tuple(n for n in _far_out(turns, choice, STRAGGLER_LEVEL) if n not in left),
+        robust=_robust(turns, model, scatter),
+        dead_band_if_any=band,
+        difference_if_any=difference,
     )
 
 
-def _notes(turns: Turns, used: Turns, can_tell: bool) -> tuple[str, ...]:
+def _stray_reason(turns: Turns, n: int, model: Model, scatter: ScatterFit) -> str:
+    side, state = float(turns.side[n]), float(np.nan_to_num(turns.reversed_[n]))
+    gain = scatter.linear.coefficients[1 if model.separate_gains and side < 0.0 else 0]
+    rest = list(scatter.linear.coefficients[2 if model.separate_gains else 1 :])
+    expected = gain * abs(turns.wheel_deg[n])
+    if model.dead_band:
+        expected -= rest.pop(0) * state
+    if model.offset:
+        expected += rest.pop(0) * side
+    off = float(turns.heading_deg[n] * side - expected)
+    return f"it strays by {off:+.2f} degrees along its command from what all others say"
+
+
+def _robust(turns: Turns, model: Model, scatter: ScatterFit) -> RobustFit | None:
+    usable = np.isfinite(turns.reversed_) if model.dead_band else np.ones(len(turns), dtype=bool)
+    rows = turns.take(usable)
+    shape = shape_of(nominal_size_deg(rows), scatter.size_deg, model.law)
+    variance = rows.u_deg**2 + max(scatter.scatter_deg, 1e-9) ** 2 * shape
+    try:
+        return robust_fit(design_of(rows, model), rows.heading_deg * rows.side, variance)
+    except CalibError:
+        return None
+
+
+def _if_any(choice: _Choice) -> tuple[Estimate | None, Estimate | None]:
+    """Return dead band and difference of the gains by the best model that has them."""
+    band = difference = None
+    for candidate, scatter in choice.ranked:
+        fit = _bare(choice.turns, candidate.model, scatter)
+        if band is None and candidate.model.dead_band:
+            band = fit.dead_band_wheel_deg()
+        if difference is None and candidate.model.separate_gains:
+            apart = direction_difference(fit)
+            difference = apart[0] if apart else None
+    return band, difference
+
+
+def _bare(turns: Turns, model: Model, scatter: ScatterFit) -> Fit:
+    """Return a fit with what its intervals need and nothing more."""
+    return Fit(
+        model=model,
+        sides=sides_of(turns),
+        coefficients=scatter.linear.coefficients,
+        cov=scatter.linear.unscaled_cov,
+        dof=scatter.linear.dof,
+        scatter_deg=scatter.scatter_deg,
+        size_deg=scatter.size_deg,
+        n_turns=len(turns),
+        tried_wheel_deg=(0.0, 0.0),
+        candidates=(),
+        notes=(),
+        residuals_deg=scatter.linear.residuals,
+        standardised=scatter.linear.residuals,
+    )
+
+
+def _notes(turns: Turns) -> tuple[str, ...]:
     notes = []
-    if not can_tell:
+    known = np.isfinite(turns.reversed_)
+    if not (known.any() and can_tell_dead_band(turns.take(known))):
         notes.append(
             "a dead band cannot be told from these turns: at least two that start against and two that start along "
             "the direction of the turn before are needed"
         )
-    if len(_sides(turns)) == 1:
-        notes.append(f"all turns are {SIDE_NAMES[_sides(turns)[0]]}; nothing is known of the other direction")
+    if len(sides_of(turns)) == 1:
+        notes.append(f"all turns are {SIDE_NAMES[sides_of(turns)[0]]}; nothing is known of the other direction")
     if np.ptp(np.abs(turns.wheel_deg)) == 0.0:
         notes.append("all commands have one size, so a gain that depends on the size cannot be seen")
-    if len(used) < len(turns):
-        notes.append(f"{len(turns) - len(used)} turns with unknown slack were left out of the fit of the dead band")
     return tuple(notes)
-
-
-def effective_track_mm(gain: Estimate, robot: Robot, dof: float) -> Estimate | None:
-    """Return the diameter of the circle on which the wheels would roll without slip."""
-    if robot.wheel_diameter_mm is None:
-        return None
-    return ratio_estimate(
-        robot.wheel_diameter_mm,
-        gain.value,
-        var_above=0.0,
-        var_below=gain.u**2,
-        cov=0.0,
-        dof=dof,
-        confidence=gain.confidence,
-    )
-
-
-def contact_fraction(track_mm: Estimate | None, robot: Robot) -> Estimate | None:
-    """Return where the effective track falls across the tyre: 0 at the inner edge, 1 at the outer."""
-    if track_mm is None or robot.inner_track_mm is None or robot.tyre_width_mm is None:
-        return None
-    wide = 2.0 * robot.tyre_width_mm
-    return Estimate(
-        value=(track_mm.value - robot.inner_track_mm) / wide,
-        u=track_mm.u / wide,
-        low=(track_mm.low - robot.inner_track_mm) / wide,
-        high=(track_mm.high - robot.inner_track_mm) / wide,
-        confidence=track_mm.confidence,
-    )
 
 
 def direction_difference(fit: Fit, confidence: float = CONFIDENCE) -> tuple[Estimate, float] | None:

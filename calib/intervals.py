@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
+from scipy import special
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -30,18 +30,43 @@ class Estimate:
     confidence: float
 
 
+def t_quantile(confidence: float, dof: float) -> float:
+    """Return the half width of Student's two-sided interval in standard uncertainties."""
+    return float(special.stdtrit(dof, 0.5 + 0.5 * confidence))
+
+
 def t_estimate(value: float, u: float, dof: float, confidence: float) -> Estimate:
     """Return the estimate with its two-sided Student interval."""
-    half = float(stats.t.ppf(0.5 + 0.5 * confidence, dof)) * u
+    half = t_quantile(confidence, dof) * u
     return Estimate(value=value, u=u, low=value - half, high=value + half, confidence=confidence)
 
 
-def sd_estimate(sd: float, dof: float, confidence: float) -> Estimate:
-    """Return a standard deviation with its chi-square interval; `u` is that of a sample deviation."""
+def sd_estimate(sd: float, dof: float, confidence: float, *, beside: float = 0.0) -> Estimate:
+    """Return a standard deviation with its chi-square interval; `u` is that of a sample deviation.
+
+    Parameters
+    ----------
+    sd : float
+    dof : float
+    confidence : float
+    beside : float
+        Known standard deviation of the measurement, which was in the readings too and has been taken off in squares.
+    """
     tail = 0.5 * (1.0 - confidence)
-    low = sd * math.sqrt(dof / float(stats.chi2.ppf(1.0 - tail, dof)))
-    high = sd * math.sqrt(dof / float(stats.chi2.ppf(tail, dof)))
-    return Estimate(value=sd, u=sd / math.sqrt(2.0 * dof), low=low, high=high, confidence=confidence)
+    total2 = sd**2 + beside**2
+    low2 = total2 * dof / float(special.chdtri(dof, tail)) - beside**2
+    high2 = total2 * dof / float(special.chdtri(dof, 1.0 - tail)) - beside**2
+    if beside > 0.0 and sd < 1e-6 * beside:
+        u = beside / (2.0 * dof) ** 0.25
+    else:
+        u = total2 / (sd * math.sqrt(2.0 * dof)) if sd > 0.0 else 0.0
+    return Estimate(
+        value=sd,
+        u=u,
+        low=math.sqrt(max(low2, 0.0)),
+        high=math.sqrt(max(high2, 0.0)),
+        confidence=confidence,
+    )
 
 
 def ratio_estimate(
@@ -64,7 +89,7 @@ def ratio_estimate(
     """
     value = above / below
     u = math.sqrt(max(var_above - 2.0 * value * cov + value**2 * var_below, 0.0)) / abs(below)
-    t = float(stats.t.ppf(0.5 + 0.5 * confidence, dof))
+    t = t_quantile(confidence, dof)
     a = below**2 - t**2 * var_below
     b = above * below - t**2 * cov
     c = above**2 - t**2 * var_above

@@ -6,11 +6,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.linalg import qr, solve_triangular
 
 from calib.errors import NotEnoughTurns, NotIdentified
 
 FloatArray = NDArray[np.float64]
+
+TINY = float(np.finfo(float).tiny)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -67,12 +68,13 @@ def least_squares(design: ArrayLike, data: ArrayLike, weight: ArrayLike | None =
             n_needed=n_columns + 1,
         )
     root = np.sqrt(np.ones(n_rows) if weight is None else np.asarray(weight, dtype=float))
-    size = np.maximum(np.abs(matrix).max(axis=0), np.finfo(float).tiny)
-    q, r = qr(matrix / size * root[:, None], mode="economic")
-    if np.abs(np.diag(r)).min() < 1e-11 * np.abs(np.diag(r)).max():
+    size = np.maximum(np.abs(matrix).max(axis=0), TINY)
+    q, r = np.linalg.qr(matrix / size * root[:, None])
+    diagonal = np.abs(np.diag(r))
+    if not diagonal.min() > 1e-11 * diagonal.max():
         raise NotIdentified("the turns do not tell the quantities of the model apart")
-    coefficients = solve_triangular(r, q.T @ (values * root))
-    inverse = solve_triangular(r, np.eye(n_columns))
+    inverse = np.linalg.inv(r)
+    coefficients = np.linalg.solve(r, q.T @ (values * root))
     residuals = values - (matrix / size) @ coefficients
     dof = n_rows - n_columns
     return LinearFit(

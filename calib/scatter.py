@@ -6,9 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import minimize_scalar
 
-from calib.linear import LinearFit, least_squares
+from calib.linear import TINY, LinearFit, least_squares
 
 FloatArray = NDArray[np.float64]
 
@@ -56,20 +55,39 @@ def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: 
     law : str
         A key of `LAWS`.
     """
+    u = np.maximum(u, 1e-3 * float(u.max()))
     typical = float(np.sqrt(np.mean(size**2)))
-    shape = (size / typical) ** (2.0 * LAWS[law])
+    shape = shape_of(size, typical, law)
     first = least_squares(design, data, 1.0 / shape)
     if not np.any(u > 0.0):
         return _made(first, first.residual_sd, typical, law, shape * first.residual_sd**2, design, data)
-    top = max(first.residual_sd, 1e-12)
-
-    def cost(scatter: float) -> float:
-        return -_residual_likelihood(design, data, u**2 + scatter**2 * shape)
-
-    found = minimize_scalar(cost, bounds=(0.0, 3.0 * top), method="bounded", options={"xatol": 1e-5 * top})
-    scatter = float(found.x) if found.fun < cost(0.0) else 0.0
+    scatter = _best_scatter(design, data, u, shape, first.residual_sd)
     variance = u**2 + scatter**2 * shape
-    return _made(least_squares(design, data, 1.0 / variance), scatter, typical, law, variance, design, data)
+    return _made(first, scatter, typical, law, variance, design, data)
+
+
+def _best_scatter(design: FloatArray, data: FloatArray, u: FloatArray, shape: FloatArray, first_guess: float) -> float:
+    """Return the scatter with the greatest residual likelihood, by grids each inside the last, then a parabola."""
+    low, high = 0.0, 3.0 * max(first_guess, 1e-12)
+    grid = np.linspace(low, high, 25)
+    for _ in range(2):
+        found = _residual_likelihood(design, data, u**2 + np.outer(grid**2, shape))
+        best = int(np.argmax(found))
+        low, high = grid[max(best - 1, 0)], grid[min(best + 1, len(grid) - 1)]
+        grid = np.linspace(low, high, 25)
+    found = _residual_likelihood(design, data, u**2 + np.outer(grid**2, shape))
+    best = int(np.argmax(found))
+    if best in (0, len(grid) - 1):
+        return float(grid[best])
+    below, at, above = found[best - 1 : best + 2]
+    curve = below - 2.0 * at + above
+    shift = 0.5 * (below - above) / curve if curve < 0.0 else 0.0
+    return float(grid[best] + shift * (grid[1] - grid[0]))
+
+
+def shape_of(size: FloatArray, typical: float, law: str) -> FloatArray:
+    """Return the variances of turns of these sizes, relative to one of `typical` size."""
+    return np.asarray((size / typical) ** (2.0 * LAWS[law]))
 
 
 def _made(
@@ -81,7 +99,7 @@ def _made(
     design: FloatArray,
     data: FloatArray,
 ) -> ScatterFit:
-    variance = np.maximum(variance, np.finfo(float).tiny)
+    variance = np.maximum(variance, TINY)
     final = least_squares(design, data, 1.0 / variance)
     likelihood = -0.5 * float(np.sum(np.log(2.0 * np.pi * variance) + final.residuals**2 / variance))
     return ScatterFit(
@@ -94,11 +112,19 @@ def _made(
     )
 
 
-def _residual_likelihood(design: FloatArray, data: FloatArray, variance: FloatArray) -> float:
-    """Return the logarithm of the residual likelihood up to a constant; by normal equations, since it is searched."""
-    weight = 1.0 / np.maximum(variance, np.finfo(float).tiny)
-    weighted = design * weight[:, None]
-    normal = design.T @ weighted
-    left = data - design @ np.linalg.solve(normal, weighted.T @ data)
+def _residual_likelihood(design: FloatArray, data: FloatArray, variance: FloatArray) -> FloatArray:
+    """Return the logarithm of the residual likelihood up to a constant, for each row of `variance`, shape (K,).
+
+    By normal equations, with the columns at a common size, since it is only searched.
+    """
+    matrix = design / np.maximum(np.abs(design).max(axis=0), TINY)
+    weight = 1.0 / np.maximum(variance, TINY)
+    n, p = matrix.shape
+    products = (matrix[:, :, None] * matrix[:, None, :]).reshape(n, p * p)
+    normal = (weight @ products).reshape(-1, p, p)
+    right = weight @ (matrix * data[:, None])
+    coefficients = np.linalg.solve(normal, right[..., None])[..., 0]
+    left = data - coefficients @ matrix.T
     _, log_det = np.linalg.slogdet(normal)
-    return 0.5 * float(np.sum(np.log(weight)) - weight @ left**2 - log_det)
+    squares = np.sum(weight * left**2, axis=1)
+    return np.asarray(0.5 * (np.sum(np.log(weight), axis=1) - squares - log_det))

@@ -11,19 +11,10 @@ from typing import Any
 
 import numpy as np
 
-from calib.fit import (
-    CONFIDENCE,
-    SIDE_NAMES,
-    Candidate,
-    Fit,
-    Model,
-    Robot,
-    contact_fraction,
-    direction_difference,
-    effective_track_mm,
-    fit_turns,
-)
+from calib.fit import CONFIDENCE, Fit, direction_difference, fit_turns
+from calib.geometry import Robot, contact_fraction, effective_track_mm
 from calib.intervals import Estimate
+from calib.models import SIDE_NAMES, Candidate, Model
 from calib.turns import Turns, reversals
 from floorswing.errors import FileError
 from floorswing.files import plain, read_json, read_measurement
@@ -65,6 +56,8 @@ class FitResult:
     used : tuple of (clip, turn)
         The turns that the fit rests on.
     left_out : tuple of LeftOut
+    stragglers : tuple of (clip, turn)
+        Turns that lie far out and are in the fit nevertheless.
     """
 
     fit: Fit
@@ -73,6 +66,7 @@ class FitResult:
     surface: str
     used: tuple[tuple[str, int], ...]
     left_out: tuple[LeftOut, ...]
+    stragglers: tuple[tuple[str, int], ...] = ()
 
 
 def fit(
@@ -80,6 +74,7 @@ def fit(
     out: str | Path | None = None,
     *,
     confidence: float = CONFIDENCE,
+    keep_strays: bool = False,
 ) -> FitResult:
     """Fit the relation between commands and heading changes to measured clips of one trial.
 
@@ -91,6 +86,8 @@ def fit(
         File to write the result to; nothing is written without it.
     confidence : float
         Of the intervals written.
+    keep_strays : bool
+        Whether turns far from all others stay in the fit; they are named either way.
 
     Raises
     ------
@@ -100,7 +97,8 @@ def fit(
         If the turns do not allow a fit.
     """
     listed = [folders] if isinstance(folders, str | Path) else list(folders)
-    result = fit_measurements([read_measurement(folder) for folder in measured_folders(listed)])
+    measurements = [read_measurement(folder) for folder in measured_folders(listed)]
+    result = fit_measurements(measurements, keep_strays=keep_strays)
     if out is not None:
         write_whole(Path(out), fit_json(result, confidence))
     return result
@@ -118,13 +116,16 @@ def measured_folders(folders: Sequence[str | Path]) -> list[Path]:
     return list(dict.fromkeys(found))
 
 
-def fit_measurements(measurements: Sequence[Measurement]) -> FitResult:
+def fit_measurements(measurements: Sequence[Measurement], *, keep_strays: bool = False) -> FitResult:
     """Fit the turns of one or more measured clips together."""
     first = measurements[0].trial
     _check_one_trial(measurements)
-    turns, used, left_out = usable_turns(measurements)
+    turns, given, left_out = usable_turns(measurements)
+    fitted = fit_turns(turns, keep_strays=keep_strays)
+    reasons = {one.index: one.reason for one in fitted.not_fitted}
+    more = [LeftOut(clip=given[n][0], turn=given[n][1], reason=reason) for n, reason in reasons.items()]
     return FitResult(
-        fit=fit_turns(turns),
+        fit=fitted,
         robot=Robot(
             wheel_diameter_mm=first.robot.wheel_diameter_mm,
             inner_track_mm=first.robot.inner_track_mm,
@@ -132,8 +133,9 @@ def fit_measurements(measurements: Sequence[Measurement]) -> FitResult:
         ),
         robot_name=first.robot.name,
         surface=first.floor.surface,
-        used=tuple(used),
-        left_out=tuple(left_out),
+        used=tuple(one for n, one in enumerate(given) if n not in reasons),
+        left_out=(*left_out, *more),
+        stragglers=tuple(given[n] for n in fitted.stragglers),
     )
 
 
@@ -197,18 +199,23 @@ def fit_json(result: FitResult, confidence: float = CONFIDENCE) -> str:
         "model": plain(fitted.model),
         "models_tried": [{**plain(one.model), "aicc": _finite(one.aicc)} for one in fitted.candidates],
         "n_turns": fitted.n_turns,
+        "difference_of_gains": _bounds(fitted.difference_if_any),
+        "dead_band_if_any_wheel_deg": _bounds(fitted.dead_band_if_any),
+        "offset_deg": _bounds(fitted.offset_deg(confidence)),
         "degrees_of_freedom": fitted.dof,
         "notes": list(fitted.notes),
         **{name: quantities(result, side, confidence) for name, side in sides.items()},
         "both": quantities(result, None, confidence),
         "turns_used": [{"clip": clip, "turn": turn} for clip, turn in result.used],
         "turns_left_out": plain(result.left_out),
+        "stragglers": [{"clip": clip, "turn": turn} for clip, turn in result.stragglers],
         "solution": {
             "sides": list(fitted.sides),
             "coefficients": fitted.coefficients.tolist(),
             "cov": fitted.cov.tolist(),
             "scatter_deg": fitted.scatter_deg,
             "size_deg": fitted.size_deg,
+            "u_typical_deg": fitted.u_typical_deg,
             "tried_wheel_deg": list(fitted.tried_wheel_deg),
         },
     }
@@ -226,11 +233,14 @@ def quantities(result: FitResult, side: float | None, confidence: float = CONFID
         "effective_track_mm": track,
         "contact_fraction": contact_fraction(track, result.robot),
         "repeatability_deg": fitted.repeatability_deg(confidence),
+        "gain_robust_to_strays": fitted.robust_gain(side, confidence),
     }
-    return {name: None if one is None else _bounds(one) for name, one in found.items()}
+    return {name: _bounds(one) for name, one in found.items()}
 
 
-def _bounds(one: Estimate) -> dict[str, float | None]:
+def _bounds(one: Estimate | None) -> dict[str, float | None] | None:
+    if one is None:
+        return None
     return {
         "value": one.value,
         "u": one.u,
@@ -267,7 +277,7 @@ def _fit_of(document: Mapping[str, Any]) -> Fit:
     coefficients, cov = np.array(solution["coefficients"], float), np.array(solution["cov"], float)
     model = Model(**document["model"])
     sides = tuple(float(side) for side in solution["sides"])
-    n_wanted = (len(sides) if model.separate_gains else 1) + model.dead_band
+    n_wanted = (len(sides) if model.separate_gains else 1) + model.dead_band + model.offset
     if coefficients.shape != (n_wanted,) or cov.shape != (n_wanted, n_wanted):
         raise ValueError(f"{n_wanted} coefficients expected")
     low, high = solution["tried_wheel_deg"]
@@ -280,10 +290,11 @@ def _fit_of(document: Mapping[str, Any]) -> Fit:
         scatter_deg=float(solution["scatter_deg"]),
         size_deg=float(solution["size_deg"]),
         n_turns=int(document["n_turns"]),
+        u_typical_deg=float(solution["u_typical_deg"]),
         tried_wheel_deg=(float(low), float(high)),
         candidates=tuple(
             Candidate(
-                model=Model(**{key: one[key] for key in ("separate_gains", "dead_band", "law")}),
+                model=Model(**{key: one[key] for key in ("separate_gains", "dead_band", "offset", "law")}),
                 aicc=math.inf if one["aicc"] is None else float(one["aicc"]),
             )
             for one in document["models_tried"]
@@ -303,21 +314,56 @@ def sentences(result: FitResult) -> list[str]:
         f"{gain.low:.4f} and {gain.high:.4f} ({gain.confidence:.0%}), from {fitted.n_turns} turns; single turns of "
         f"about {fitted.size_deg:.0f} degrees scatter by {scatter.value:.2f} degrees (standard deviation, between "
         f"{scatter.low:.2f} and {scatter.high:.2f}).",
-        f"Model: {fitted.model}.",
+        f"Model: {fitted.model}{_runner_up(fitted)}.",
     ]
-    band = fitted.dead_band_wheel_deg()
-    if band is not None:
-        said.append(
-            f"At a reversal {band.value:.1f} wheel degrees are lost (between {band.low:.1f} and {band.high:.1f})."
-        )
-    apart = direction_difference(fitted)
-    if apart is not None:
-        more = "further" if apart[0].value > 0 else "less far"
-        said.append(f"Counter-clockwise it turns {abs(apart[0].value):.2%} {more} than clockwise (p = {apart[1]:.2g}).")
+    said.extend([*_band_sentence(fitted), *_direction_sentence(fitted), *_stray_sentences(result)])
     contact = contact_fraction(effective_track_mm(gain, result.robot, fitted.dof), result.robot)
     if contact is not None:
         said.append(contact_sentence(contact))
     said.extend(f"Note: {note}." for note in fitted.notes)
+    return said
+
+
+def _runner_up(fitted: Fit) -> str:
+    if len(fitted.candidates) < 2:
+        return ""
+    best, second = fitted.candidates[:2]
+    if not math.isfinite(second.aicc):
+        return ""
+    return f" (next: {second.model}; its criterion is {second.aicc - best.aicc:.1f} worse)"
+
+
+def _band_sentence(fitted: Fit) -> list[str]:
+    band = fitted.dead_band_wheel_deg()
+    if band is not None:
+        return [f"At a reversal {band.value:.1f} wheel degrees are lost (between {band.low:.1f} and {band.high:.1f})."]
+    if fitted.dead_band_if_any is not None:
+        most = max(fitted.dead_band_if_any.high, 0.0)
+        return [f"No dead band is seen; if there is one, it is at most {most:.1f} wheel degrees."]
+    return []
+
+
+def _direction_sentence(fitted: Fit) -> list[str]:
+    apart, known = direction_difference(fitted), fitted.difference_if_any
+    if apart is not None:
+        more = "further" if apart[0].value > 0 else "less far"
+        return [f"Counter-clockwise it turns {abs(apart[0].value):.2%} {more} than clockwise (p = {apart[1]:.2g})."]
+    if known is not None:
+        most = max(abs(known.low), abs(known.high))
+        return [f"The directions are not told apart; their gains differ by at most {most:.1%}."]
+    return []
+
+
+def _stray_sentences(result: FitResult) -> list[str]:
+    said = []
+    if result.stragglers:
+        named = ", ".join(f"turn {turn} of {clip}" for clip, turn in result.stragglers)
+        said.append(f"Far out, but in the fit: {named}.")
+    plain_gain, robust = result.fit.gain(), result.fit.robust_gain()
+    if robust is not None and abs(robust.value - plain_gain.value) > 2.0 * plain_gain.u > 0.0:
+        said.append(
+            f"A fit that strays pull little at gives {robust.value:.4f} instead: a few turns decide, so look at them."
+        )
     return said
 
 

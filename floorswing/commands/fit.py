@@ -22,8 +22,9 @@ LABELS = {
 @click.command(short_help="Fit heading change against commanded wheel degrees.")
 @click.argument("folders", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="DIR...")
 @click.option("--out", type=click.Path(path_type=Path), help="File to write.  [default: fit.json in the first DIR]")
+@click.option("--keep-strays", is_flag=True, help="Keep turns far from all others in the fit.")
 @click.option("--json", "as_json", is_flag=True, help="Print fit.json instead of tables.")
-def command(folders: tuple[Path, ...], out: Path | None, as_json: bool) -> None:
+def command(folders: tuple[Path, ...], out: Path | None, as_json: bool, keep_strays: bool = False) -> None:
     """Fit the relation to the measured clips in each DIR: folders that `measure` wrote.
 
     All clips must be of one robot on one floor. Written are gain, dead band, effective track, contact fraction and
@@ -32,7 +33,7 @@ def command(folders: tuple[Path, ...], out: Path | None, as_json: bool) -> None:
     from floorswing.fitting import FIT_FILE, fit, fit_json, sentences
 
     target = out or folders[0] / FIT_FILE
-    result = fit(folders, target)
+    result = fit(folders, target, keep_strays=keep_strays)
     if as_json:
         click.echo(fit_json(result), nl=False)
         return
@@ -45,7 +46,7 @@ def command(folders: tuple[Path, ...], out: Path | None, as_json: bool) -> None:
 
 
 def _table(result: FitResult) -> str:
-    from calib.fit import SIDE_NAMES
+    from calib.models import SIDE_NAMES
     from floorswing.fitting import quantities
     from floorswing.tables import table
 

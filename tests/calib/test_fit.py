@@ -6,8 +6,10 @@ from numpy.testing import assert_allclose
 
 from calib.command import command_for
 from calib.errors import CalibError, NotEnoughTurns, NotIdentified
-from calib.fit import Model, Robot, contact_fraction, direction_difference, effective_track_mm, fit_turns
+from calib.fit import direction_difference, fit_turns
+from calib.geometry import Robot, contact_fraction, effective_track_mm
 from calib.intervals import Estimate
+from calib.models import Model
 from calib.turns import Turns, reversals
 from tests.reference import numbers
 
@@ -151,9 +153,7 @@ def test_reversals():
 @given(seed=st.integers(0, 10_000), factor=st.floats(0.1, 10.0))
 def test_units_of_the_commands_only_scale_the_gain(seed, factor):
     given_turns = simulated(seed, n=16)
-    scaled = turns(
-        given_turns.wheel_deg * factor, given_turns.heading_deg, given_turns.u_deg, given_turns.reversed_
-    )
+    scaled = turns(given_turns.wheel_deg * factor, given_turns.heading_deg, given_turns.u_deg, given_turns.reversed_)
     a, b = fit_turns(given_turns).gain(), fit_turns(scaled).gain()
     assert_allclose([b.value * factor, b.u * factor], [a.value, a.u], rtol=1e-5)
 
@@ -162,9 +162,7 @@ def test_units_of_the_commands_only_scale_the_gain(seed, factor):
 @given(seed=st.integers(0, 10_000))
 def test_mirroring_swaps_the_directions(seed):
     given_turns = simulated(seed, n=16, gains=(0.48, 0.47))
-    mirrored = turns(
-        -given_turns.wheel_deg, -given_turns.heading_deg, given_turns.u_deg, given_turns.reversed_
-    )
+    mirrored = turns(-given_turns.wheel_deg, -given_turns.heading_deg, given_turns.u_deg, given_turns.reversed_)
     a, b = fit_turns(given_turns), fit_turns(mirrored)
     assert a.model == b.model
     assert_allclose(a.gain(1.0).value, b.gain(-1.0).value, rtol=1e-9)

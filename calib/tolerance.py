@@ -1,0 +1,75 @@
+"""Tolerance factors: how many standard deviations hold a share of all turns with a stated confidence."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from scipy import stats
+from scipy.optimize import brentq
+
+
+def tolerance_factor(n: float, dof: float, coverage: float, confidence: float) -> float:
+    """Return the exact two-sided factor for a normal population.
+
+    Parameters
+    ----------
+    n : float
+        Readings behind the mean; for a point on a fitted line, the variance of one reading over that of the point.
+    dof : float
+        Degrees of freedom of the standard deviation.
+    coverage, confidence : float
+        Share of the population to hold, and how sure.
+
+    References
+    ----------
+    ISO 16269-6:2014; Krishnamoorthy and Mathew (2009), Statistical Tolerance Regions, 2.3.
+    """
+    _check(coverage, confidence)
+    nodes, weights = np.polynomial.legendre.leggauss(96)
+    z = 4.5 * (nodes + 1.0)
+    density = 4.5 * weights * 2.0 * stats.norm.pdf(z)
+    reach2 = stats.ncx2.ppf(coverage, 1, z**2 / n)
+
+    def short(log_factor: float) -> float:
+        return float(density @ stats.chi2.sf(dof * reach2 * math.exp(-2.0 * log_factor), dof)) - confidence
+
+    return math.exp(float(brentq(short, math.log(1e-3), math.log(1e6), xtol=1e-12)))
+
+
+def one_sided_factor(n: float, dof: float, coverage: float, confidence: float) -> float:
+    """Return the exact one-sided factor for a normal population (noncentral t)."""
+    _check(coverage, confidence)
+    root = math.sqrt(n)
+    return float(stats.nct.ppf(confidence, dof, float(stats.norm.ppf(coverage)) * root)) / root
+
+
+def howe_factor(n: float, dof: float, coverage: float, confidence: float) -> float:
+    """Return Howe's approximation to the two-sided factor, for comparison with published tables.
+
+    References
+    ----------
+    Howe (1969), Two-sided tolerance limits for normal populations, JASA 64, 610-620.
+    """
+    _check(coverage, confidence)
+    z = float(stats.norm.ppf(0.5 + 0.5 * coverage))
+    return z * math.sqrt(dof * (1.0 + 1.0 / n) / float(stats.chi2.ppf(1.0 - confidence, dof)))
+
+
+def free_sample_size(coverage: float, confidence: float, *, two_sided: bool) -> int:
+    """Return the least sample whose largest value (or whose two extremes) hold a share, whatever the distribution.
+
+    References
+    ----------
+    Wilks (1941), Determination of sample sizes for setting tolerance limits, Ann. Math. Stat. 12, 91-96.
+    """
+    _check(coverage, confidence)
+    n = 2
+    while stats.beta.sf(coverage, n - two_sided, 1 + two_sided) < confidence:
+        n += 1
+    return n
+
+
+def _check(coverage: float, confidence: float) -> None:
+    if not (0.0 < coverage < 1.0 and 0.0 < confidence < 1.0):
+        raise ValueError(f"coverage {coverage}, confidence {confidence}; accepted: above 0 and below 1")
