@@ -6,11 +6,10 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
 from calib.errors import NotIdentified
 from calib.fit import CONFIDENCE, Fit
-from calib.intervals import Estimate, ratio_estimate
+from calib.intervals import Estimate, ratio_estimate, t_quantile
 from calib.models import SIDE_NAMES
 
 
@@ -31,6 +30,11 @@ class Command:
     confidence : float
     extrapolated : bool
         Whether the command lies outside the sizes that were tried.
+    scatter_deg : float
+        Standard deviation of single turns of this size.
+    u_mean_deg : float
+        Standard uncertainty of the mean heading change at this command.
+    dof : int
     """
 
     wanted_deg: float
@@ -40,6 +44,9 @@ class Command:
     high_deg: float
     confidence: float
     extrapolated: bool
+    scatter_deg: float
+    u_mean_deg: float
+    dof: int
 
 
 def command_for(
@@ -74,8 +81,8 @@ def command_for(
         confidence=confidence,
     )
     row = gain * wheel.value - lost
-    spread = math.sqrt(fit.scatter_at_deg(size) ** 2 + float(row @ fit.cov @ row))
-    half = float(stats.t.ppf(0.5 + 0.5 * confidence, fit.dof)) * spread
+    scatter_deg, u_mean_deg = fit.scatter_at_deg(size), math.sqrt(float(row @ fit.cov @ row))
+    half = t_quantile(confidence, fit.dof) * math.hypot(scatter_deg, u_mean_deg)
     low, high = fit.tried_wheel_deg
     return Command(
         wanted_deg=wanted_deg,
@@ -85,6 +92,9 @@ def command_for(
         high_deg=max(side * (size - half), side * (size + half)),
         confidence=confidence,
         extrapolated=not 0.98 * low <= wheel.value <= 1.02 * high,
+        scatter_deg=scatter_deg,
+        u_mean_deg=u_mean_deg,
+        dof=fit.dof,
     )
 
 

@@ -3,8 +3,9 @@
 Along the direction of the command, ``heading change = gain * (|wheel degrees| - dead band * reversed)``, plus an offset
 whatever the direction, with one gain or one for each direction, with or without dead band and offset, and with one of
 three laws for the scatter of single turns. Which of these the data support is decided by the corrected information
-criterion; the runners-up are kept. Strays are left out and named, and a fit that they pull little at stands beside.
-What a plan cannot tell apart is said, not invented.
+criterion, and the ranking is kept; but an interval from terms that the data themselves chose holds the truth too seldom
+(bench/coverage.py), so unless told otherwise every term that the turns can tell stays in. Strays are left out and
+named, and a fit that they pull little at stands beside. What a plan cannot tell apart is said, not invented.
 """
 
 from __future__ import annotations
@@ -37,6 +38,8 @@ FloatArray = NDArray[np.float64]
 
 CONFIDENCE = 0.95
 FEWEST_TURNS = 3
+STRONG = 6.0
+"""Difference of the criterion that counts as strong evidence (Burnham and Anderson 2002, 2.6)."""
 UNKNOWN_SLACK = "the slack of the wheels before it is not known, and a dead band is fitted"
 
 
@@ -68,7 +71,7 @@ class Fit:
     tried_wheel_deg : tuple of float
         Smallest and largest size of the commands.
     candidates : tuple of Candidate
-        All models tried, best first.
+        All models tried, best by the criterion first.
     notes : tuple of str
         What the data could not tell, a sentence each.
     residuals_deg, standardised : ndarray, shape (N,)
@@ -176,17 +179,15 @@ class Fit:
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
 class _Choice:
-    """The models fitted to one set of turns, best first."""
+    """The models fitted to one set of turns, best by the criterion first, and the one that intervals rest on."""
 
     turns: Turns
     ranked: tuple[tuple[Candidate, ScatterFit], ...]
 
-    @property
-    def best(self) -> tuple[Model, ScatterFit]:
-        return self.ranked[0][0].model, self.ranked[0][1]
+    best: tuple[Model, ScatterFit]
 
 
-def fit_turns(turns: Turns, *, keep_strays: bool = False) -> Fit:
+def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = False) -> Fit:
     """Fit the relation to usable turns.
 
     Parameters
@@ -194,6 +195,9 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False) -> Fit:
     turns : Turns
     keep_strays : bool
         Whether turns far from all others stay in the fit.
+    drop_terms : bool
+        Whether terms that the criterion does not support are dropped. Intervals are then narrower, and hold the truth
+        less often than they say.
 
     Raises
     ------
@@ -210,7 +214,7 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False) -> Fit:
         )
     _check_direction(turns)
     strays: tuple[int, ...] = ()
-    choice, place = _choose(turns, np.ones(len(turns), dtype=bool))
+    choice, place = _choose(turns, np.ones(len(turns), dtype=bool), drop_terms)
     for _ in range(0 if keep_strays else 3):
         found = _far_out(turns, choice, STRAY_LEVEL)
         if set(found) <= set(strays):
@@ -218,7 +222,7 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False) -> Fit:
         strays = tuple(sorted({*strays, *found}))
         kept = np.ones(len(turns), dtype=bool)
         kept[list(strays)] = False
-        choice, place = _choose(turns, kept)
+        choice, place = _choose(turns, kept, drop_terms)
     return _concluded(turns, choice, place, strays)
 
 
@@ -227,28 +231,39 @@ def _check_direction(turns: Turns) -> None:
         raise CalibError("the robot turned against its commands, or not at all; check the signs of the commands")
 
 
-def _choose(turns: Turns, kept: NDArray[np.bool_]) -> tuple[_Choice, NDArray[np.intp]]:
-    """Fit all models to the turns kept; return them with the places of the turns the best rests on."""
+def _choose(turns: Turns, kept: NDArray[np.bool_], drop_terms: bool) -> tuple[_Choice, NDArray[np.intp]]:
+    """Fit all models to the turns kept; return them with the places of the turns the answer rests on."""
     known = kept & np.isfinite(turns.reversed_)
     can_tell = can_tell_dead_band(turns.take(known)) if known.any() else False
     chosen = known if can_tell else kept
-    choice = _ranked(turns.take(chosen), dead_band=can_tell)
-    if can_tell and not choice.best[0].dead_band and np.any(chosen != kept):
-        plain = _ranked(turns.take(kept), dead_band=False)
-        same = [one for one in plain.ranked if one[0].model == choice.best[0]]
+    ranked = _ranked(turns.take(chosen), dead_band=can_tell)
+    best = ranked[0] if drop_terms else _fullest(ranked)
+    if can_tell and not best[0].model.dead_band:  # turns with unknown slack count again
         chosen = kept
-        choice = _Choice(turns=turns.take(kept), ranked=(*same, *choice.ranked[1:]))
+        best = (best[0], _fit_model(turns.take(kept), best[0].model) or best[1])
+    choice = _Choice(turns=turns.take(chosen), ranked=ranked, best=(best[0].model, best[1]))
     return choice, np.flatnonzero(chosen)
 
 
-def _ranked(turns: Turns, *, dead_band: bool) -> _Choice:
+def _ranked(turns: Turns, *, dead_band: bool) -> tuple[tuple[Candidate, ScatterFit], ...]:
     tried = [(model, _fit_model(turns, model)) for model in possible_models(turns, dead_band=dead_band)]
     fitted = [
         (Candidate(model=model, aicc=aicc(found, len(turns))), found) for model, found in tried if found is not None
     ]
     if not fitted:
         raise CalibError("no model can be fitted to these turns; more turns, or more different ones, are needed")
-    return _Choice(turns=turns, ranked=tuple(sorted(fitted, key=lambda one: one[0].aicc)))
+    return tuple(sorted(fitted, key=lambda one: one[0].aicc))
+
+
+def _fullest(ranked: tuple[tuple[Candidate, ScatterFit], ...]) -> tuple[Candidate, ScatterFit]:
+    """Return the model with every term; the law of scatter, and an offset, by strong evidence only."""
+    best = ranked[0][0]
+    without = [one for one in ranked if not one[0].model.offset]
+    offset = best.model.offset and without[0][0].aicc - best.aicc > STRONG
+    pool = [one for one in ranked if one[0].model.offset == offset]
+    most = max((one[0].model.separate_gains + one[0].model.dead_band) for one in pool)
+    full = [one for one in pool if one[0].model.separate_gains + one[0].model.dead_band == most]
+    return max(full, key=lambda one: one[1].residual_likelihood)
 
 
 def nominal_size_deg(turns: Turns) -> FloatArray:

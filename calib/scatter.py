@@ -31,6 +31,8 @@ class ScatterFit:
     variance_deg2 : ndarray, shape (N,)
     log_likelihood : float
         At the maximum over coefficients, the scatter from its residual likelihood.
+    residual_likelihood : float
+        Logarithm of the residual likelihood; comparable between laws for the same design.
     """
 
     linear: LinearFit
@@ -39,6 +41,7 @@ class ScatterFit:
     law: str
     variance_deg2: FloatArray
     log_likelihood: float
+    residual_likelihood: float
 
 
 def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: FloatArray, law: str) -> ScatterFit:
@@ -99,7 +102,7 @@ def _made(
     design: FloatArray,
     data: FloatArray,
 ) -> ScatterFit:
-    variance = np.maximum(variance, TINY)
+    variance = np.maximum(variance, (1e-15 * max(float(np.abs(data).max()), 1e-100)) ** 2)
     final = least_squares(design, data, 1.0 / variance)
     likelihood = -0.5 * float(np.sum(np.log(2.0 * np.pi * variance) + final.residuals**2 / variance))
     return ScatterFit(
@@ -109,6 +112,7 @@ def _made(
         law=law,
         variance_deg2=variance,
         log_likelihood=likelihood,
+        residual_likelihood=float(_residual_likelihood(design, data, variance[None, :])[0]),
     )
 
 

@@ -22,7 +22,7 @@ STRAY_LEVEL = 0.01
 """Level at which a turn is left out, and
 `STRAGGLER_LEVEL` that at which it is only pointed out (ISO 5725-2:1994, 7.3.2.1)."""
 STRAGGLER_LEVEL = 0.05
-FEWEST_DOF = 4
+FEWEST_DOF = 3
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)

@@ -325,12 +325,14 @@ def sentences(result: FitResult) -> list[str]:
 
 
 def _runner_up(fitted: Fit) -> str:
-    if len(fitted.candidates) < 2:
+    """Return how the model stands among those tried, by the criterion."""
+    ranked = [one for one in fitted.candidates if math.isfinite(one.aicc)]
+    here = [one for one in ranked if one.model == fitted.model]
+    if not here or len(ranked) < 2:
         return ""
-    best, second = fitted.candidates[:2]
-    if not math.isfinite(second.aicc):
-        return ""
-    return f" (next: {second.model}; its criterion is {second.aicc - best.aicc:.1f} worse)"
+    if here[0] is not ranked[0]:
+        return f" (the criterion ranks {ranked[0].model} first, by {here[0].aicc - ranked[0].aicc:.1f})"
+    return f" (next: {ranked[1].model}; its criterion is {ranked[1].aicc - ranked[0].aicc:.1f} worse)"
 
 
 def _band_sentence(fitted: Fit) -> list[str]:
