@@ -72,6 +72,7 @@ DEMOS = (
             light=Light(gradient=0.25, vignette=0.2),
             sensor=sensor(),
             seed=11,
+            tint=True,
         ),
         drive=Drive(contact_scatter=0.008, contact_wander=0.006),
         wheel_deg=CALM,
@@ -90,6 +91,7 @@ DEMOS = (
             light=Light(gradient=0.2, shadows=(ShadowEdge(at_px=(420.0, 300.0), direction_deg=160.0, darkness=0.3),)),
             sensor=sensor(),
             seed=12,
+            tint=True,
         ),
         drive=Drive(
             contact_scatter=0.035,
@@ -115,6 +117,7 @@ DEMOS = (
             light=Light(gradient=0.3, gradient_direction_deg=200.0, vignette=0.15),
             sensor=sensor(),
             seed=13,
+            tint=True,
         ),
         drive=Drive(contact_scatter=0.012, contact_wander=0.008, backlash_wheel_deg=2.5, rate_wheel_deg_s=230.0),
         wheel_deg=MIXED,
