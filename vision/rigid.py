@@ -66,7 +66,7 @@ def rigid_between(source: FloatArray, target: FloatArray) -> tuple[float, float,
 def fit_homography(source: FloatArray, target: FloatArray) -> FloatArray | None:
     """Return the least-squares homography from `source` (K, 2) to `target`, or None where there is none."""
     found, _ = cv2.findHomography(source, target, 0)
-    if found is None or not np.all(np.isfinite(found)):
-        return None
+    if found is None or not np.all(np.isfinite(found)) or np.linalg.matrix_rank(found) < 3:
+        return None  # points on one line leave a map that cannot be inverted
     map_: FloatArray = np.asarray(found, dtype=np.float64)
     return map_
