@@ -33,9 +33,7 @@ def test_the_worked_example_of_the_documentation():
     cov = np.zeros((N_GLOBAL, N_GLOBAL))
     cov[0, 0] = 1.0
     share = pooled_share(seen.left, [rest(FIRST), rest(SECOND)])
-    u = change_uncertainty(
-        seen, rest(FIRST), rest(SECOND, lags=True), cov, share, Lag(0.0060, 5), camera_still=True
-    )
+    u = change_uncertainty(seen, rest(FIRST), rest(SECOND, lags=True), cov, share, Lag(0.0060, 5), camera_still=True)
     print(f"u = {u:.4f} deg, expanded {2 * u:.3f} deg")
     assert_allclose(share, 0.50, rtol=1e-12)
     assert_allclose(u, np.sqrt(77.00e-6), rtol=1e-12)

@@ -65,9 +65,7 @@ def test_projection_against_opencv():
     pose = np.array([[0.4, 0.2, -0.3]])
     ours = project_pair(p, pose, UNITS).corners_px.reshape(8, 2)
     square = UNIT_CORNERS * 40.0 / 130.0
-    body = np.concatenate(
-        [project(rigid(0.3, 0.5, 0.0), square), project(rigid(-0.2, -0.5, 0.0), square)]
-    )
+    body = np.concatenate([project(rigid(0.3, 0.5, 0.0), square), project(rigid(-0.2, -0.5, 0.0), square)])
     world = project(place @ rigid(*pose[0]), body) * UNITS.length_mm
     assert_allclose(ours, cv_project(world), rtol=0, atol=1e-8)  # px
     back = to_plane(ours, p, UNITS)
