@@ -24,6 +24,12 @@ SHORTEST_REST_S = 0.2
 SMALLEST_TURN_DEG = 0.5
 """A smaller rotation is never a commanded turn; it is reported as a nudge."""
 
+SMALLEST_NUDGE_DEG, NUDGE_NOISES = 0.1, 12.0
+"""A slow motion counts if it turns the robot by more than this, and by so many times the noise of a frame.
+
+Coded pictures jump by less at key frames.
+"""
+
 
 @dataclass(frozen=True, slots=True)
 class Stretch:
@@ -76,6 +82,7 @@ def find_motion(
     speed_still = min(_still_level(speed), np.hypot(_white_level(time_s, x_mm), _white_level(time_s, y_mm)))
     top_mm_s = max(_top(swept_mm_s, swept_still), _top(speed, speed_still))
     turning = _significant(swept_mm_s, swept_still, top_mm_s)
+    turning |= _adds_up(swept_mm_s, swept_still, top_mm_s, heading_deg, noise_deg)
     sliding = _significant(speed, speed_still, top_mm_s)
     return Motion(rate_deg_s=rate, speed_mm_s=speed, moving=turning | sliding, noise_deg=noise_deg)
 
@@ -141,6 +148,18 @@ def _significant(size: FloatArray, still: float, top: float) -> NDArray[np.bool_
     for stretch in stretches(above):
         part = slice(stretch.first, stretch.last + 1)
         keep[part] = size[part].max() > high
+    return keep
+
+
+def _adds_up(
+    size: FloatArray, still: float, top: float, heading_deg: FloatArray, noise_deg: float
+) -> NDArray[np.bool_]:
+    """Return where a motion is slow beside the clip's turns and yet leaves the robot at another heading."""
+    keep = np.zeros(len(size), dtype=bool)
+    for stretch in stretches(size > max(POSSIBLY * still, 0.01 * top)):
+        change_deg = abs(heading_deg[stretch.last] - heading_deg[stretch.first])
+        if change_deg > max(SMALLEST_NUDGE_DEG, NUDGE_NOISES * noise_deg):
+            keep[stretch.first : stretch.last + 1] = True
     return keep
 
 
