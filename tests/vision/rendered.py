@@ -19,7 +19,7 @@ def true_corners_px(scene, place=PLACE):
     printed = UNIT_CORNERS * [1.0, -1.0] * robot.marker_side_mm  # y down as printed, y left on the robot
     corners = []
     for mount in (robot.fore, robot.aft):
-        floor = (printed + [mount.x_mm, mount.y_mm]) @ np.array([[c, s], [-s, c]]) + place[:2]
+        floor = (printed + np.array([mount.x_mm, mount.y_mm])) @ np.array([[c, s], [-s, c]]) + place[:2]
         corners.append(project(scene.camera, np.column_stack([floor, np.full(4, robot.deck_height_mm)])))
     return np.array(corners)
 

@@ -51,7 +51,9 @@ def test_printed_modules_are_those_of_the_picture(dictionary):
     black = printed_modules(dictionary, 1)
     n = dictionary_named(dictionary).markerSize + 2
     assert black.shape == (n, n)
-    assert black[0].all() and black[-1].all() and black[:, 0].all() and black[:, -1].all()
+    border = np.ones((n, n), bool)
+    border[1:-1, 1:-1] = False
+    assert black[border].all()
     centres = (np.arange(n) + 0.5) / n - 0.5
     at = np.stack(np.meshgrid(centres, centres), axis=-1).reshape(-1, 2)
     px = np.round(project(homography_from_corners(TRUE_PX), at)).astype(int)

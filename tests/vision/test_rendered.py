@@ -28,7 +28,7 @@ def stated_u_px(track):
 
 
 def test_corners_within_their_uncertainty(seen):
-    sensor, true_px, _, track = seen
+    _, true_px, _, track = seen
     errors = np.abs(track.corners_px - true_px) / stated_u_px(track)
     # 2400 normal deviates: the largest is expected at 3.5 u; a bias of a few thousandths of a pixel adds to that.
     assert errors.max() < 5.0
@@ -74,7 +74,7 @@ def test_detected_corners_are_far_coarser(seen):
 
 
 def test_gain_and_offset_do_not_move_corners(seen):
-    _, true_px, frames, track = seen
+    _, _, frames, track = seen
     dim = [replace_luma(frame, 0.45, 20.0) for frame in frames[:30]]
     again = track_pair(iter(dim), SETUP)
     # Grey levels are rounded to whole numbers anew, which is a little noise of its own.
