@@ -48,6 +48,9 @@ PRINT = slice(13, 21)
 
 N_GLOBAL = len(NAMES)
 
+MOST_LENS_STEPS, LENS_ROUNDING, LENS_CLOSE = 16, 1e-14, 1e-9
+"""Steps that straighten a point, and the miss (half diagonals) at which they end, or the point counts as beyond."""
+
 
 def _print_modes() -> FloatArray:
     """Return the four ways, shape (4, 4, 2), in which a square's corners move that are not rigid and not a scale."""
@@ -149,11 +152,23 @@ def distort(points: FloatArray, lens: FloatArray) -> FloatArray:
 
 
 def undistort(points: FloatArray, lens: FloatArray) -> FloatArray:
-    """Invert `distort` by fixed-point steps; exact to rounding for ordinary lenses."""
-    straight = points
-    for _ in range(12):
-        r2 = np.sum(straight**2, axis=-1, keepdims=True)
-        straight = points / (1.0 + r2 * (lens[0] + r2 * lens[1]))
+    """Invert `distort` by Newton's steps on the radius; NaN beyond where the lens term folds back on itself.
+
+    Below the fold a radial term of one sign has a curvature of one sign, so the steps approach from one side.
+    """
+    k1, k2 = float(lens[0]), float(lens[1])
+    seen = np.sqrt(np.sum(points**2, axis=-1, keepdims=True))
+    radius = seen
+    with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
+        for _ in range(MOST_LENS_STEPS):
+            r2 = radius * radius
+            slope = 1.0 + r2 * (3.0 * k1 + r2 * 5.0 * k2)
+            miss = radius * (1.0 + r2 * (k1 + r2 * k2)) - seen
+            if not np.any(np.abs(miss) > LENS_ROUNDING):
+                break
+            radius = np.where(slope > 0.0, radius - miss / slope, np.nan)
+        straight: FloatArray = points * np.where(seen > 0.0, radius / seen, 1.0)
+    straight[(np.abs(miss) > LENS_CLOSE)[..., 0]] = np.nan
     return straight
 
 
