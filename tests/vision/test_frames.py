@@ -18,8 +18,7 @@ def write_clip(path, times_s, *, codec="libx264", pix_fmt="yuv420p", pictures=No
         stream.width, stream.height, stream.pix_fmt = *SIZE, pix_fmt
         stream.codec_context.time_base = Fraction(1, 90000)
         for n, time_s in enumerate(times_s):
-            grey = np.full((SIZE[1], SIZE[0]), 20 + 8 * n, np.uint8)
-            picture = pictures[n] if pictures is not None else grey
+            picture = pictures[n] if pictures is not None else np.full(SIZE[::-1], 20 + 8 * n, np.uint8)
             frame = av.VideoFrame.from_ndarray(picture, format="gray").reformat(format=pix_fmt)
             frame.time_base, frame.pts = Fraction(1, 90000), round(time_s * 90000)
             container.mux(stream.encode(frame))
@@ -63,8 +62,57 @@ def test_a_file_cut_off_in_the_middle_is_read_as_far_as_it_goes(tmp_path):
     whole = write_clip(tmp_path / "whole.mkv", np.arange(30) / 30, pictures=pictures)
     cut = tmp_path / "cut.mkv"
     cut.write_bytes(whole.read_bytes()[: int(whole.stat().st_size * 0.6)])
-    frames, _ = read(cut)
+    frames, clip = read(cut)
     assert 5 < len(frames) < 30
+    assert_allclose(np.diff([frame.time_s for frame in frames]), 1 / 30, atol=2e-3)
+    assert not read(whole)[1].problems
+    if clip.problems:  # what FFmpeg reports depends on where the cut falls; a problem names the file in one line
+        assert all(problem.startswith("cut.mkv: ") and "\n" not in problem for problem in clip.problems)
+
+
+def test_damaged_packets_are_stepped_over_and_said(tmp_path):
+    rng = np.random.default_rng(2)
+    pictures = [rng.integers(0, 255, (SIZE[1], SIZE[0]), dtype=np.uint8) for _ in range(40)]
+    whole = write_clip(tmp_path / "whole.mp4", np.arange(40) / 30, pictures=pictures)
+    with av.open(str(whole)) as container:
+        spots = [(packet.pos, packet.size) for packet in container.demux(video=0) if packet.size]
+    content = bytearray(whole.read_bytes())
+    for pos, size in spots[15:18]:
+        content[pos : pos + size] = bytes(size)
+    (tmp_path / "hurt.mp4").write_bytes(content)
+    frames, clip = read(tmp_path / "hurt.mp4")
+    assert 30 <= len(frames) <= 40
+    assert np.all(np.diff([frame.time_s for frame in frames]) > 0)
+    assert len(clip.problems) == 1
+    assert "3 damaged packets" in clip.problems[0]
+
+
+def test_sound_without_a_picture_is_not_a_clip(tmp_path):
+    path = tmp_path / "hum.mp4"
+    with av.open(str(path), "w") as container:
+        stream = container.add_stream("aac", rate=48000, layout="mono")
+        frame = av.AudioFrame.from_ndarray(np.zeros((1, 4096), np.float32), format="fltp", layout="mono")
+        frame.sample_rate, frame.pts = 48000, 0
+        container.mux(stream.encode(frame))
+        container.mux(stream.encode(None))
+    with pytest.raises(ClipError, match="holds no video"):
+        read(path)
+
+
+@pytest.mark.parametrize("rotation_deg", [0, 90, 180, 270])
+def test_a_clip_stored_lying_is_read_upright(tmp_path, rotation_deg):
+    """The renderer stores clips turned, with the flag that phones write."""
+    from demo_videos.render import Camera, Scene, Sensor, render_clip, spin_motion
+
+    camera = Camera(width_px=96, height_px=64, focal_px=90.0)
+    scene = Scene(camera=camera, sensor=Sensor(noise_grey=0.0))
+    motion = spin_motion([], start=(60.0, 30.0, 20.0), start_delay_s=0.1)
+    path = tmp_path / "lying.mp4"
+    render_clip(scene, motion, path, crf=0, rotation_deg=rotation_deg)
+    frames, clip = read(path)
+    render_clip(scene, motion, tmp_path / "upright.mp4", crf=0)
+    assert (clip.info.width_px, clip.info.height_px) == (96, 64)
+    assert_array_equal(frames[0].luma, read(tmp_path / "upright.mp4")[0][0].luma)
 
 
 @pytest.mark.parametrize(
