@@ -77,7 +77,7 @@ def test_headings_of_single_frames_follow_the_truth(filmed):
 
 
 def test_without_cards_the_turns_are_the_same(filmed):
-    path, truth, result = filmed
+    path, _, result = filmed
     bare = measure_clip(path, setup(card_ids=(), card_side_mm=None))
     assert_allclose(
         [turn.heading_change_deg for turn in bare.turns],
