@@ -8,10 +8,12 @@ A decoder thread runs ahead of the caller by a few frames, so decoding overlaps 
 from __future__ import annotations
 
 import contextlib
+import math
 import queue
 import threading
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from fractions import Fraction
 from pathlib import Path
 from types import TracebackType
 from typing import Any, Self
@@ -31,6 +33,9 @@ FRAMES_AHEAD = 6
 
 MAX_PIXELS = 64_000_000
 """A larger picture is refused: no phone makes it, and a forged header could exhaust the memory."""
+
+CLOSE_S = 1e-4
+"""Times nearer than this are the same: tables keep a hundred-thousandth of a second."""
 
 _LUMA_FIRST = ("yuv", "nv12", "nv21", "nv16", "p010", "p016", "gray")
 
@@ -138,6 +143,41 @@ class Clip:
         if n_frames == 0:
             raise ClipError(f"{self.path.name}: no picture in it can be decoded; is the file complete?")
 
+    def frame_in_each(self, spans_s: Sequence[tuple[float, float]]) -> Iterator[Frame | None]:
+        """Yield one frame of each stretch of time, decoding as little as the key frames allow.
+
+        Parameters
+        ----------
+        spans_s : sequence of (start_s, end_s)
+            In order of time; both ends belong to the stretch.
+
+        Yields
+        ------
+        Frame or None
+            A key frame of the stretch if it has one, or its first frame; None where nothing could be decoded. The
+            index of these frames is -1: what lies between them is not counted.
+        """
+        try:
+            keys = _KeyFrames(self.path)
+        except (av.error.FFmpegError, EOFError):
+            yield from (None for _ in spans_s)
+            return
+        pictures: Iterator[Any] = iter(())
+        now_s = -math.inf
+        for start_s, end_s in spans_s:
+            entry_s = keys.best(start_s, end_s)
+            if entry_s > now_s:
+                self._container.seek(keys.stamp(entry_s), stream=self._stream, backward=True)
+                pictures = self._pictures(_Clock(self._stream))
+            frame = None
+            for picture in pictures:
+                now_s = keys.time_s(picture.pts) if picture.pts is not None else math.inf
+                if now_s >= start_s - CLOSE_S:
+                    if now_s <= end_s + CLOSE_S:
+                        frame = Frame(-1, now_s, self._luma(picture), bool(picture.key_frame))
+                    break
+            yield frame
+
     def _decode_into(self, waiting: queue.Queue[Frame | BaseException | None]) -> None:
         try:
             for frame in self._decode():
@@ -185,6 +225,32 @@ class Clip:
         if picture.width * picture.height > MAX_PIXELS:
             raise ClipError(_too_large(self.path, picture.width, picture.height))
         return self._upright.apply(_luma_plane(picture))
+
+
+class _KeyFrames:
+    """The times at which a clip can be entered, from its packets alone: nothing is decoded."""
+
+    def __init__(self, path: Path) -> None:
+        with _open_container(path) as container:
+            stream = _video_stream(container, path)
+            self._base = stream.time_base or Fraction(1, 1)
+            stamps = [(packet.pts, packet.is_keyframe) for packet in container.demux(stream) if packet.pts is not None]
+        self._first = min((stamp for stamp, _ in stamps), default=0)
+        self._times_s = sorted(self.time_s(stamp) for stamp, is_key in stamps if is_key)
+
+    def time_s(self, stamp: int) -> float:
+        """Return the time of a stamp from the first picture on."""
+        return float((stamp - self._first) * self._base)
+
+    def stamp(self, time_s: float) -> int:
+        """Return the stamp of a time."""
+        return self._first + round(time_s / float(self._base))
+
+    def best(self, start_s: float, end_s: float) -> float:
+        """Return the time of a key frame in the stretch, or of the last one before it."""
+        inside = [time_s for time_s in self._times_s if start_s <= time_s <= end_s]
+        before = [time_s for time_s in self._times_s if time_s < start_s]
+        return inside[0] if inside else before[-1] if before else -math.inf
 
 
 class _Clock:

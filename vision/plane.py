@@ -186,6 +186,11 @@ def to_floor(pose: FloatArray, units: Units) -> tuple[FloatArray, FloatArray, Fl
     return -pose[:, 0], pose[:, 1] * units.length_mm, -pose[:, 2] * units.length_mm
 
 
+def from_floor(heading_rad: FloatArray, x_mm: FloatArray, y_mm: FloatArray, units: Units) -> FloatArray:
+    """Return poses (N, 3) from headings and places (y up): undoes `to_floor`, flip of y included."""
+    return np.stack([-heading_rad, x_mm / units.length_mm, -y_mm / units.length_mm], axis=-1)
+
+
 @dataclass(frozen=True, eq=False, slots=True)
 class Projection:
     """Corners in the picture (N frames) and their derivatives.

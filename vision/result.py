@@ -12,6 +12,7 @@ from vision.card_check import CardCheck, check_cards
 from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
 from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
+from vision.redraw import FloorFrame, redraw_record
 from vision.steady import CameraPath
 from vision.turns import Seen, Split
 
@@ -45,14 +46,13 @@ def assemble(
         track=_pose_track(corners, seen, split, frame),
         turns=turns,
         events=tuple(sorted(events, key=lambda event: event.start_s)),
-        plane=_plane_record(corners, calibration, cards, setup),
+        plane={
+            **_plane_record(corners, calibration, cards, setup),
+            "redraw": redraw_record(calibration.p, calibration.units, frame),
+        },
         budget=budget_of(seen, split, calibration, camera_still=path.still),
         warnings=(*problems, *_warnings(calibration, cards, path)),
     )
-
-
-FloorFrame = tuple[float, float, float]
-"""Heading (deg) and place (mm) of the floor frame in the plane's own frame, y up."""
 
 
 def _floor_frame(cards: list[CardCheck]) -> FloorFrame:
