@@ -17,6 +17,7 @@ from functools import lru_cache
 import cv2
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg.lapack import dgesv, dposv
 
 from vision.frames import LumaImage
 from vision.records import FloatArray
@@ -34,6 +35,10 @@ WHOLLY = 0.999
 
 FEWEST_PIXELS = 60
 """A marker with fewer pixels in the picture is not measured."""
+
+
+_LIGHT = slice(8, 8 + N_LIGHT)
+_EYE = np.eye(8)
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -84,18 +89,15 @@ class Design:
     Parameters
     ----------
     window : tuple of slice
-        The crop of the picture.
-    inside : ndarray of int, shape (n,)
-        Pixels of the crop, flattened, that the template covers.
+        The crop of the picture, strided if it was thinned.
     rows : ndarray, shape (16, n)
-        As `_rows` returns them.
+        As `_rows` returns them; zero at pixels that the template does not cover.
     normal : ndarray, shape (16, 16)
     basis : ndarray, shape (8, 8)
         Map from the eight motion terms to corner displacements.
     """
 
     window: tuple[slice, slice]
-    inside: NDArray[np.intp]
     rows: NDArray[np.float32]
     normal: FloatArray
     basis: FloatArray
@@ -115,14 +117,16 @@ class Held:
 
     def __init__(self, fit: CornerFit) -> None:
         self._fit = fit
-        self._rows = fit.design.rows[:-1]
+        rows = fit.design.rows
+        self._inside = np.flatnonzero(rows[8])
+        self._rows = np.ascontiguousarray(rows[:-1, self._inside])
         self._inverse = np.linalg.inv(fit.design.normal[:-1, :-1])
         self._freedom = max(fit.n_pixels - 8 - N_LIGHT, 1.0)
 
     def again(self, image: LumaImage) -> CornerFit | None:
         """Return the corner model under a new picture; `explained` is then that of the displaced pattern."""
         design = self._fit.design
-        data = image[design.window].ravel()[design.inside].astype(np.float32)
+        data = image[design.window].ravel()[self._inside].astype(np.float32)
         data -= data.mean()
         pull = (self._rows @ data).astype(np.float64)
         answer = self._inverse @ pull
@@ -140,9 +144,9 @@ class Held:
 
 
 @lru_cache(maxsize=1024)
-def _grid(height: int, width: int) -> NDArray[np.float32]:
+def _grid(height: int, width: int, thin: int) -> NDArray[np.float32]:
     """Return the pixels' places about the crop's centre in units of half its longer side, shape (2, n)."""
-    y, x = np.mgrid[0:height, 0:width]
+    y, x = np.mgrid[0:height:thin, 0:width:thin]
     half = 0.5 * max(height, width)
     grid = np.stack([(x - 0.5 * (width - 1)) / half, (y - 0.5 * (height - 1)) / half])
     flat: NDArray[np.float32] = grid.reshape(2, -1).astype(np.float32)
@@ -197,7 +201,7 @@ def fit_corners(
     soften_px : float
         Extra blur given to the picture; the template should have been built with it too.
     thin : int
-        Compare only every so many-th pixel: quicker, and less sharp by its root.
+        Compare only every so many-th pixel along both axes: quicker, and less sharp by as much.
     robust : bool
         Give little weight to pixels that the pattern cannot explain (glint, shadow edge, finger).
 
@@ -210,21 +214,24 @@ def fit_corners(
     if box is None:
         return None
     x0, y0, x1, y1 = box
-    crop = image[y0:y1, x0:x1].astype(np.float32)
-    if soften_px > 0.0:
-        crop = cv2.GaussianBlur(crop, (0, 0), soften_px, borderType=cv2.BORDER_REPLICATE).astype(np.float32)
+    window = (slice(y0, y1, thin), slice(x0, x1, thin))
+    crop = _softened(image[y0:y1, x0:x1], soften_px)[::thin, ::thin] if soften_px > 0.0 else image[window]
     local_px = corners_px - (x0, y0)
     to_crop = homography_from_corners(local_px)
-    rendered = _render(template, to_crop, crop.shape, smear, (x0, y0))
-    inside = np.flatnonzero(rendered[:, 3] > WHOLLY)[::thin]
-    if len(inside) < FEWEST_PIXELS:
+    channels = _render(template, to_crop, crop.shape, smear, (x0, y0), thin)
+    grid = _grid(y1 - y0, x1 - x0, thin)
+    rows, mean = _rows(channels, crop, grid, to_crop)
+    if rows is None:
         return None
-    rows, shift = _rows(rendered, inside, crop, to_crop)
     if robust:
         rows *= np.sqrt(_trust(rows))
-    basis = _motion_basis(local_px, crop.shape)
-    design = Design((slice(y0, y1), slice(x0, x1)), inside, rows, (rows @ rows.T).astype(np.float64), basis)
-    return _solve(design, corners_px, shift)
+    basis = _motion_basis(local_px, (y1 - y0, x1 - x0))
+    return _solve(Design(window, rows, (rows @ rows.T).astype(np.float64), basis), corners_px, mean)
+
+
+def _softened(crop: LumaImage, soften_px: float) -> NDArray[np.float32]:
+    soft = cv2.GaussianBlur(crop.astype(np.float32), (0, 0), soften_px, borderType=cv2.BORDER_REPLICATE)
+    return np.asarray(soft, dtype=np.float32)
 
 
 def _box(corners_px: FloatArray, template: Template, shape: tuple[int, ...]) -> tuple[int, int, int, int] | None:
@@ -247,53 +254,54 @@ def _render(
     shape: tuple[int, ...],
     smear: tuple[FloatArray, ...],
     origin_px: tuple[int, int],
+    thin: int,
 ) -> NDArray[np.float32]:
-    """Return the template's channels at the crop's pixels, shape (n, 4)."""
+    """Return the template's channels at the crop's pixels, shape (4, n)."""
     size = (shape[1], shape[0])
     still = to_crop @ template.unit_from_sample
+    still[:2] /= thin
     if not smear:
-        return _warped(template, still, size)
-    there = np.array([[1.0, 0.0, origin_px[0]], [0.0, 1.0, origin_px[1]], [0.0, 0.0, 1.0]])
-    back = np.array([[1.0, 0.0, -origin_px[0]], [0.0, 1.0, -origin_px[1]], [0.0, 0.0, 1.0]])
+        seen = cv2.warpPerspective(template.channels, still, size, flags=cv2.INTER_LINEAR)
+        return np.ascontiguousarray(seen.reshape(-1, 4).T)
+    there = np.array([[thin, 0.0, origin_px[0]], [0.0, thin, origin_px[1]], [0.0, 0.0, 1.0]])
+    back = np.array([[1.0 / thin, 0.0, -origin_px[0] / thin], [0.0, 1.0 / thin, -origin_px[1] / thin], [0.0, 0.0, 1.0]])
     in_picture = there @ still
-    total = np.zeros((shape[0] * shape[1], 4), dtype=np.float32)
+    total = np.zeros((*shape, 4), dtype=np.float32)
     for motion in smear:
-        total += _warped(template, back @ motion @ in_picture, size)
-    total /= np.float32(len(smear))
-    return total
-
-
-def _warped(template: Template, map_: FloatArray, size: tuple[int, int]) -> NDArray[np.float32]:
-    seen = cv2.warpPerspective(template.channels, map_, size, flags=cv2.INTER_LINEAR)
-    flat: NDArray[np.float32] = np.asarray(seen, dtype=np.float32).reshape(-1, 4)
-    return flat
+        map_ = back @ motion @ in_picture
+        cv2.accumulate(cv2.warpPerspective(template.channels, map_, size, flags=cv2.INTER_LINEAR), total)
+    total *= np.float32(1.0 / len(smear))
+    return np.ascontiguousarray(total.reshape(-1, 4).T)
 
 
 def _rows(
-    rendered: NDArray[np.float32], inside: NDArray[np.intp], crop: NDArray[np.float32], to_crop: FloatArray
-) -> tuple[NDArray[np.float32], float]:
-    """Return the design as rows, shape (16, n): 8 displacements, 7 terms of light and bleed, the data; and its mean."""
-    seen = rendered[inside]
-    x, y = _grid(*crop.shape)[:, inside]
-    rows = np.empty((9 + N_LIGHT, len(inside)), dtype=np.float32)
-    rows[2:6:3] = _slope_map(to_crop) @ seen[:, 1:3].T
-    grey_x, grey_y = rows[2], rows[5]
-    np.multiply(grey_x, x, out=rows[0])
-    np.multiply(grey_x, y, out=rows[1])
-    np.multiply(grey_y, x, out=rows[3])
-    np.multiply(grey_y, y, out=rows[4])
-    outward = rows[0] + rows[4]
-    np.multiply(outward, x, out=rows[6])
-    np.multiply(outward, y, out=rows[7])
-    rows[8] = 1.0
-    rows[9], rows[10] = x, y
-    rows[11] = seen[:, 0]
-    np.multiply(rows[11], x, out=rows[12])
-    np.multiply(rows[11], y, out=rows[13])
-    np.hypot(grey_x, grey_y, out=rows[14])
-    data = crop.ravel()[inside]
-    mean = float(data.mean())
-    np.subtract(data, np.float32(mean), out=rows[15])
+    channels: NDArray[np.float32], crop: LumaImage | NDArray[np.float32], grid: NDArray[np.float32], to_crop: FloatArray
+) -> tuple[NDArray[np.float32] | None, float]:
+    """Return the design as rows, shape (16, n): 8 displacements, 7 terms of light and bleed, the data; and its mean.
+
+    Pixels that the template does not cover wholly have zeros. None where too few are covered.
+    """
+    rows = np.empty((9 + N_LIGHT, channels.shape[1]), dtype=np.float32)
+    mask = rows[8]
+    np.greater(channels[3], WHOLLY, out=mask, casting="unsafe")
+    n_pixels = float(mask.sum())
+    if n_pixels < FEWEST_PIXELS:
+        return None, 0.0
+    grey_x, grey_y, grey = rows[2], rows[5], rows[11]
+    np.matmul(_slope_map(to_crop), channels[1:3], out=rows[2:6:3])
+    grey_x *= mask
+    grey_y *= mask
+    np.multiply(channels[0], mask, out=grey)
+    np.multiply(grid, grey_x, out=rows[0:2])
+    np.multiply(grid, grey_y, out=rows[3:5])
+    np.multiply(grid, rows[0] + rows[4], out=rows[6:8])
+    np.multiply(grid, mask, out=rows[9:11])
+    np.multiply(grid, grey, out=rows[12:14])
+    cv2.magnitude(grey_x, grey_y, rows[14])
+    data = rows[15]
+    np.multiply(crop.ravel(), mask, out=data, dtype=np.float32)
+    mean = float(data.sum()) / n_pixels
+    data -= np.float32(mean) * mask
     return rows, mean
 
 
@@ -322,28 +330,26 @@ def _trust(rows: NDArray[np.float32]) -> NDArray[np.float32]:
 
 
 def _solve(design: Design, corners_px: FloatArray, shift: float) -> CornerFit | None:
-    normal = design.normal
-    light = slice(8, 8 + N_LIGHT)
-    try:
-        to_motion = np.linalg.inv(design.basis)
-        eliminate = np.linalg.solve(normal[light, light], normal[light, :])
-        reduced = normal - normal[:, light] @ eliminate
-        contrast = float(eliminate[3, -1])
-        information = to_motion.T @ reduced[:8, :8] @ to_motion
-        gradient = to_motion.T @ reduced[:8, -1] / contrast
-        move: FloatArray = np.asarray(np.linalg.solve(information, gradient), dtype=np.float64)
-    except (np.linalg.LinAlgError, ZeroDivisionError):
+    normal, basis = design.normal, design.basis
+    _, _, to_motion, singular = dgesv(basis, _EYE)
+    _, eliminate, no_light = dposv(normal[_LIGHT, _LIGHT], normal[_LIGHT])
+    if singular or no_light:
+        return None
+    reduced = normal - normal[:, _LIGHT] @ eliminate
+    contrast = float(eliminate[3, -1])
+    _, answer, no_hold = dposv(reduced[:8, :8], reduced[:8, -1])
+    if no_hold or contrast == 0.0:
         return None
     left, n_pixels = float(reduced[-1, -1]), float(normal[8, 8])
     total = float(normal[-1, -1] - normal[8, -1] ** 2 / n_pixels)
-    gained = float(gradient @ move) * contrast**2
+    gained = float(reduced[:8, -1] @ answer)
     if not total > 0.0 or not math.isfinite(gained):
         return None
     return CornerFit(
         corners_px=corners_px,
-        information=information,
-        gradient=gradient,
-        move_px=move.reshape(4, 2),
+        information=to_motion.T @ reduced[:8, :8] @ to_motion,
+        gradient=to_motion.T @ reduced[:8, -1] / contrast,
+        move_px=(basis @ answer / contrast).reshape(4, 2),
         noise_var=max(left - gained, 1e-9) / max(n_pixels - 8 - N_LIGHT, 1.0) / contrast**2,
         explained=1.0 - left / total,
         contrast=contrast,
@@ -355,12 +361,10 @@ def _solve(design: Design, corners_px: FloatArray, shift: float) -> CornerFit | 
 
 def _motion_basis(local_px: FloatArray, shape: tuple[int, ...]) -> FloatArray:
     """Return the map, shape (8, 8), from the eight motion terms of `_rows` to corner displacements."""
-    half_px = 0.5 * max(shape)
-    x = (local_px[:, 0] - 0.5 * (shape[1] - 1)) / half_px
-    y = (local_px[:, 1] - 0.5 * (shape[0] - 1)) / half_px
-    basis = np.zeros((8, 8))
-    basis[0::2, 0], basis[0::2, 1], basis[0::2, 2] = x, y, 1.0
-    basis[1::2, 3], basis[1::2, 4], basis[1::2, 5] = x, y, 1.0
-    basis[0::2, 6], basis[0::2, 7] = x * x, x * y
-    basis[1::2, 6], basis[1::2, 7] = x * y, y * y
-    return basis
+    half_px, middle_x, middle_y = 0.5 * max(shape), 0.5 * (shape[1] - 1), 0.5 * (shape[0] - 1)
+    rows = []
+    for x_px, y_px in local_px.tolist():
+        x, y = (x_px - middle_x) / half_px, (y_px - middle_y) / half_px
+        rows.append([x, y, 1.0, 0.0, 0.0, 0.0, x * x, x * y])
+        rows.append([0.0, 0.0, 0.0, x, y, 1.0, x * y, y * y])
+    return np.array(rows)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from vision.align import CornerFit
+from vision.align import CornerFit, Held
 from vision.frames import Frame
 from vision.markers import Detection, detect, printed_modules
 from vision.observations import CardLook
@@ -23,6 +23,12 @@ STIR_PX = 0.1
 
 HOLD = 0.6
 
+SHIFTED_PX = 0.1
+"""A card that has shifted by less than this is compared with the same pattern as before, which is quick."""
+
+NOISIER = 1.6
+"""Unless it has become so many times noisier."""
+
 
 class CardWatcher:
     """Looks at each card every half second; mutable, one per clip."""
@@ -30,6 +36,7 @@ class CardWatcher:
     def __init__(self, setup: MarkerSetup) -> None:
         self._setup = setup
         self._known: dict[int, tuple[FloatArray, Template]] = {}
+        self._held: dict[int, tuple[Held, float]] = {}
         self._optics = Optics(1.0)
         self._next_s = 0.0
         self._stirred_s = 0.0
@@ -65,14 +72,32 @@ class CardWatcher:
             return
         self._seen_s = frame.time_s
         for card_id, (corners_px, template) in list(self._known.items()):
-            settled = settle_corners(frame.luma, corners_px, template)
-            if settled is None or settled[1].explained < HOLD:
-                settled = self._find_again(frame, card_id, corners_px, template)
+            settled = self._again(frame, card_id) or self._settle(frame, card_id, corners_px, template)
             if settled is None or settled[1].explained < HOLD:
                 continue
             self._known[card_id] = (settled[0], template)
             self._note(card_id, frame.time_s, settled[0], settled[1].information, settled[1].noise_var)
         self._watch(frame.time_s)
+
+    def _again(self, frame: Frame, card_id: int) -> tuple[FloatArray, CornerFit] | None:
+        """Compare a card that lies where it lay; None if it does not, or has changed."""
+        if card_id not in self._held:
+            return None
+        held, noise_var = self._held[card_id]
+        fit = held.again(frame.luma)
+        if fit is None or np.abs(fit.move_px).max() > SHIFTED_PX or fit.noise_var > NOISIER * noise_var:
+            return None
+        return fit.corners_px + fit.move_px, fit
+
+    def _settle(
+        self, frame: Frame, card_id: int, corners_px: FloatArray, template: Template
+    ) -> tuple[FloatArray, CornerFit] | None:
+        self._held.pop(card_id, None)
+        settled = settle_corners(frame.luma, corners_px, template)
+        if settled is None or settled[1].explained < HOLD:
+            return self._find_again(frame, card_id, corners_px, template)
+        self._held[card_id] = (Held(settled[1]), settled[1].noise_var)
+        return settled
 
     def _watch(self, time_s: float) -> None:
         """Decide how soon to look again, from how far the cards have shifted since the camera last stood still."""
@@ -101,6 +126,8 @@ class CardWatcher:
     def _note(
         self, card_id: int, time_s: float, corners_px: FloatArray, information: FloatArray, noise_var: float
     ) -> None:
-        with np.errstate(all="ignore"):
-            variance = np.diag(np.linalg.pinv(information)) * noise_var
+        try:
+            variance = np.diag(np.linalg.inv(information)) * noise_var
+        except np.linalg.LinAlgError:
+            variance = np.full(8, np.inf)
         self.looks.append(CardLook(card_id, time_s, corners_px, float(np.sqrt(np.median(np.abs(variance))))))

@@ -7,6 +7,7 @@ clip (`vision.plane`) replaces it.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -15,7 +16,7 @@ from scipy.optimize import least_squares, minimize, minimize_scalar
 
 from vision.align import CornerFit, fit_corners
 from vision.frames import LumaImage
-from vision.markers import UNIT_CORNERS, Detection, printed_modules
+from vision.markers import UNIT_CORNERS, printed_modules
 from vision.records import FloatArray, MarkerSetup
 from vision.rigid import fit_homography, inverse, project, rigid, rigid_between
 from vision.template import Optics, Template, build_template
@@ -25,6 +26,10 @@ PROCESSED_STARTS = ((0.0, 0.15, 1.5), (0.0, 0.5, 1.0), (-0.3, 0.4, 1.0), (0.2, 0
 
 WORTH = 0.98
 """A rendering with tone curve and halo is kept if it leaves less than this share of what plain blur leaves."""
+
+
+ENOUGH_PX = 20.0
+"""So many compared pixels along a side are enough while the pair moves: rests are what counts."""
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -116,6 +121,11 @@ class Pattern:
     soft: Template
     soften_px: float
 
+    @property
+    def thin(self) -> int:
+        """Which pixels are compared while the pair moves: every so many-th along both axes."""
+        return min(max(int(self.side_px / ENOUGH_PX), 1), 5)
+
 
 def build_pattern(black: NDArray[np.bool_], side_px: float, optics: Optics) -> Pattern:
     """Return both templates of a marker that is about `side_px` large in the picture."""
@@ -137,7 +147,8 @@ def pair_modules(setup: MarkerSetup) -> tuple[NDArray[np.bool_], NDArray[np.bool
 
 def mean_side_px(corners_px: FloatArray) -> float:
     """Return the mean length of the four sides of one marker, corners of shape (4, 2)."""
-    return Detection(-1, corners_px).side_px
+    points = corners_px.tolist()
+    return 0.25 * sum(math.dist(points[k - 1], points[k]) for k in range(4))
 
 
 def settle_corners(

@@ -6,6 +6,8 @@ Plane coordinates here are seen as the picture shows them (x right, y down); the
 
 from __future__ import annotations
 
+import math
+
 import cv2
 import numpy as np
 
@@ -14,11 +16,16 @@ from vision.records import FloatArray
 
 def project(homography: FloatArray, points: FloatArray) -> FloatArray:
     """Return `points` (..., 2) mapped by a homography (3, 3); NaN on its horizon."""
-    w = points @ homography[2, :2] + homography[2, 2]
+    mapped = points @ homography[:, :2].T
+    mapped += homography[:, 2]
+    w = mapped[..., 2:]
+    if w.size and float(w.min()) > 0.0:
+        ahead: FloatArray = mapped[..., :2] / w
+        return ahead
     with np.errstate(divide="ignore", invalid="ignore"):
-        mapped: FloatArray = (points @ homography[:2, :2].T + homography[:2, 2]) / w[..., None]
-    mapped[~(w > 0.0)] = np.nan
-    return mapped
+        anywhere: FloatArray = mapped[..., :2] / w
+    anywhere[~(w[..., 0] > 0.0)] = np.nan
+    return anywhere
 
 
 def projected_slope(homography: FloatArray, points: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -46,7 +53,7 @@ def inverse(map_: FloatArray) -> FloatArray:
 
 def rigid(turn_rad: float, x: float, y: float) -> FloatArray:
     """Return the motion that turns by `turn_rad` about the origin, then shifts, shape (3, 3)."""
-    c, s = np.cos(turn_rad), np.sin(turn_rad)
+    c, s = math.cos(turn_rad), math.sin(turn_rad)
     return np.array([[c, -s, x], [s, c, y], [0.0, 0.0, 1.0]])
 
 
@@ -55,12 +62,13 @@ def rigid_between(source: FloatArray, target: FloatArray) -> tuple[float, float,
 
     Source: Kabsch (1976), in two dimensions closed form.
     """
-    centre_s, centre_t = source.mean(axis=0), target.mean(axis=0)
-    a, b = source - centre_s, target - centre_t
-    turn_rad = float(np.arctan2(np.sum(a[:, 0] * b[:, 1] - a[:, 1] * b[:, 0]), np.sum(a * b)))
-    c, s = np.cos(turn_rad), np.sin(turn_rad)
-    shift = centre_t - np.array([c * centre_s[0] - s * centre_s[1], s * centre_s[0] + c * centre_s[1]])
-    return turn_rad, float(shift[0]), float(shift[1])
+    share = 1.0 / len(source)
+    centre_s, centre_t = source.sum(axis=0) * share, target.sum(axis=0) * share
+    (xx, xy), (yx, yy) = ((source - centre_s).T @ (target - centre_t)).tolist()
+    turn_rad = math.atan2(xy - yx, xx + yy)
+    c, s = math.cos(turn_rad), math.sin(turn_rad)
+    (x_s, y_s), (x_t, y_t) = centre_s.tolist(), centre_t.tolist()
+    return turn_rad, x_t - (c * x_s - s * y_s), y_t - (s * x_s + c * y_s)
 
 
 def fit_homography(source: FloatArray, target: FloatArray) -> FloatArray | None:

@@ -8,11 +8,13 @@ and wider searches follow: turned poses under soft templates, the detector in a 
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterable, Iterator
 from contextlib import contextmanager
 
 import cv2
 import numpy as np
+from scipy.linalg.lapack import dposv
 
 from vision.align import CornerFit, Held, fit_corners
 from vision.cards import CardWatcher
@@ -46,15 +48,35 @@ EXPOSURE_TRIALS = (0.0, 0.15, 0.3, 0.5, 0.75, 1.0)
 LEAST_SMEAR_PX = 1.0
 """A shorter smear is no more than a little blur."""
 
+LOOKS = (
+    (-0.57735, 0.57735),
+    (-0.70711, 0.0, 0.70711),
+    (-0.79465, -0.18759, 0.18759, 0.79465),
+    (-0.83250, -0.37454, 0.0, 0.37454, 0.83250),
+    (-0.86625, -0.42252, -0.26664, 0.26664, 0.42252, 0.86625),
+    (-0.88386, -0.52966, -0.32391, 0.0, 0.32391, 0.52966, 0.88386),
+    (-0.91159, -0.60102, -0.52876, -0.16791, 0.0, 0.16791, 0.52876, 0.60102, 0.91159),
+)
+"""Places in the exposure, from -1 to 1, whose plain mean stands for the mean over all of it.
+
+Source: Chebyshev's quadrature, Abramowitz and Stegun (1964), table 25.5.
+"""
+
+LOOK_PX = 2.0
+"""One more place for so much more smear."""
+
 EXPOSURE_VOTES = 5
 
-IN_MOTION_PX, THIN = 1.0, 2
-"""Of a pair that moves by more than this in a frame only every second pixel is compared: rests are what counts."""
+IN_MOTION_PX = 1.0
+"""A pair that moves by more than this in a frame is compared at fewer pixels: rests are what counts."""
+
+GAIN_KEPT = 0.6
+"""Share of the last frame's change of rate that is expected again in the next."""
 
 JOINT_PX = 0.5
 """A joint step smaller than this is left to the free corners."""
 
-MOVING_PX = 0.25
+MOVING_PX = 0.35
 """Corners of a moving pair need not be rendered again nearer than this."""
 
 HELD_PX = 0.12
@@ -99,6 +121,7 @@ class PairTracker:
         self._plane_px = body.plane_px
         self._corners_px = corners_px
         self._rate = np.zeros(3)  # turn (rad/s) and shift (mm/s) of the body, in its own frame
+        self._gain = np.zeros(3)  # what the rate gained over the last frame
         self._last_s: float | None = None
         self._last_search_s = -np.inf
         self._lost = False
@@ -144,7 +167,8 @@ class PairTracker:
         if self._last is None or self._lost:
             return None
         window, before, sight = self._last
-        if np.array_equal(image[window], before):
+        now = image[window]
+        if np.array_equal(now[0], before[0]) and np.array_equal(now, before):
             return Sight(
                 sight.corners_px,
                 sight.information,
@@ -166,7 +190,7 @@ class PairTracker:
             return None
         corners_px = np.stack([fit.corners_px + fit.move_px for fit in fits if fit is not None])
         self._corners_px = corners_px
-        self._rate = np.zeros(3)
+        self._stop()
         self._last_s = frame.time_s
         sight = _sight(corners_px, fits, 0.0)
         self._remember(frame.luma, sight)
@@ -209,28 +233,32 @@ class PairTracker:
         x0, y0 = np.maximum(np.floor(points.min(axis=0) - pad), 0).astype(int)
         x1, y1 = np.ceil(points.max(axis=0) + pad).astype(int)
         window = (slice(int(y0), int(y1)), slice(int(x0), int(x1)))
-        self._last = (window, image[window].copy(), sight)
+        self._last = (window, image[window], sight)
 
     def _lose(self, frame: Frame, step_s: float) -> None:
         self._last = None
         self._held = ()
-        self._rate = self._rate * 0.5 if not self._lost else np.zeros(3)
+        self._rate, self._gain = (self._rate * 0.5 if not self._lost else np.zeros(3)), np.zeros(3)
         if self._last_s is not None and step_s > 0.5:
             self._lost = True
+
+    def _stop(self) -> None:
+        self._rate, self._gain = np.zeros(3), np.zeros(3)
 
     # -- following -------------------------------------------------------------------------------------------
 
     def _follow(self, image: LumaImage, step_s: float) -> Sight | None:
-        return self._settle(image, self._rate * step_s, step_s)
+        return self._settle(image, (self._rate + self._gain) * step_s, step_s)
 
     def _settle(self, image: LumaImage, move: FloatArray, step_s: float) -> Sight | None:
         """Align from a believed motion since the last frame; None if the patterns find no hold."""
         before_px = self._plane_px
         plane_px = before_px @ rigid(*move)
-        self._in_motion = self._reach_px(before_px, move) > IN_MOTION_PX
+        reach_px = self._reach_px(before_px, move)
+        self._in_motion = reach_px > IN_MOTION_PX
         # Corners carry what the rigid model does not yet know; only their motion is predicted.
         corners_px = project(plane_px @ inverse(before_px), self._corners_px)
-        smear = self._smear(plane_px, move, step_s)
+        smear = self._smear(plane_px, move, self._exposure.share(step_s), reach_px)
         found = self._joint(image, plane_px, corners_px, smear)
         if found is None:
             return None
@@ -252,8 +280,8 @@ class PairTracker:
                 return None
             moved_px = plane_px @ rigid(*move)
             after_px = project(moved_px @ inverse(plane_px), corners_px)
-            largest_px = float(np.nanmax(np.abs(after_px - corners_px)))
-            if not np.isfinite(largest_px) or largest_px > self._patterns[0].side_px:
+            largest_px = float(np.abs(after_px - corners_px).max())
+            if not largest_px < self._patterns[0].side_px:  # written so that NaN also lands here
                 return None
             if largest_px < JOINT_PX:
                 return plane_px, corners_px, fits
@@ -270,7 +298,7 @@ class PairTracker:
                 pattern.soft if soft else pattern.sharp,
                 smear=smear,
                 soften_px=pattern.soften_px if soft else 0.0,
-                thin=THIN if smear or soft or self._in_motion else 1,
+                thin=pattern.thin if smear or soft or self._in_motion else 1,
             )
             if np.all(np.isfinite(corners))
             else None
@@ -279,18 +307,16 @@ class PairTracker:
 
     def _joint_step(self, plane_px: FloatArray, fits: list[CornerFit | None]) -> FloatArray | None:
         """Return the rigid step (turn_rad, x_mm, y_mm in the body frame) that both markers ask for."""
+        slopes = _pose_slope(plane_px, self.body.points_mm.reshape(8, 2)).reshape(2, 8, 3)
         information, gradient = np.zeros((3, 3)), np.zeros(3)
-        for points_mm, fit in zip(self.body.points_mm, fits, strict=True):
+        for slope, fit in zip(slopes, fits, strict=True):
             if fit is None or fit.contrast <= 0.0:
                 continue
-            slope = _pose_slope(plane_px, points_mm)
             trust = max(fit.explained, 0.02) / max(fit.noise_var, 1e-6)
-            information += trust * slope.T @ fit.information @ slope
-            gradient += trust * slope.T @ fit.gradient
-        try:
-            return np.asarray(np.linalg.solve(information, gradient), dtype=np.float64)
-        except np.linalg.LinAlgError:
-            return None
+            information += slope.T @ (trust * fit.information) @ slope
+            gradient += slope.T @ (trust * fit.gradient)
+        _, step, no_hold = dposv(information, gradient)
+        return None if no_hold else np.asarray(step, dtype=np.float64)
 
     def _free(
         self,
@@ -334,7 +360,7 @@ class PairTracker:
                 fit.corners_px + move,
                 self._patterns[m].sharp,
                 smear=smear,
-                thin=THIN if smear or self._in_motion else 1,
+                thin=self._patterns[m].thin if smear or self._in_motion else 1,
             )
             if again is None or again.explained < HOLD:
                 return None
@@ -359,7 +385,9 @@ class PairTracker:
         self._corners_px = np.where(known[:, None, None], settled, corners_px)
         before = project(inverse(self._plane_px), self._corners_px[known].reshape(-1, 2))
         move = np.array(rigid_between(self.body.points_mm[known].reshape(-1, 2), before))
-        self._rate = move / step_s if step_s > 2e-3 else self._rate
+        rate = move / step_s if step_s > 2e-3 else self._rate
+        self._gain = GAIN_KEPT * (rate - self._rate)
+        self._rate = rate
         self._plane_px = self._plane_px @ rigid(*move)
         if not known.all():
             return
@@ -382,29 +410,30 @@ class PairTracker:
 
     # -- smear over the exposure -----------------------------------------------------------------------------
 
-    def _smear(self, plane_px: FloatArray, move: FloatArray, step_s: float) -> tuple[FloatArray, ...]:
-        return self._smear_for(plane_px, move, self._exposure.share(step_s))
-
-    def _smear_for(self, plane_px: FloatArray, move: FloatArray, share: float) -> tuple[FloatArray, ...]:
-        reach_px = share * self._reach_px(plane_px, move)
-        if reach_px < LEAST_SMEAR_PX:
+    def _smear(
+        self, plane_px: FloatArray, move: FloatArray, share: float, reach_px: float
+    ) -> tuple[FloatArray, ...]:
+        """Return the motions over the exposure, for a pair whose corners move by up to `reach_px` in a frame."""
+        if share * reach_px < LEAST_SMEAR_PX:
             return ()
-        n_looks = min(2 * int(np.ceil(reach_px / 3.0)) + 1, 11)
+        places = LOOKS[min(int(share * reach_px / LOOK_PX), len(LOOKS) - 1)]
         back = inverse(plane_px)
-        shares = (np.arange(n_looks) - 0.5 * (n_looks - 1)) / n_looks * share
-        return tuple(plane_px @ rigid(*(part * move)) @ back for part in shares)
+        turn_rad, x_mm, y_mm = (0.5 * share * move).tolist()
+        return tuple(plane_px @ rigid(place * turn_rad, place * x_mm, place * y_mm) @ back for place in places)
 
     def _reach_px(self, plane_px: FloatArray, move: FloatArray) -> float:
         """Return how far the farthest corner moves in the picture."""
         ends = project(plane_px @ rigid(*move), self.body.points_mm) - project(plane_px, self.body.points_mm)
-        return float(np.nan_to_num(np.hypot(ends[..., 0], ends[..., 1]), nan=0.0).max())
+        reach_px = math.sqrt(float(np.max(ends[..., 0] ** 2 + ends[..., 1] ** 2)))
+        return reach_px if math.isfinite(reach_px) else 0.0
 
     def _cost(
         self, image: LumaImage, plane_px: FloatArray, corners_px: FloatArray, move: FloatArray, share: float
     ) -> float | None:
-        if self._reach_px(plane_px, move) < 2.5:
+        reach_px = self._reach_px(plane_px, move)
+        if reach_px < 2.5:
             return None
-        fits = self._compare(image, corners_px, self._smear_for(plane_px, move, share))
+        fits = self._compare(image, corners_px, self._smear(plane_px, move, share, reach_px))
         known = [fit.explained for fit in fits if fit is not None]
         return 1.0 - float(np.mean(known)) if known else None
 
@@ -496,6 +525,7 @@ class PairTracker:
     def _restart(self, image: LumaImage, found: dict[int, FloatArray], step_s: float) -> Sight | None:
         """Take up the pair again where the detector saw one or both of its markers."""
         held = (self._plane_px, self._corners_px, self._rate)
+        self._gain = np.zeros(3)
         points_mm = np.concatenate([self.body.points_mm[m] for m in found])
         seen_px = np.concatenate(list(found.values()))
         if len(found) == 2:
@@ -509,12 +539,12 @@ class PairTracker:
         self._corners_px = project(plane_px, self.body.points_mm)
         for m, corners in found.items():
             self._corners_px[m] = corners
-        self._rate = np.zeros(3)
+        self._stop()
         sight = self._settle(image, np.zeros(3), step_s) if np.all(np.isfinite(self._corners_px)) else None
         if sight is None:
             self._plane_px, self._corners_px, self._rate = held
         else:
-            self._rate = np.zeros(3)
+            self._stop()
         return sight
 
 
@@ -545,11 +575,10 @@ class _ExposureVote:
 
 
 def _pose_slope(plane_px: FloatArray, points_mm: FloatArray) -> FloatArray:
-    """Return how the corners (8,) move with the body's (turn_rad, x_mm, y_mm), shape (8, 3)."""
+    """Return how points (K, 2) move in the picture with the body's (turn_rad, x_mm, y_mm), shape (2 K, 3)."""
     _, slope = projected_slope(plane_px, points_mm)
-    turned = np.stack([-points_mm[:, 1], points_mm[:, 0]], axis=1)
     columns = np.empty((len(points_mm), 2, 3))
-    columns[:, :, 0] = np.einsum("kij,kj->ki", slope, turned)
+    columns[:, :, 0] = slope[:, :, 1] * points_mm[:, :1] - slope[:, :, 0] * points_mm[:, 1:]
     columns[:, :, 1:] = slope
     return columns.reshape(-1, 3)
 
@@ -558,7 +587,8 @@ def _largest_move(smear: tuple[FloatArray, ...], corners_px: FloatArray) -> floa
     if not smear:
         return 0.0
     ends = project(smear[-1], corners_px) - project(smear[0], corners_px)
-    return float(np.nan_to_num(np.hypot(ends[..., 0], ends[..., 1]), nan=0.0).max())
+    reach_px = math.sqrt(float(np.max(ends[..., 0] ** 2 + ends[..., 1] ** 2)))
+    return reach_px if math.isfinite(reach_px) else 0.0
 
 
 def _sight(settled: FloatArray, kept: list[CornerFit | None], smear_px: float) -> Sight:
