@@ -27,6 +27,7 @@ from vision.plane import (
     SHAPE,
     Units,
     body_points,
+    corners_at,
     project_pair,
     shape_from_homography,
     to_plane,
@@ -266,7 +267,7 @@ def _adjust(
     system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
     system = _with_prior(system, p, prior)
     cov: FloatArray = np.asarray(np.linalg.inv(_schur(system)[0]), dtype=np.float64)
-    left = project_pair(p, poses, units).corners_px - corners_px
+    left = corners_at(p, poses, units) - corners_px
     kept = np.repeat(weight > 0.2, 8, axis=1).reshape(len(left), 16)
     return p, poses, cov, misfit, float(np.sqrt(2.0 * np.mean(left[kept] ** 2)))
 
@@ -282,7 +283,7 @@ def _cost(
     fixed: bool = False,
 ) -> tuple[float, FloatArray, float]:
     """Return the robust cost, the weights (N, 2) and the misfit: the median chi-square over its expectation."""
-    left = corners_px - project_pair(p, poses, units).corners_px
+    left = corners_px - corners_at(p, poses, units)
     chi2 = np.sum(_whiten(whiten, left[..., None]).reshape(len(left), 2, 8) ** 2, axis=-1)
     if not np.all(np.isfinite(chi2)):
         return np.inf, np.ones_like(chi2), misfit
@@ -312,7 +313,7 @@ def _normal(
     j_pose = _whiten(whiten, seen.by_pose) * scale
     left = _whiten(whiten, (corners_px - seen.corners_px)[..., None])[..., 0] * scale
     return _Normal(
-        np.einsum("nki,nkj->ij", j_global, j_global),
+        np.tensordot(j_global, j_global, axes=([0, 1], [0, 1])),
         np.swapaxes(j_global, 1, 2) @ j_pose,
         np.swapaxes(j_pose, 1, 2) @ j_pose,
         np.einsum("nki,nk->i", j_global, left),
@@ -334,7 +335,7 @@ def _schur(system: _Normal, damping: float = 0.0) -> tuple[FloatArray, FloatArra
     c_inverse: FloatArray = np.asarray(np.linalg.inv(c), dtype=np.float64)
     lift = system.b @ c_inverse
     a = system.a + damping * np.diag(np.diag(system.a))
-    reduced: FloatArray = a - np.einsum("nij,nkj->ik", lift, system.b)
+    reduced: FloatArray = a - np.tensordot(lift, system.b, axes=([0, 2], [0, 2]))
     right: FloatArray = system.g - np.einsum("nij,nj->i", lift, system.h)
     return reduced, right, c_inverse
 

@@ -208,7 +208,17 @@ class Projection:
     by_pose: FloatArray
 
 
-def project_pair(p: FloatArray, poses: FloatArray, units: Units) -> Projection:
+def corners_at(p: FloatArray, poses: FloatArray, units: Units) -> FloatArray:
+    """Return where the corners of the pair appear at given poses, shape (N, 16): `project_pair` without slopes."""
+    points = _placed(p, poses, units, body_points(p, units))[0]
+    h = p[SHAPE]
+    w = 1.0 / (h[3] * points[..., 0] + h[4] * points[..., 1] + 1.0)
+    m = np.stack([(h[0] * points[..., 0] + h[1] * points[..., 1]) * w, h[2] * points[..., 1] * w], axis=-1)
+    corners_px: FloatArray = distort(m, p[LENS]) * units.half_px + units.centre_px
+    return corners_px.reshape(len(poses), 16)
+
+
+def project_pair(p: FloatArray, poses: FloatArray, units: Units, *, by_global: bool = True) -> Projection:
     """Return where the corners of the pair appear at given poses.
 
     Parameters
@@ -217,37 +227,46 @@ def project_pair(p: FloatArray, poses: FloatArray, units: Units) -> Projection:
     poses : ndarray, shape (N, 3)
         Turn (rad, y down), x and y in plane units.
     units : Units
+    by_global : bool
+        Leave it out where only poses are sought: then its last axis is empty.
     """
     n_frames = len(poses)
-    cos, sin = np.cos(poses[:, 0]), np.sin(poses[:, 0])
-    turn = np.stack([np.stack([cos, -sin], -1), np.stack([sin, cos], -1)], axis=-2)  # (N, 2, 2)
-    quarter = np.array([[0.0, -1.0], [1.0, 0.0]])
     local, local_slopes = _body_with_slopes(p, units)  # (2, 4, 2), name -> (2, 4, 2)
-    around = np.einsum("nij,mkj->nmki", turn, local)
-    points = around + poses[:, None, None, 1:]
-    growth = p[AFT_SIZE] - 1.0
-    away = poses[:, 1:] - units.home
-    points[:, 1] += growth * away[:, None] - p[LIFT]
-
-    to_points = np.zeros((n_frames, 2, 4, 2, N_GLOBAL - 7))  # by base, angles, size, lift, print
-    for place, slope in local_slopes.items():
-        to_points[..., place - 7] = np.einsum("nij,mkj->nmki", turn, slope)
-    to_points[:, 1, :, :, AFT_SIZE - 7] += away[:, None]
-    to_points[:, 1, :, 0, LIFT.start - 7] = -1.0
-    to_points[:, 1, :, 1, LIFT.start - 6] = -1.0
+    points, around, turn = _placed(p, poses, units, local)
     by_pose_points = np.zeros((n_frames, 2, 4, 2, 3))
-    by_pose_points[..., 0] = around @ quarter.T
+    by_pose_points[..., 0, 0] = -around[..., 1]
+    by_pose_points[..., 1, 0] = around[..., 0]
     by_pose_points[:, 0, :, 0, 1] = by_pose_points[:, 0, :, 1, 2] = 1.0
-    by_pose_points[:, 1, :, 0, 1] = by_pose_points[:, 1, :, 1, 2] = 1.0 + growth
-
+    by_pose_points[:, 1, :, 0, 1] = by_pose_points[:, 1, :, 1, 2] = p[AFT_SIZE]
     bent, by_point, by_camera = _through_camera(p, points)
-    by_global = np.concatenate([by_camera, by_point @ to_points], axis=-1) * units.half_px
+    slopes = np.empty((n_frames, 2, 4, 2, 0))
+    if by_global:
+        to_points = np.zeros((n_frames, 2, 4, 2, N_GLOBAL - 7))  # by base, angles, size, lift, print
+        places = np.array(list(local_slopes)) - 7
+        stacked = np.stack(list(local_slopes.values()), axis=-1)  # (2, 4, 2, K)
+        to_points[..., places] = turn[:, None, None] @ stacked
+        to_points[:, 1, :, :, AFT_SIZE - 7] += (poses[:, 1:] - units.home)[:, None]
+        to_points[:, 1, :, 0, LIFT.start - 7] = -1.0
+        to_points[:, 1, :, 1, LIFT.start - 6] = -1.0
+        slopes = np.concatenate([by_camera, by_point @ to_points], axis=-1) * units.half_px
     by_pose = (by_point @ by_pose_points) * units.half_px
     return Projection(
         (bent * units.half_px + units.centre_px).reshape(n_frames, 16),
-        by_global.reshape(n_frames, 16, N_GLOBAL),
+        slopes.reshape(n_frames, 16, slopes.shape[-1]),
         by_pose.reshape(n_frames, 16, 3),
     )
+
+
+def _placed(
+    p: FloatArray, poses: FloatArray, units: Units, local: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the body's points on the plane (N, 2, 4, 2), the same before shifting, and the turns (N, 2, 2)."""
+    cos, sin = np.cos(poses[:, 0]), np.sin(poses[:, 0])
+    turn = np.stack([np.stack([cos, -sin], -1), np.stack([sin, cos], -1)], axis=-2)
+    around = (local.reshape(1, 8, 2) @ np.swapaxes(turn, 1, 2)).reshape(-1, 2, 4, 2)
+    points = around + poses[:, None, None, 1:]
+    points[:, 1] += (p[AFT_SIZE] - 1.0) * (poses[:, 1:] - units.home)[:, None] - p[LIFT]
+    return points, around, turn
 
 
 def _body_with_slopes(p: FloatArray, units: Units) -> tuple[FloatArray, dict[int, FloatArray]]:
@@ -288,7 +307,7 @@ def _through_camera(p: FloatArray, points: FloatArray) -> tuple[FloatArray, Floa
     k1, k2 = p[LENS]
     r2 = np.sum(m**2, axis=-1)
     swell = 1.0 + r2 * (k1 + r2 * k2)
-    bend = np.einsum("...i,...j->...ij", m, m) * (2.0 * (k1 + 2.0 * r2 * k2))[..., None, None]
+    bend = m[..., :, None] * m[..., None, :] * (2.0 * (k1 + 2.0 * r2 * k2))[..., None, None]
     bend[..., 0, 0] += swell
     bend[..., 1, 1] += swell
     by_lens = np.stack([m * r2[..., None], m * (r2**2)[..., None]], axis=-1)

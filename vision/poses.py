@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from vision.bundle import Calibration, start_poses, whitening
 from vision.observations import CornerTrack
-from vision.plane import N_GLOBAL, Projection, Units, project_pair, to_floor, to_plane
+from vision.plane import N_GLOBAL, Projection, Units, corners_at, project_pair, to_floor, to_plane
 from vision.records import FloatArray
 
 CHUNK = 4096
@@ -66,7 +66,7 @@ def _solve_chunk(track: CornerTrack, calibration: Calibration, rows: slice) -> d
     whiten = whitening(track.information[rows][seen])
     poses = start_poses(observed, p, units)
     for _ in range(4):
-        _, _, left, j_pose, information = _linear(p, poses, observed, mask, whiten, units)
+        _, _, left, j_pose, information = _linear(p, poses, observed, mask, whiten, units, by_global=False)
         gradient = np.einsum("nki,nk->ni", j_pose, left)
         poses = poses + np.linalg.solve(information, gradient[..., None])[..., 0]
     projection, left_px, left, j_pose, information = _linear(p, poses, observed, mask, whiten, units)
@@ -105,9 +105,11 @@ def _linear(
     mask: NDArray[np.bool_],
     whiten: FloatArray,
     units: Units,
+    *,
+    by_global: bool = True,
 ) -> tuple[Projection, FloatArray, FloatArray, FloatArray, FloatArray]:
     """Return the projection, the residuals (px and whitened), the whitened pose slopes and their information."""
-    projection = project_pair(p, poses, units)
+    projection = project_pair(p, poses, units, by_global=by_global)
     left_px = np.where(mask, observed - projection.corners_px, 0.0)
     left = _apply(whiten, left_px[..., None])[..., 0]
     j_pose = _apply(whiten, projection.by_pose)
@@ -118,7 +120,7 @@ def _linear(
 def _scale(observed: FloatArray, poses: FloatArray, calibration: Calibration) -> FloatArray:
     """Return the least-squares size of the seen corners about their middle, relative to the modelled ones."""
     p, units = calibration.p, calibration.units
-    model = project_pair(p, poses, units).corners_px
+    model = corners_at(p, poses, units)
     points = to_plane(observed.reshape(-1, 8, 2), p, units)
     ideal = np.where(np.isfinite(points), to_plane(model.reshape(-1, 8, 2), p, units), np.nan)
     around = points - np.nanmean(points, axis=1, keepdims=True)
