@@ -6,6 +6,7 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from vision.frames import Clip, Frame
+from vision.ground import GroundWatcher
 from vision.poses import solve_poses
 from vision.records import ClipResult, MarkerSetup
 from vision.result import assemble
@@ -17,7 +18,14 @@ Progress = Callable[[float, float | None], None]
 """Called now and then with the time reached in the clip and the clip's length, both in s."""
 
 
-def measure_clip(path: str | Path, setup: MarkerSetup, *, progress: Progress | None = None) -> ClipResult:
+def measure_clip(
+    path: str | Path,
+    setup: MarkerSetup,
+    *,
+    progress: Progress | None = None,
+    threads: int | None = None,
+    sparse: bool = False,
+) -> ClipResult:
     """Measure the turns in one clip.
 
     Parameters
@@ -25,20 +33,26 @@ def measure_clip(path: str | Path, setup: MarkerSetup, *, progress: Progress | N
     path : path-like
     setup : MarkerSetup
     progress : callable, optional
+    threads : int or None
+        Threads that decode the clip; None for as many as there are cores.
+    sparse : bool
+        Whether still stretches need not be decoded in full.
 
     Raises
     ------
     vision.errors.VisionError
         If the clip cannot be read, or the markers or the plane not be found.
     """
-    with Clip(path) as clip:
-        corners = track_pair(_reported(clip, progress), setup)
+    ground = GroundWatcher()
+    with Clip(path, threads=threads) as clip:
+        corners = track_pair(ground.passing(_reported(clip, progress)), setup)
         info, problems = clip.info, tuple(clip.problems)
-    path_seen = camera_path(corners)
+    path_seen = camera_path(corners, ground.path())
     corners, calibration = calibrate_steadied(corners, path_seen)
     poses = solve_poses(corners, calibration)
     seen = usable_frames(corners, poses)
-    split = split_turns(seen, calibration.cov, camera_still=path_seen.still)
+    knocks = path_seen.spans if path_seen.loose else ()
+    split = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
     return assemble(info, setup, corners, calibration, seen, split, path_seen, problems)
 
 

@@ -39,7 +39,7 @@ def assemble(
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
     frame = _floor_frame(cards)
-    events = (*split.events, *_moved(path))
+    events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
     turns = tuple(_placed(_touched(turn, path), frame) for turn in split.turns)
     return ClipResult(
         clip=info,
@@ -50,7 +50,7 @@ def assemble(
             **_plane_record(corners, calibration, cards, setup),
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
-        budget=budget_of(seen, split, calibration, camera_still=path.still),
+        budget=budget_of(seen, split, calibration, camera_still=not path.held),
         warnings=(*problems, *_warnings(calibration, cards, path)),
     )
 
@@ -82,10 +82,24 @@ def _placed(turn: Turn, frame: FloorFrame) -> Turn:
 
 def _touched(turn: Turn, path: CameraPath) -> Turn:
     """Flag a turn during which a camera that otherwise stands was knocked."""
-    if path.still or _held_by_hand(path):
+    if path.still or (path.held and _held_by_hand(path)):
         return turn
+    if path.loose and not _within(turn, path.best):
+        return replace(turn, flags=(*turn.flags, "camera_moved"))
     hit = any(start_s <= turn.end_s and end_s >= turn.start_s for start_s, end_s in path.spans)
     return replace(turn, flags=(*turn.flags, "camera_moved")) if hit else turn
+
+
+def _within(turn: Turn, still: tuple[float, float] | None) -> bool:
+    return still is not None and turn.start_s >= still[0] and turn.end_s <= still[1]
+
+
+def _view_lost(event: Event, path: CameraPath) -> bool:
+    """Return whether a stretch without sight is only one without a steady view, which is told as such."""
+    spans = path.spans if path.held else ()
+    return event.kind == "hidden" and any(
+        event.start_s > start_s - 0.1 and event.end_s < end_s + 0.1 for start_s, end_s in spans
+    )
 
 
 def _held_by_hand(path: CameraPath) -> bool:
@@ -100,6 +114,8 @@ def _moved(path: CameraPath) -> list[Event]:
     if path.still:
         return []
     detail = f"the floor cards shifted by up to {path.shift_px:.1f} px; {path.n_cards} cards hold the view steady"
+    if path.loose:
+        detail = f"the floor shifted by up to {path.shift_px:.1f} px; no card holds the view steady"
     return [Event(start_s=start_s, end_s=end_s, kind="camera moved", detail=detail) for start_s, end_s in path.spans]
 
 
@@ -192,13 +208,38 @@ def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath
         f"card {number} did not stay with the others and was left out; was it moved, or is it curled?"
         for number in path.strays
     )
-    if not path.still and path.n_cards < 2:
+    said.extend(_loose(path))
+    if path.held and path.n_cards < 2:
         said.append("the camera moved and only one floor card holds the view; lay out three or more")
-    if not path.still and _held_by_hand(path):
+    if path.held and _held_by_hand(path):
         said.append(f"the camera was not still; {path.n_cards} floor cards held the view steady")
-    elif not path.still:
+    elif path.held:
         said.extend(
             f"the camera moved between {start_s:.1f} s and {end_s:.1f} s; before and after have maps of their own"
             for start_s, end_s in path.spans
         )
     return said
+
+
+def _loose(path: CameraPath) -> list[str]:
+    """Return what is to be said about a camera without floor cards."""
+    if not path.checked:
+        return [
+            "neither floor cards nor marks on the floor show whether the camera stood still; lay out three floor cards"
+        ]
+    if not path.loose:
+        return []
+    cure = "fix the phone, or lay out three floor cards or more"
+    if path.best is None:
+        return [f"the camera never stood still and no floor card holds the view, so that no turn counts; {cure}"]
+    start_s, end_s = path.best
+    return [
+        f"the camera moved ({_listed_spans(path)}) and no floor card holds the view: only turns between "
+        f"{start_s:.1f} s and {end_s:.1f} s count; {cure}"
+    ]
+
+
+def _listed_spans(path: CameraPath) -> str:
+    shown = [f"{start_s:.1f} to {end_s:.1f} s" for start_s, end_s in path.spans[:3]]
+    more = len(path.spans) - len(shown)
+    return ", ".join(shown) + (f" and {more} times more" if more else "")

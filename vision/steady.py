@@ -11,8 +11,11 @@ from dataclasses import dataclass, replace
 
 import cv2
 import numpy as np
+from numpy.typing import NDArray
 
 from vision.bundle import Calibration, calibrate
+from vision.errors import PlaneError
+from vision.ground import GroundPath
 from vision.observations import CardLook, CornerTrack
 from vision.plane import LENS, Units, distort, undistort, units_for
 from vision.records import FloatArray
@@ -27,10 +30,13 @@ AVERAGE_S = 0.4
 OUTLIER_PX = 1.0
 """A card that misses the common motion by more than this, most of the time, was moved or is not flat."""
 
+ENOUGH_RAD = 1.4
+"""A still stretch in which the robot turned through this much calibrates the plane by itself."""
+
 
 @dataclass(frozen=True, eq=False, slots=True, kw_only=True)
 class CameraPath:
-    """How the camera moved, as far as the cards tell.
+    """How the camera moved, as far as the cards tell, or the floor itself where there are none.
 
     Parameters
     ----------
@@ -43,6 +49,10 @@ class CameraPath:
         Cards left out because they did not move with the others.
     n_cards : int
         Cards used.
+    checked : bool
+        Whether cards or floor showed enough to tell.
+    best : (start_s, end_s) or None
+        The longest stretch in which the camera stood still, where no card holds the view steady.
     """
 
     still: bool
@@ -50,6 +60,18 @@ class CameraPath:
     spans: tuple[tuple[float, float], ...]
     strays: tuple[int, ...]
     n_cards: int
+    checked: bool = True
+    best: tuple[float, float] | None = None
+
+    @property
+    def held(self) -> bool:
+        """Whether cards hold the view of a camera that moved."""
+        return not self.still and self.n_cards > 0
+
+    @property
+    def loose(self) -> bool:
+        """Whether the camera moved and nothing holds the view."""
+        return not self.still and self.n_cards == 0
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -60,11 +82,11 @@ class _Looks:
     u_px: float
 
 
-def camera_path(corners: CornerTrack) -> CameraPath:
-    """Return how the camera moved."""
+def camera_path(corners: CornerTrack, ground: GroundPath | None = None) -> CameraPath:
+    """Return how the camera moved: by the cards, or by the floor itself where there are none."""
     looks = _table(corners.looks)
     if looks is None:
-        return CameraPath(still=True, shift_px=0.0, spans=(), strays=(), n_cards=0)
+        return _by_ground(ground, strays=())
     strays = _strays(looks)
     keep = [k for k, number in enumerate(looks.ids) if number not in strays]
     shift = _shift_px(looks.corners_px[:, keep], looks.corners_px[_reference(looks), keep])
@@ -76,6 +98,23 @@ def camera_path(corners: CornerTrack) -> CameraPath:
         spans=_spans(looks, keep, limit),
         strays=strays,
         n_cards=len(keep),
+    )
+
+
+def _by_ground(ground: GroundPath | None, strays: tuple[int, ...]) -> CameraPath:
+    if ground is None or not ground.known:
+        return CameraPath(still=True, shift_px=0.0, spans=(), strays=strays, n_cards=0, checked=False)
+    end_s = float(ground.time_s[-1])
+    stills = ground.stills()
+    borders = [0.0, *(moment for still in stills for moment in still), end_s]
+    gaps = [(a, b) for a, b in zip(borders[::2], borders[1::2], strict=True) if b - a > 1e-6]
+    return CameraPath(
+        still=not gaps,
+        shift_px=float(np.nanmax(np.linalg.norm(ground.shift_px, axis=1))),
+        spans=tuple(gaps),
+        strays=strays,
+        n_cards=0,
+        best=max(stills, key=lambda still: still[1] - still[0], default=None) if gaps else None,
     )
 
 
@@ -204,12 +243,37 @@ def calibrate_steadied(corners: CornerTrack, path: CameraPath) -> tuple[CornerTr
     """Return the steadied track and its calibration; lens and maps depend on each other and are found in turns."""
     if path.still:
         return corners, calibrate(corners)
+    if path.loose:
+        return corners, _calibrate_best(corners, path)
     lens = np.zeros(2)
     for _ in range(3):
         steadied = steady(corners, path, lens)
         calibration = calibrate(steadied)
         lens = calibration.p[LENS]
     return steadied, calibration
+
+
+def _calibrate_best(corners: CornerTrack, path: CameraPath) -> Calibration:
+    """Return the calibration of the longest still stretch, or of the whole clip if it shows too little there."""
+    if path.best is not None:
+        outside = (corners.time_s < path.best[0]) | (corners.time_s > path.best[1])
+        try:
+            found = calibrate(_blanked(corners, outside))
+            if found.turned_rad > ENOUGH_RAD:
+                return found
+        except PlaneError:
+            pass
+    return calibrate(corners)
+
+
+def _blanked(corners: CornerTrack, frames: NDArray[np.bool_]) -> CornerTrack:
+    """Return the track without what was seen in some frames."""
+    hidden = frames[:, None, None, None]
+    return replace(
+        corners,
+        corners_px=np.where(hidden, np.nan, corners.corners_px),
+        information=np.where(hidden, np.float32(0.0), corners.information),
+    )
 
 
 def _averaged(straight: FloatArray, time_s: FloatArray, step: FloatArray, limit: float) -> FloatArray:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -51,8 +51,17 @@ FRAMES_TO_BELIEVE = 3
 FULL_VIEW = 0.85
 """A marker explained by less than this share of the usual is partly covered or smeared; its size then says little."""
 
+KNOCK_S = 0.2
+"""By so much a motion may reach beyond the stretch in which the view was found to move: looks are that far apart."""
+
 LIFT_SHARE = 0.005
 """A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
+
+HIDDEN_LIFT_SHARE = 0.03
+"""The same where a marker is partly covered or out of sight."""
+
+STRAYED_MM = 8.0
+"""A turn that strays by more from a fixed centre, and is out of sight for a while, was helped by a hand."""
 
 
 @dataclass(frozen=True, eq=False, slots=True, kw_only=True)
@@ -156,7 +165,9 @@ class Split:
     lag: Lag
 
 
-def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Split:
+def split_turns(
+    seen: Seen, cov: FloatArray, *, camera_still: bool = True, knocks: Sequence[tuple[float, float]] = ()
+) -> Split:
     """Split seen frames into turns and events.
 
     Parameters
@@ -166,6 +177,8 @@ def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Sp
         Covariance of the calibration.
     camera_still : bool
         Whether the camera stood still all the time.
+    knocks : sequence of (start_s, end_s)
+        Stretches in which the view moved and was not held steady: what seems to move then is not the robot.
     """
     motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm, reach_mm=seen.reach_mm)
     moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
@@ -183,10 +196,12 @@ def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Sp
     for number, move in enumerate(moves):
         before, after = rests[number], rests[number + 1]
         kind, detail = _judge(seen, motion, move, before, after)
+        if kind == "turn" and _knocked(seen, move, knocks):
+            continue
         if kind == "turn":
             turns.append(_turn(seen, motion, move, before, after, uncertainty))
             states[move.first : move.last + 1] = "turn"
-        else:
+        elif not _knocked(seen, move, knocks):
             events.append(_event(seen, move, kind, detail))
     events.extend(_gap_events(seen))
     turns = _flag_handled(turns, events)
@@ -199,6 +214,12 @@ def split_turns(seen: Seen, cov: FloatArray, *, camera_still: bool = True) -> Sp
         motion=motion,
         lag=lag,
     )
+
+
+def _knocked(seen: Seen, move: Stretch, knocks: Sequence[tuple[float, float]]) -> bool:
+    """Return whether a motion is no more than the picture's own."""
+    first_s, last_s = float(seen.time_s[move.first]), float(seen.time_s[move.last])
+    return any(first_s > start_s - KNOCK_S and last_s < end_s + KNOCK_S for start_s, end_s in knocks)
 
 
 def lag_of(seen: Seen, rests: list[RestHeading]) -> Lag:
@@ -278,9 +299,8 @@ def _judge(
     part = slice(move.first, move.last + 1)
     path_mm = float(np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum())
     _, _, wander_mm = _centre(seen, move)
-    swell = np.sort(np.abs(seen.scale[part][seen.clear[part]] / np.nanmedian(seen.scale) - 1.0))
-    lifted = float(swell[-min(FRAMES_TO_BELIEVE, len(swell))]) if len(swell) else 0.0
-    if lifted > max(LIFT_SHARE, 8.0 * _scale_noise(seen)):
+    lifted = _lifted(seen, part)
+    if lifted > 0.0:
         return (
             "handled",
             f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg",
@@ -291,11 +311,30 @@ def _judge(
             f"out of sight for {hidden_s:.2f} s while it moved; heading changed by {change:.2f} deg, or by whole "
             "revolutions more or less"
         )
+    if wander_mm > STRAYED_MM and hidden_s > GAP_FRAMES * seen.frame_s:
+        return "handled", (
+            f"strayed by {wander_mm:.0f} mm from a turn on the spot, partly out of sight; heading changed by "
+            f"{change:.2f} deg"
+        )
     if wander_mm > DRIVEN_MM and path_mm > np.deg2rad(abs(change)) * 4.0 * DRIVEN_MM:
         return "driven", f"{path_mm:.0f} mm of path, heading changed by {change:.2f} deg"
     if abs(change) < max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg):
         return "nudge", f"heading changed by {change:.3f} deg and came to rest"
     return "turn", ""
+
+
+def _lifted(seen: Seen, part: slice) -> float:
+    """Return by how much the apparent size changed over a motion; 0 if by no more than the markers' own noise."""
+    change = np.abs(seen.scale[part] / np.nanmedian(seen.scale) - 1.0)
+    for values, limit in (
+        (change[seen.clear[part]], max(LIFT_SHARE, 8.0 * _scale_noise(seen))),
+        (change, HIDDEN_LIFT_SHARE),
+    ):
+        if len(values) >= FRAMES_TO_BELIEVE:
+            lifted = float(np.sort(values)[-FRAMES_TO_BELIEVE])
+            if lifted > limit:
+                return lifted
+    return 0.0
 
 
 def _top_rate(motion: Motion) -> float:

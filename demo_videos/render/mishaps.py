@@ -86,8 +86,8 @@ def stored_ways() -> list[Row]:
     """Return containers, codecs, depths, ranges, orientations."""
     ten, full = Sensor(noise_grey=2.0, bits=10), Sensor(noise_grey=2.0, full_range=True)
     return [
-        plain("plain", "H.264 in mp4, camera on a stand"),
-        plain("no_cards", "no floor cards", scene=plain_scene(cards=())),
+        plain("plain", "H.264 in mp4, camera on a stand", quiet=True),
+        plain("no_cards", "no floor cards", scene=plain_scene(cards=()), quiet=True),
         plain("hevc_mov", "HEVC in mov with sound", suffix=".mov", storage={"codec": "hevc", "crf": 24, "audio": True}),
         plain(
             "hevc_10bit",
@@ -200,13 +200,25 @@ def unsteady_cameras() -> list[Row]:
             "the stand is knocked while the cart turns",
             scene=plain_scene(camera=plain_camera(moves=(Nudge(time_s=slow.turns[2].start_s + 0.5),))),
             expected_events=("camera moved",),
+            expected_words=("flag camera_moved (1)",),
+            not_counted=1,
         ),
         plain("hand_held", "held by hand", scene=plain_scene(camera=plain_camera(moves=(HandHeld(seed=4),)))),
         plain(
             "hand_held_no_cards",
-            "held by hand, no floor cards: cannot be measured well, and says so",
+            "held by hand, no floor cards: no turn counts",
             scene=plain_scene(camera=plain_camera(moves=(HandHeld(seed=4),)), cards=()),
             readable=False,
+            expected_events=("camera moved",),
+            expected_words=("the camera never stood still and no floor card holds the view",),
+        ),
+        plain(
+            "nudged_no_cards",
+            "the stand is knocked once, no floor cards: turns after it do not count",
+            scene=plain_scene(camera=plain_camera(moves=(Nudge(time_s=rest_s),)), cards=()),
+            expected_events=("camera moved",),
+            expected_words=("no floor card holds the view", "flag camera_moved"),
+            not_counted=4,
         ),
         plain("sway", "a stand that swings", scene=plain_scene(camera=plain_camera(moves=(Sway(),)))),
         plain("breathing", "autofocus breathing", scene=plain_scene(camera=plain_camera(moves=(Breathing(),)))),
@@ -322,8 +334,10 @@ def commands_and_turns() -> list[Row]:
     rocking = plain_motion(drive=plain_drive(rock_deg=1.2, overshoot_wheel_deg=4.0))
     return [
         plain("missing_turn", "one commanded turn does not happen", motion=missing, expected_events=("missing turn",)),
-        plain("extra_turn", "somebody turns the cart by hand", motion=extra, expected_events=("uncommanded turn",)),
-        plain("two_pushes", "one turn is made in two parts", motion=halves, expected_events=("two pushes",)),
+        plain("extra_turn", "somebody turns the cart by hand", motion=extra, expected_events=("uncommanded turn",),
+              not_counted=1),
+        plain("two_pushes", "one turn is made in two parts", motion=halves, expected_events=("two pushes",),
+              not_counted=1),
         plain("creep", "the heading creeps on after each stop", motion=creeping),
         plain("rocking", "the body rocks and overshoots at each stop", motion=rocking),
         plain("short_rests", "rests of a third of a second", motion=plain_motion(rest_s=0.33)),
@@ -339,9 +353,10 @@ def clip_ends() -> list[Row]:
     motion = plain_motion()
     late = Timing(begin_s=motion.turns[0].start_s + 0.5)
     early = Timing(duration_s=motion.turns[-1].start_s + 0.6)
+    said = {"readable": False, "expected_words": ("flag clipped (1)",)}
     return [
-        plain("starts_in_turn", "the clip begins in a turn", scene=plain_scene(timing=late), readable=False),
-        plain("ends_in_turn", "the clip ends in a turn", scene=plain_scene(timing=early), readable=False),
+        plain("starts_in_turn", "the clip begins in a turn", scene=plain_scene(timing=late), **said),
+        plain("ends_in_turn", "the clip ends in a turn", scene=plain_scene(timing=early), **said),
     ]
 
 

@@ -32,6 +32,14 @@ class Row:
     """Whether the markers can be read at both rests of every turn."""
     command_count: int | None = None
     """How many commands a trial file for this clip lists when not all that the motion knows."""
+    refusal: str | None = None
+    """Words of the one line with which the clip must be refused; None if it must be measured."""
+    expected_words: tuple[str, ...] = ()
+    """Words that must be among what is said: flags as ``flag name``, events as ``event kind``, warnings."""
+    not_counted: int = 0
+    """How many turns cannot count though the markers are readable at both rests."""
+    quiet: bool = False
+    """Whether nothing at all may be said about the clip."""
 
 
 SIZE = {"width_px": 1280, "height_px": 720, "focal_px": 1050.0}
