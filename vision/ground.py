@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from vision.frames import Frame, LumaImage
 from vision.records import FloatArray
 
-LOOK_EVERY_S = 0.25
+LOOK_EVERY_S = 0.4
 
 GRID = (8, 5)
 """Patches across and down, at most one for each cell."""
@@ -48,6 +48,10 @@ AWAY_PX, CALM_PX = 2.0, 0.5
 
 SURE = 4.0
 """So many standard uncertainties make a shift of the view a shift of the camera."""
+
+GLANCE_PX, GLANCE_SHARE, GLANCE_THIN = 0.3, 0.6, 2
+"""All patches are first compared where they were, every second pixel of each; that is enough so large a share of
+those known again has moved by no more than this."""
 
 SHIFT_WEIGHT = np.array([0.5, 0.5, 1.0, 1.0])
 
@@ -127,6 +131,7 @@ class GroundWatcher:
 
     def __init__(self) -> None:
         self._patches: tuple[_Patch, ...] = ()
+        self._glance: _Glance | None = None
         self._reach_px = 1.0
         self._middle_px = np.zeros(2)
         self._next_s = 0.0
@@ -173,13 +178,14 @@ class GroundWatcher:
     def _refer(self, image: LumaImage, start_px: FloatArray) -> None:
         self._start_px = start_px
         self._patches = _patches_of(image)
+        self._glance = _Glance(image, self._patches) if self._patches else None
         size = np.array(image.shape[::-1], dtype=float)
         self._middle_px, self._reach_px = 0.5 * (size - 1.0), 0.25 * float(np.hypot(*size))
         self._n_lost = 0
 
     def _common(self, image: LumaImage) -> tuple[FloatArray, float]:
         """Return the motion that most patches share, as in `GroundPath.shift_px`, and its u; NaN if they share none."""
-        found = [(patch, shift) for patch in self._patches if (shift := patch.shift_px(image)) is not None]
+        found = self._found(image)
         if len(found) < FEWEST_PATCHES:
             return np.full(4, np.nan), np.nan
         places = (np.array([patch.centre_px for patch, _ in found]) - self._middle_px) / self._reach_px
@@ -197,6 +203,67 @@ class GroundWatcher:
             return np.full(4, np.nan), np.nan
         u_px = np.array([patch.u_px for patch, _ in found])
         return _similarity(places[share], shifts[share], u_px[share])
+
+
+    def _found(self, image: LumaImage) -> list[tuple[_Patch, FloatArray]]:
+        """Return the patches that are known again with their shifts: all at once while nothing has moved far."""
+        if self._glance is None:
+            return []
+        near_px = self._glance.shifts_px(image)
+        if near_px is not None:
+            for patch, shift in zip(self._patches, near_px, strict=True):
+                patch.stay(shift)
+            pairs = zip(self._patches, near_px, strict=True)
+            return [(patch, shift) for patch, shift in pairs if np.isfinite(shift[0])]
+        return [(patch, shift) for patch in self._patches if (shift := patch.shift_px(image)) is not None]
+
+
+class _Glance:
+    """One linear step of every patch at its place in the reference, thinned: all that a still camera needs.
+
+    Parameters
+    ----------
+    image : ndarray
+        The reference frame.
+    patches : tuple of _Patch, length K
+    """
+
+    def __init__(self, image: LumaImage, patches: tuple[_Patch, ...]) -> None:
+        across = np.arange(-HALF_PX, HALF_PX + 1, GLANCE_THIN)
+        centres = np.array([np.round(patch.centre_px) for patch in patches]).astype(np.intp)
+        self._x = centres[:, :1] + np.tile(across, len(across))
+        self._y = centres[:, 1:] + np.repeat(across, len(across))
+        self._pattern = self._seen(image)
+        slope_x = 0.5 * (self._seen(image, dx=1) - self._seen(image, dx=-1))
+        slope_y = 0.5 * (self._seen(image, dy=1) - self._seen(image, dy=-1))
+        self._size = np.einsum("kn,kn->k", self._pattern, self._pattern)
+        slopes = np.stack([self._free(slope_x), self._free(slope_y)], axis=1)  # (K, 2, n)
+        self._steps = np.linalg.pinv(np.swapaxes(slopes, 1, 2))
+
+    def _seen(self, image: LumaImage, *, dx: int = 0, dy: int = 0) -> FloatArray:
+        values = image[self._y + dy, self._x + dx].astype(np.float64)
+        values -= values.mean(axis=1, keepdims=True)
+        return np.asarray(values, dtype=np.float64)
+
+    def _free(self, values: FloatArray) -> FloatArray:
+        gain = np.einsum("kn,kn->k", values, self._pattern) / np.maximum(self._size, 1e-9)
+        free: FloatArray = values - gain[:, None] * self._pattern
+        return free
+
+    def shifts_px(self, image: LumaImage) -> FloatArray | None:
+        """Return the shifts (K, 2), NaN for a patch not known again; None if too many moved or are unknown."""
+        seen = self._seen(image)
+        left = self._free(seen)
+        total = np.einsum("kn,kn->k", seen, seen)
+        gain = np.einsum("kn,kn->k", seen, self._pattern) / np.maximum(self._size, 1e-9)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            shifts: FloatArray = -(self._steps @ left[..., None])[..., 0] / gain[:, None]
+        known = (np.einsum("kn,kn->k", left, left) < (1.0 - KNOWN) * total) & (gain > 0.05)
+        near = known & (np.abs(shifts).max(axis=1) < GLANCE_PX)
+        if near.sum() < max(FEWEST_PATCHES, GLANCE_SHARE * known.sum()):
+            return None
+        shifts[~near] = np.nan
+        return shifts
 
 
 def _similarity(places: FloatArray, shifts: FloatArray, u_px: FloatArray) -> tuple[FloatArray, float]:
@@ -224,7 +291,7 @@ class _Patch:
         self._pattern = inner
         # Gain and offset are eliminated: slopes and differences are taken at right angles to pattern and constant.
         basis = np.stack([np.ones(inner.size), inner.ravel() - inner.mean()])
-        self._basis = basis / np.linalg.norm(basis, axis=1, keepdims=True)
+        self._basis = basis / np.maximum(np.linalg.norm(basis, axis=1, keepdims=True), 1e-9)
         slopes = self._free(np.stack([slope_x, slope_y]))
         information = slopes @ slopes.T
         low = float(np.linalg.eigvalsh(information)[0])
@@ -245,6 +312,11 @@ class _Patch:
                 self._last_px = settled
                 return settled
         return None
+
+    def stay(self, shift_px: FloatArray) -> None:
+        """Remember where the patch was seen by other means."""
+        if np.isfinite(shift_px[0]):
+            self._last_px = shift_px
 
     def _settled(self, image: LumaImage, shift_px: FloatArray) -> FloatArray | None:
         """Take Gauss-Newton steps (Lucas and Kanade 1981) until they are small."""
