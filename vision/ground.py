@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from vision.frames import Frame, LumaImage
 from vision.records import FloatArray
 
-LOOK_EVERY_S = 0.4
+LOOK_EVERY_S = 0.25
 
 GRID = (8, 5)
 """Patches across and down, at most one for each cell."""
