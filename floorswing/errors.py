@@ -74,5 +74,6 @@ def why(error: BaseException) -> str:
 
 
 def one_line(message: object) -> str:
-    """Return the text of `message` on one line."""
-    return " ".join(str(message).split())
+    """Return the text of `message` on one line, what does not print (in file names, say) by its code."""
+    text = " ".join(str(message).split())
+    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)

@@ -204,7 +204,6 @@ class GroundWatcher:
         u_px = np.array([patch.u_px for patch, _ in found])
         return _similarity(places[share], shifts[share], u_px[share])
 
-
     def _found(self, image: LumaImage) -> list[tuple[_Patch, FloatArray]]:
         """Return the patches that are known again with their shifts: all at once while nothing has moved far."""
         if self._glance is None:
