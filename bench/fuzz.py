@@ -184,10 +184,11 @@ def damaged_clip(bases: Mapping[str, bytes], seed: int, number: int) -> tuple[st
 
 
 SNIPPETS = (
-    "nan", "inf", "-inf", "1e999", "-0.0", "0", "-1", "1e-320", "9" * 400, "0x7fffffff", "true", '""', "''", "[]", "{}",
-    '"../../../outside"', '"/dev/zero"', '"/dev/null"', '"a\\u0000b"', '"\\U0001F6D2"', '"""x\n', "[[[[[[[[", "=", "\n[robot]\n",
-    "\n[robot.x]\n", 'file = "commands.csv"', 'file = "."', 'file = "trial.toml"', "1979-05-27", "_", "#", "\\", "\x00", "\ufeff",
-    "[190, [190]]", "[" * 2000, '{a={a={a={a=1}}}}', "wheel_deg = 5", "\u202e", "\r",
+    "nan", "inf", "-inf", "1e999", "-0.0", "0", "-1", "1e-320", "9" * 400, "0x7fffffff", "true", '""', "''", "[]",
+    "{}", '"../../../outside"', '"/dev/zero"', '"/dev/null"', '"a\\u0000b"', '"\\U0001F6D2"', '"""x\n', "[[[[[[[[",
+    "=", "\n[robot]\n", "\n[robot.x]\n", 'file = "commands.csv"', 'file = "."', 'file = "trial.toml"',
+    'file = "/dev/zero"', 'file = "/dev/stdin"', 'file = "pipe"', "1979-05-27", "_", "#", "\\", "\x00", "\ufeff",
+    "[190, [190]]", "[" * 2000, "{a={a={a={a=1}}}}", "wheel_deg = 5", "\u202e", "\r",
 )  # fmt: skip
 
 
@@ -223,7 +224,8 @@ def _text_damage(data: Bytes, rng: np.random.Generator) -> tuple[Bytes, str]:
         return Bytes(b"\n".join(lines)), "line twice"
     snippet = SNIPPETS[int(rng.integers(0, len(SNIPPETS)))].encode("utf-8", "surrogatepass")
     if kind == 4 and b"=" in lines[at]:
-        lines[at] = lines[at].split(b"=")[0] + b"= " + snippet
+        whole = snippet.startswith(b"file = ")
+        lines[at] = snippet if whole else lines[at].split(b"=")[0] + b"= " + snippet
         return Bytes(b"\n".join(lines)), "value"
     if kind == 5:
         place = int(rng.integers(0, len(data) + 1))
@@ -327,6 +329,8 @@ def try_trial(trial: bytes, commands: bytes, damage: str, number: int, sandbox: 
     path = sandbox / "trial.toml"
     path.write_bytes(trial)
     (sandbox / "commands.csv").write_bytes(commands)
+    if not (sandbox / "pipe").exists():
+        os.mkfifo(sandbox / "pipe")  # reading it waits for ever
     start = time.monotonic()
     try:
         read_trial(path)

@@ -22,6 +22,8 @@ TAIL_DOF = 4.0
 """Degrees of freedom of the scatter: a turn that slipped badly is still the command's turn."""
 P_MISSING = 0.02
 """Prior chance that a command left no measured turn."""
+P_NOT_FILMED = 0.1
+"""The same for commands at either end of the list: recording starts late and breaks off more often."""
 P_EXTRA = 0.02
 """Prior chance that a measured turn answers no command."""
 WRONG_WAY = 1e-4
@@ -213,13 +215,14 @@ def _log_pair(data: _Data, law: _Law) -> FloatArray:
     return pair
 
 
-def _forward(log_pair: FloatArray, log_extra: float, log_missing: float) -> FloatArray:
+def _forward(log_pair: FloatArray, log_extra: float) -> FloatArray:
     """Log weight of all paths that use up i turns and j commands, shape (M + 1, C + 1)."""
     n_turns, n_commands = log_pair.shape
-    missing_run = log_missing * np.arange(n_commands + 1)
+    count = np.arange(n_commands + 1)
     weight = np.empty((n_turns + 1, n_commands + 1))
-    weight[0] = missing_run
+    weight[0] = np.log(P_NOT_FILMED) * count
     for i in range(n_turns):
+        missing_run = np.log(P_MISSING if i < n_turns - 1 else P_NOT_FILMED) * count
         arrive = weight[i] + log_extra
         arrive[1:] = np.logaddexp(arrive[1:], weight[i, :-1] + log_pair[i])
         weight[i + 1] = np.logaddexp.accumulate(arrive - missing_run) + missing_run
@@ -230,9 +233,8 @@ def _posterior(data: _Data, law: _Law) -> tuple[FloatArray, FloatArray, float]:
     """Return P(turn i is command j), P(turn i is extra), and the log evidence."""
     log_pair = _log_pair(data, law)
     log_extra = _broad_log_density(data) + np.log(P_EXTRA)
-    log_missing = np.log(P_MISSING)
-    ahead = _forward(log_pair, log_extra, log_missing)
-    behind = _forward(log_pair[::-1, ::-1], log_extra, log_missing)[::-1, ::-1]
+    ahead = _forward(log_pair, log_extra)
+    behind = _forward(log_pair[::-1, ::-1], log_extra)[::-1, ::-1]
     total = float(ahead[-1, -1])
     gamma = np.exp(ahead[:-1, :-1] + log_pair + behind[1:, 1:] - total)
     extra = np.clip(1.0 - gamma.sum(axis=1), 0.0, 1.0)
@@ -290,7 +292,7 @@ def _modes(data: _Data) -> list[_Mode]:
 
 def _evidence(data: _Data, law: _Law) -> float:
     log_extra = _broad_log_density(data) + np.log(P_EXTRA)
-    return float(_forward(_log_pair(data, law), log_extra, float(np.log(P_MISSING)))[-1, -1])
+    return float(_forward(_log_pair(data, law), log_extra)[-1, -1])
 
 
 def _climb(data: _Data, law: _Law, n_most: int = 40) -> _Mode:

@@ -16,6 +16,7 @@ from typing import NoReturn
 
 from floorswing.errors import TrialError, why
 from floorswing.keys import listed, shown
+from floorswing.small_file import read_small_text
 
 COMMAND_COLUMN = "wheel_deg"
 MOST_WHEEL_DEG = 36_000.0
@@ -94,7 +95,7 @@ def _refuse(path: Path, line: int, found: str, accepted: str) -> NoReturn:
 
 def _text_of(path: Path) -> str:
     try:
-        return path.read_text(encoding="utf-8-sig")
+        return read_small_text(path)
     except UnicodeDecodeError:
         raise TrialError(path, "", "not UTF-8 text", "save it as CSV in UTF-8") from None
     except (OSError, ValueError) as error:

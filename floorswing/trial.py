@@ -17,6 +17,7 @@ from floorswing.columns import TURN_COLUMNS
 from floorswing.commands_file import MOST_WHEEL_DEG, Commands, read_commands_file
 from floorswing.errors import TrialError, one_line, why
 from floorswing.keys import Keys, listed, shown
+from floorswing.small_file import read_small_text
 from vision.records import MarkerSetup
 
 DEFAULT_DICTIONARY = "APRILTAG_36h11"
@@ -170,7 +171,7 @@ def trial_from_text(text: str, path: Path) -> Trial:
 def _text_of(path: Path) -> str:
     """Return the file's text; a byte order mark, as some editors leave it, is not held against it."""
     try:
-        return path.read_text(encoding="utf-8-sig")
+        return read_small_text(path)
     except UnicodeDecodeError:
         raise TrialError(path, "", "not UTF-8 text", "a trial file is TOML, saved as UTF-8") from None
     except (OSError, ValueError) as error:

@@ -23,6 +23,7 @@ import numpy as np
 from av.sidedata.sidedata import Type as SideDataType
 from numpy.typing import NDArray
 
+from vision.boxes import boxes_of
 from vision.errors import ClipError
 from vision.records import ClipInfo
 
@@ -36,6 +37,9 @@ MAX_PIXELS = 64_000_000
 
 CLOSE_S = 1e-4
 """Times nearer than this are the same: tables keep a hundred-thousandth of a second."""
+
+SHORT_BY_S, SHORT_BY_SHARE = 1.0, 0.05
+"""A clip whose pictures end before its length by more than this broke off: sound may last a little longer."""
 
 _LUMA_FIRST = ("yuv", "nv12", "nv21", "nv16", "p010", "p016", "gray")
 
@@ -83,6 +87,8 @@ class Clip:
     ----------
     path : path-like
         Any container and codec that FFmpeg reads.
+    threads : int or None
+        Threads that decode; None for as many as there are cores.
 
     Raises
     ------
@@ -90,11 +96,12 @@ class Clip:
         If the file is missing, holds no video, or cannot be decoded at all.
     """
 
-    def __init__(self, path: str | Path) -> None:
+    def __init__(self, path: str | Path, *, threads: int | None = None) -> None:
         self.path = Path(path)
         self._container = _open_container(self.path)
         try:
             self._stream = _video_stream(self._container, self.path)
+            self._stream.codec_context.thread_count = threads or 0
             self._upright = _upright_of(self.path)
         except BaseException:
             self._container.close()
@@ -202,14 +209,18 @@ class Clip:
     def _pictures(self, clock: _Clock) -> Iterator[Any]:
         """Yield decoded pictures, stepping over packets that cannot be decoded."""
         packets = self._container.demux(self._stream)
-        n_bad = 0
+        n_bad, broken = 0, False
         while True:
             try:
                 packet = next(packets)
             except StopIteration:
                 break
             except (av.error.FFmpegError, EOFError) as error:
-                self._note(f"the file breaks off or is damaged after {clock.last_s:.2f} s ({_reason(error)})")
+                self._note(
+                    f"the file breaks off or is damaged: nothing could be read after {clock.last_s:.2f} s "
+                    f"({_reason(error)})"
+                )
+                broken = True
                 break
             try:
                 yield from packet.decode()
@@ -217,6 +228,17 @@ class Clip:
                 n_bad += 1
         if n_bad:
             self._note(f"{n_bad} damaged packets could not be decoded")
+        if not broken:
+            self._note_end(clock)
+
+    def _note_end(self, clock: _Clock) -> None:
+        """Say so if the file ends before it should by its own account."""
+        promised_s = self.info.duration_s or 0.0
+        boxes = boxes_of(self.path)
+        early = promised_s - clock.last_s > max(SHORT_BY_S, SHORT_BY_SHARE * promised_s)
+        if early or (boxes is not None and not boxes.whole):
+            length = f" of {promised_s:.2f} s" if early else ""
+            self._note(f"the file breaks off: nothing could be read after {clock.last_s:.2f} s{length}")
 
     def _note(self, problem: str) -> None:
         self.problems.append(f"{self.path.name}: {problem}")
@@ -280,9 +302,17 @@ def _open_container(path: Path) -> Any:
         raise ClipError(f"{path}: is a folder, not a clip; give the clip files in it")
     if not path.exists():
         raise ClipError(f"{path}: no such file; check the path of the clip")
+    if not path.is_file():
+        raise ClipError(f"{path}: is a device or a pipe, not a file; give a clip that is stored whole")
     try:
         return av.open(str(path), mode="r", metadata_errors="replace")
     except (av.error.FFmpegError, OSError, ValueError) as error:
+        boxes = boxes_of(path)
+        if boxes is not None and not boxes.indexed:
+            raise ClipError(
+                f"{path.name}: its index is missing, so nothing in it can be read: recording or copying broke off; "
+                "copy it from the phone again"
+            ) from error
         raise ClipError(
             f"{path.name}: cannot be read as a clip ({_reason(error)}); accepted: mp4, mov, mkv, webm, avi"
         ) from error

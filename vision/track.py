@@ -32,6 +32,7 @@ from vision.pair import (
 )
 from vision.records import FloatArray, MarkerSetup
 from vision.rigid import fit_homography, inverse, project, projected_slope, rigid, rigid_between
+from vision.strangers import strangers
 
 HOLD = 0.55
 """Least share of a marker's variance that the pattern must explain for the marker to count as seen."""
@@ -671,6 +672,7 @@ class _Seeker:
         self._n_seen = {setup.fore_id: 0, setup.aft_id: 0}
         self._n_searched = 0
         self._twice: set[int] = set()
+        self._shown: tuple[int, LumaImage] | None = None
         self.tracker: PairTracker | None = None
         self.cards = CardWatcher(setup)
         self.image_px = (0, 0)
@@ -681,6 +683,8 @@ class _Seeker:
         self.image_px = (frame.luma.shape[1], frame.luma.shape[0])
         corners_px, found = find_pair(frame.luma, self._setup)
         self._count(found)
+        if self._shown is None or len(found) >= self._shown[0]:
+            self._shown = (len(found), frame.luma)
         if corners_px is not None:
             try:
                 self.tracker = PairTracker(self._setup, frame.luma, corners_px)
@@ -690,6 +694,8 @@ class _Seeker:
         if self.tracker is None:
             self._gap_s = min(self._gap_s + 0.02, SEARCH_EVERY_S)
             self._next_s = frame.time_s + self._gap_s
+        else:
+            self._shown = None
         return self.tracker
 
     def _count(self, found: list[Detection]) -> None:
@@ -711,19 +717,22 @@ class _Seeker:
         seen = [number for number, count in self._n_seen.items() if count]
         if len(seen) == 1:
             other = setup.aft_id if seen[0] == setup.fore_id else setup.fore_id
-            return (
-                f"only robot marker {seen[0]} {where} was found, never {other}; both must be in view: check "
-                "[markers] fore and aft, glare, and that neither is covered"
-            )
+            cure = self._instead(other) or "both must be in view: check that neither is covered or in glare"
+            return f"only robot marker {seen[0]} {where} was found, never {other}; {cure}; check [markers] fore and aft"
         if seen:
             return (
                 f"robot markers {setup.fore_id} and {setup.aft_id} {where} were never both found in one frame, "
                 "as flat squares of one size"
             )
+        instead = self._instead(setup.fore_id, setup.aft_id)
         return (
-            f"robot markers {setup.fore_id} and {setup.aft_id} {where} were not found; check [markers] dictionary "
-            f"and ids, that the markers are at least 22 px wide, flat, sharp and evenly lit"
+            f"robot markers {setup.fore_id} and {setup.aft_id} {where} were not found; "
+            + (f"{instead}; " if instead else "")
+            + "check [markers] dictionary and ids, that the markers are at least 22 px wide, flat, sharp and evenly lit"
         )
+
+    def _instead(self, *lacking: int) -> str | None:
+        return strangers(self._shown[1], self._setup, lacking) if self._shown is not None else None
 
 
 def _stack(times: list[float], keys: list[bool], sights: list[Sight], seeker: _Seeker) -> CornerTrack:

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from calib.errors import CalibError
-from calib.match import match_turns
+from calib.match import P_MISSING, P_NOT_FILMED, match_turns
 
 MIXED = [100.0, 190.0, 380.0, -100.0, -190.0, -380.0]
 
@@ -71,8 +71,9 @@ def test_extra_turn_is_left_without_a_command():
 
 def test_equal_commands_with_one_missing_say_that_the_place_is_unknown():
     match = matched(np.full(9, 90.0), [190.0] * 10)
-    # by symmetry, turn i is command i with probability (10 - (i + 1)) / 10 or command i + 1 with the rest
-    first = np.array([(9 - i) / 10 for i in range(9)])
+    # turn i is command i if the missing one comes later, command i + 1 if it came before; the ends weigh more
+    place = np.array([P_NOT_FILMED, *[P_MISSING] * 8, P_NOT_FILMED])
+    first = np.array([place[i + 1 :].sum() / place.sum() for i in range(9)])
     np.testing.assert_allclose(match.probability, np.maximum(first, 1 - first), atol=0.02)
     assert len(match.missing) == 1
 
