@@ -1,0 +1,378 @@
+"""Two or more surfaces, tyres, speeds or days: whether the same command does the same, and spreads as much.
+
+The question is put in degrees at a wanted angle: what the second one does for the command that turns the robot by the
+wanted angle on the first. That difference is held against 0 (is it seen?) and against a margin (is it small?), and the
+p-values of all pairs and angles are adjusted together.
+"""
+
+from __future__ import annotations
+
+import itertools
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from calib.about_fit import AboutFit, about_fit
+from calib.command import command_for
+from calib.consistency import POOLING_LEVEL, cell_columns, cells_of
+from calib.differences import all_alike, difference
+from calib.equivalence import two_one_sided
+from calib.errors import CalibError, NotEnoughTurns, NotIdentified
+from calib.fit import CONFIDENCE, Fit, fit_turns
+from calib.holm import holm
+from calib.intervals import Estimate
+from calib.models import SIDE_NAMES
+from calib.runs import run_parts
+from calib.sample_size import turns_to_settle
+from calib.spreads import brown_forsythe, spread_ratio
+from calib.table import TurnTable
+
+FloatArray = NDArray[np.float64]
+
+SAME = "same within the margin"
+DIFFERENT = "different"
+CANNOT_TELL = "cannot tell yet"
+WANTED_DEG = 90.0
+MARGIN_DEG = 1.0
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class Group:
+    """One of the things compared.
+
+    Parameters
+    ----------
+    name : str
+    fit : Fit
+    about : AboutFit
+    n_runs : int
+    inflation : float
+        Factor on the uncertainty of its means for what changes from run to run; 1 where runs are alike or there is one.
+    dof : float
+        Degrees of freedom that its means have.
+    """
+
+    name: str
+    fit: Fit
+    about: AboutFit
+    n_runs: int
+    inflation: float
+    dof: float
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Pair:
+    """Two groups held against each other at one wanted angle.
+
+    Parameters
+    ----------
+    first, second : str
+    wanted_deg : float
+    heading_deg : Estimate
+        What the second does less what the first does, at the first's command for the wanted angle.
+    heading_dof : float
+    command_wheel_deg : Estimate
+        Second's command for the wanted angle less the first's.
+    commands_wheel_deg : tuple of float
+        The two commands.
+    gain_relative : Estimate
+        Second's gain in that direction less the first's, over the first's.
+    p_different, p_same : float
+        Of no difference, and of a difference beyond the margin; adjusted over all pairs and angles.
+    verdict : str
+        `SAME`, `DIFFERENT` or `CANNOT_TELL`.
+    more_turns : int or None
+        Where it cannot be told: turns more in each group that would settle it with chance 0.8, if the difference is as
+        found; None where more than ten thousand.
+    """
+
+    first: str
+    second: str
+    wanted_deg: float
+    heading_deg: Estimate
+    heading_dof: float
+    command_wheel_deg: Estimate
+    commands_wheel_deg: tuple[float, float]
+    gain_relative: Estimate
+    p_different: float
+    p_same: float
+    verdict: str
+    more_turns: int | None
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class SpreadPair:
+    """The spreads of two groups: second over first, with the F interval, and p-values adjusted over all pairs."""
+
+    first: str
+    second: str
+    ratio: Estimate
+    p_f: float
+    p_brown_forsythe: float
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Together:
+    """All groups at once, at one wanted angle: Welch's test that all do the same at the first group's command."""
+
+    wanted_deg: float
+    f: float
+    dof_above: float
+    dof_below: float
+    p_value: float
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class Comparison:
+    """Everything that a comparison says.
+
+    Parameters
+    ----------
+    groups : tuple of Group
+    margin_deg, level, confidence : float
+    pairs : tuple of Pair
+    spreads : tuple of SpreadPair
+        At the size of the first wanted angle.
+    spread_together : tuple of float
+        Brown and Forsythe's F and p-value for all groups.
+    together : tuple of Together
+        Empty for two groups.
+    notes : tuple of str
+    """
+
+    groups: tuple[Group, ...]
+    margin_deg: float
+    level: float
+    confidence: float
+    pairs: tuple[Pair, ...]
+    spreads: tuple[SpreadPair, ...]
+    spread_together: tuple[float, float]
+    together: tuple[Together, ...]
+    notes: tuple[str, ...]
+
+
+def compare_tables(
+    tables: Sequence[tuple[str, TurnTable]],
+    *,
+    wanted_deg: Sequence[float] = (),
+    margin_deg: float = MARGIN_DEG,
+    confidence: float = CONFIDENCE,
+) -> Comparison:
+    """Compare two or more tables of turns.
+
+    Parameters
+    ----------
+    tables : sequence of (str, TurnTable)
+        Name and turns of each group.
+    wanted_deg : sequence of float
+        Signed angles at which they are compared; 90 degrees each way that all groups were driven by default.
+    margin_deg : float
+        Difference that does not matter.
+    confidence : float
+        Of intervals; one less the level of tests.
+
+    Raises
+    ------
+    NotEnoughTurns, CalibError
+        If there are fewer than two groups, or one of them allows no fit; names the group.
+    NotIdentified
+        If no direction was driven in all groups.
+    """
+    if not (margin_deg > 0.0 and math.isfinite(margin_deg)):
+        raise ValueError(f"margin {margin_deg}; accepted: degrees above 0")
+    if len(tables) < 2:
+        raise NotEnoughTurns(f"{len(tables)} to compare; at least two are needed", n_seen=len(tables), n_needed=2)
+    names = [name for name, _ in tables]
+    if len(set(names)) < len(names):
+        raise CalibError(f"two of the things compared have one name ({', '.join(names)}); name each differently")
+    groups = tuple(_group(name, table) for name, table in tables)
+    angles = _angles(groups, wanted_deg)
+    level = 1.0 - confidence
+    pairs = [
+        _pair(first, second, angle, margin_deg, confidence)
+        for first, second in itertools.combinations(groups, 2)
+        for angle in angles
+    ]
+    return Comparison(
+        groups=groups,
+        margin_deg=margin_deg,
+        level=level,
+        confidence=confidence,
+        pairs=_with_verdicts(pairs, groups, margin_deg, level),
+        spreads=_spreads(groups, abs(angles[0]), confidence),
+        spread_together=brown_forsythe([_free(group, abs(angles[0])) for group in groups]),
+        together=tuple(_together(groups, angle) for angle in angles) if len(groups) > 2 else (),
+        notes=_notes(groups),
+    )
+
+
+def _group(name: str, table: TurnTable) -> Group:
+    try:
+        fit = fit_turns(table.turns)
+    except NotEnoughTurns as error:
+        raise NotEnoughTurns(f"{name}: {error}", n_seen=error.n_seen, n_needed=error.n_needed) from None
+    except CalibError as error:
+        raise CalibError(f"{name}: {error}") from None
+    about = about_fit(table, fit)
+    inflation, dof = _between_runs(about, fit)
+    n_runs = len(set(about.table.run))
+    return Group(name=name, fit=fit, about=about, n_runs=n_runs, inflation=inflation, dof=dof)
+
+
+def _between_runs(about: AboutFit, fit: Fit) -> tuple[float, float]:
+    """Return by how much scatter between runs widens the uncertainty of means, and the degrees of freedom then."""
+    which, _ = cells_of(about, fit)
+    try:
+        parts = run_parts(
+            about.along_deg / about.relative,
+            np.array(about.table.run),
+            cell_columns(which) / about.relative[:, None],
+        )
+    except CalibError:
+        return 1.0, float(fit.dof)
+    if parts.p_value > POOLING_LEVEL or parts.ms_within == 0.0:
+        return 1.0, float(fit.dof)
+    return math.sqrt(max(parts.f, 1.0)), float(parts.dof_between)
+
+
+def _angles(groups: Sequence[Group], wanted_deg: Sequence[float]) -> tuple[float, ...]:
+    common = [side for side in (1.0, -1.0) if all(side in group.fit.sides for group in groups)]
+    if not common:
+        raise NotIdentified("no direction was driven in all of the things compared, so nothing is alike in them")
+    angles = tuple(wanted_deg) or tuple(side * WANTED_DEG for side in common)
+    for angle in angles:
+        if not math.isfinite(angle) or angle == 0.0:
+            raise ValueError(f"wanted angle {angle}; accepted: any finite angle other than 0")
+        if math.copysign(1.0, angle) not in common:
+            lacking = next(g.name for g in groups if math.copysign(1.0, angle) not in g.fit.sides)
+            direction = SIDE_NAMES[math.copysign(1.0, angle)]
+            raise NotIdentified(f"{lacking}: no turn is {direction}, so nothing is known of {angle:g} deg")
+    return angles
+
+
+def mean_at(group: Group, wheel_deg: float) -> tuple[float, float]:
+    """Return the mean heading change along the command from a start the same way, and its standard uncertainty."""
+    side = math.copysign(1.0, wheel_deg)
+    row = group.fit.gain_row(side) * abs(wheel_deg) + group.fit.offset_row(side)
+    u = math.sqrt(float(row @ group.fit.cov @ row)) * group.inflation
+    return float(row @ group.fit.coefficients), u
+
+
+def _pair(first: Group, second: Group, wanted: float, margin: float, confidence: float) -> Pair:
+    commands = [command_for(group.fit, wanted, confidence=confidence).wheel_deg for group in (first, second)]
+    wheel, side = commands[0].value, math.copysign(1.0, wanted)
+    (mean_a, u_a), (mean_b, u_b) = mean_at(first, wheel), mean_at(second, wheel)
+    heading, dof, p_different = difference(
+        mean_a, mean_b, u_first=u_a, u_second=u_b, dof_first=first.dof, dof_second=second.dof, confidence=confidence
+    )
+    command, _, _ = difference(
+        commands[0].value,
+        commands[1].value,
+        u_first=commands[0].u * first.inflation,
+        u_second=commands[1].u * second.inflation,
+        dof_first=first.dof,
+        dof_second=second.dof,
+        confidence=confidence,
+    )
+    gains = [group.fit.gain(side) for group in (first, second)]
+    gain, _, _ = difference(
+        1.0,
+        gains[1].value / gains[0].value,
+        u_first=gains[0].u / gains[0].value * first.inflation * gains[1].value / gains[0].value,
+        u_second=gains[1].u / gains[0].value * second.inflation,
+        dof_first=first.dof,
+        dof_second=second.dof,
+        confidence=confidence,
+    )
+    same = two_one_sided(heading.value, heading.u, dof, margin, 1.0 - confidence)
+    return Pair(
+        first=first.name,
+        second=second.name,
+        wanted_deg=wanted,
+        heading_deg=_signed(heading, side),
+        heading_dof=dof,
+        command_wheel_deg=command,
+        commands_wheel_deg=(commands[0].value, commands[1].value),
+        gain_relative=gain,
+        p_different=p_different,
+        p_same=same.p_value,
+        verdict="",
+        more_turns=None,
+    )
+
+
+def _signed(one: Estimate, side: float) -> Estimate:
+    low, high = sorted((side * one.low, side * one.high))
+    return Estimate(value=side * one.value, u=one.u, low=low, high=high, confidence=one.confidence)
+
+
+def _with_verdicts(pairs: list[Pair], groups: Sequence[Group], margin: float, level: float) -> tuple[Pair, ...]:
+    turns = {group.name: group.fit.n_turns for group in groups}
+    different, same = holm([pair.p_different for pair in pairs]), holm([pair.p_same for pair in pairs])
+    judged = []
+    for pair, p_different, p_same in zip(pairs, different, same, strict=True):
+        verdict = SAME if p_same <= level else DIFFERENT if p_different <= level else CANNOT_TELL
+        more = None
+        if verdict == CANNOT_TELL:
+            fewest = min(turns[pair.first], turns[pair.second])
+            strict = level / len(pairs)
+            heading = pair.heading_deg
+            more = turns_to_settle(heading.value, heading.u, pair.heading_dof, margin, fewest, level=strict)
+        judged.append(
+            replace(pair, p_different=float(p_different), p_same=float(p_same), verdict=verdict, more_turns=more)
+        )
+    return tuple(judged)
+
+
+def _spreads(groups: Sequence[Group], size_deg: float, confidence: float) -> tuple[SpreadPair, ...]:
+    duos = list(itertools.combinations(groups, 2))
+    found = [
+        spread_ratio(
+            a.fit.scatter_at_deg(size_deg), a.fit.dof, b.fit.scatter_at_deg(size_deg), b.fit.dof, confidence
+        )
+        for a, b in duos
+    ]
+    p_f = holm([p for _, p in found])
+    p_bf = holm([brown_forsythe([_free(a, size_deg), _free(b, size_deg)])[1] for a, b in duos])
+    return tuple(
+        SpreadPair(first=a.name, second=b.name, ratio=ratio, p_f=float(p), p_brown_forsythe=float(q))
+        for (a, b), (ratio, _), p, q in zip(duos, found, p_f, p_bf, strict=True)
+    )
+
+
+def _free(group: Group, size_deg: float) -> FloatArray:
+    """Return residuals of turns of a size, made as large as the scatter that they come from."""
+    fit = group.fit
+    sized = fit.scatter_at_deg(size_deg) / fit.scatter_at_deg(fit.size_deg) if fit.scatter_deg > 0.0 else 1.0
+    return group.about.evened_deg * sized * math.sqrt(fit.n_turns / fit.dof)
+
+
+def _together(groups: Sequence[Group], wanted: float) -> Together:
+    wheel = command_for(groups[0].fit, wanted).wheel_deg.value
+    means = [mean_at(group, wheel) for group in groups]
+    f, above, below, p = all_alike([m for m, _ in means], [u for _, u in means], [group.dof for group in groups])
+    return Together(wanted_deg=wanted, f=f, dof_above=above, dof_below=below, p_value=p)
+
+
+def _notes(groups: Sequence[Group]) -> tuple[str, ...]:
+    notes = []
+    single = [group.name for group in groups if group.n_runs == 1]
+    if single:
+        notes.append(
+            f"one run only of {', '.join(single)}: what changes from one run to the next (putting the robot down, "
+            "battery) cannot be told from what is compared; film each twice or more to tell"
+        )
+    widened = [group.name for group in groups if group.inflation > 1.0]
+    if widened:
+        notes.append(f"the runs of {', '.join(widened)} differ among themselves; the intervals allow for it")
+    banded = [group.fit.model.dead_band for group in groups]
+    if any(banded) and not all(banded):
+        lacking = ", ".join(group.name for group, has in zip(groups, banded, strict=True) if not has)
+        notes.append(f"the turns of {lacking} cannot tell a dead band, so part of a difference may be a dead band")
+    if any(group.fit.scatter_deg == 0.0 for group in groups):
+        still = ", ".join(group.name for group in groups if group.fit.scatter_deg == 0.0)
+        notes.append(f"the turns of {still} do not scatter beyond their measurement, so spreads cannot be compared")
+    return tuple(notes)

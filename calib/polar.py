@@ -1,0 +1,73 @@
+"""A pair of coefficients as a length and a direction, each with its interval."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import special
+from scipy.optimize import brentq
+
+from calib.intervals import Estimate, t_quantile
+
+FloatArray = NDArray[np.float64]
+
+
+def length_of(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) -> Estimate:
+    """Return the length of a pair of normal estimates.
+
+    The interval inverts the noncentral F distribution of the squared length, so that it reaches 0 where the pair may be
+    nothing but scatter; exact where both have the same variance.
+
+    Parameters
+    ----------
+    pair : ndarray, shape (2,)
+    cov : ndarray, shape (2, 2)
+    dof : float
+        Degrees of freedom of `cov`.
+    confidence : float
+    """
+    length = float(np.hypot(*pair))
+    towards = pair / length if length > 0.0 else np.array([1.0, 0.0])
+    u = math.sqrt(float(towards @ cov @ towards))
+    if u == 0.0:
+        return Estimate(value=length, u=0.0, low=length, high=length, confidence=confidence)
+    f = 0.5 * (length / u) ** 2
+    tail = 0.5 * (1.0 - confidence)
+    return Estimate(
+        value=length,
+        u=u,
+        low=u * math.sqrt(_noncentrality(f, dof, 1.0 - tail)),
+        high=u * math.sqrt(_noncentrality(f, dof, tail)),
+        confidence=confidence,
+    )
+
+
+def _noncentrality(f: float, dof: float, chance: float) -> float:
+    """Return the noncentrality for which a smaller F has this chance; 0 where none does."""
+    if float(special.fdtr(2.0, dof, f)) <= chance:
+        return 0.0
+    high = 4.0 * (2.0 * f + 10.0)
+    while float(special.ncfdtr(2.0, dof, high, f)) > chance and high < 1e8:
+        high *= 2.0
+    return float(brentq(lambda nc: float(special.ncfdtr(2.0, dof, nc, f)) - chance, 0.0, high, xtol=1e-10))
+
+
+def direction_deg(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) -> Estimate:
+    """Return the direction of a pair, in -180 to 180, with Fieller's interval; 180 to either side where unbounded."""
+    t = t_quantile(confidence, dof)
+    angle = math.degrees(math.atan2(pair[1], pair[0]))
+    length = float(np.hypot(*pair))
+    if length == 0.0:
+        return Estimate(value=angle, u=180.0, low=angle - 180.0, high=angle + 180.0, confidence=confidence)
+    across = np.array([-pair[1], pair[0]]) / length
+    u = math.degrees(math.sqrt(float(across @ cov @ across)) / length)
+    size, axes = np.linalg.eigh(np.outer(pair, pair) - t**2 * cov)
+    if size[1] <= 0.0:
+        return Estimate(value=angle, u=min(u, 180.0), low=angle - 180.0, high=angle + 180.0, confidence=confidence)
+    main = axes[:, 1] * np.sign(axes[:, 1] @ pair)
+    middle = math.degrees(math.atan2(main[1], main[0]))
+    middle += 360.0 * round((angle - middle) / 360.0)
+    half = math.degrees(math.atan(math.sqrt(max(-float(size[0]), 0.0) / float(size[1]))))
+    return Estimate(value=angle, u=min(u, 180.0), low=middle - half, high=middle + half, confidence=confidence)
