@@ -84,9 +84,12 @@ class Pair:
         Of no difference, and of a difference beyond the margin; adjusted over all pairs and angles.
     verdict : str
         `SAME`, `DIFFERENT` or `CANNOT_TELL`.
-    more_turns : int or None
-        Where it cannot be told: turns more in each group that would settle it with chance 0.8, if the difference is as
-        found; None where more than ten thousand.
+    more : int or None
+        Where it cannot be told: turns or runs more in each group that would settle it with chance 0.8, if the
+        difference is as found; None where more than ten thousand.
+    more_of : str
+        ``turns``, or ``runs`` where the runs of a group differ among themselves, so that more turns in them would not
+        do.
     """
 
     first: str
@@ -100,7 +103,8 @@ class Pair:
     p_different: float
     p_same: float
     verdict: str
-    more_turns: int | None
+    more: int | None = None
+    more_of: str = "turns"
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -300,7 +304,6 @@ def _pair(first: Group, second: Group, wanted: float, margin: float, confidence:
         p_different=p_different,
         p_same=same.p_value,
         verdict="",
-        more_turns=None,
     )
 
 
@@ -310,21 +313,28 @@ def _signed(one: Estimate, side: float) -> Estimate:
 
 
 def _with_verdicts(pairs: list[Pair], groups: Sequence[Group], margin: float, level: float) -> tuple[Pair, ...]:
-    turns = {group.name: group.fit.n_turns for group in groups}
+    named = {group.name: group for group in groups}
     different, same = holm([pair.p_different for pair in pairs]), holm([pair.p_same for pair in pairs])
     judged = []
     for pair, p_different, p_same in zip(pairs, different, same, strict=True):
         verdict = SAME if p_same <= level else DIFFERENT if p_different <= level else CANNOT_TELL
-        more = None
+        more, unit = None, "turns"
         if verdict == CANNOT_TELL:
-            fewest = min(turns[pair.first], turns[pair.second])
-            strict = level / len(pairs)
-            heading = pair.heading_deg
-            more = turns_to_settle(heading.value, heading.u, pair.heading_dof, margin, fewest, level=strict)
+            more, unit = _more(pair, named[pair.first], named[pair.second], margin, level / len(pairs))
         judged.append(
-            replace(pair, p_different=float(p_different), p_same=float(p_same), verdict=verdict, more_turns=more)
+            replace(
+                pair, p_different=float(p_different), p_same=float(p_same), verdict=verdict, more=more, more_of=unit
+            )
         )
     return tuple(judged)
+
+
+def _more(pair: Pair, first: Group, second: Group, margin: float, level: float) -> tuple[int | None, str]:
+    """Return how many turns, or runs, more in each group would settle a pair."""
+    heading, widened = pair.heading_deg, [group for group in (first, second) if group.inflation > 1.0]
+    counts = [group.n_runs for group in widened] or [first.fit.n_turns, second.fit.n_turns]
+    more = turns_to_settle(heading.value, heading.u, pair.heading_dof, margin, min(counts), level=level)
+    return more, "runs" if widened else "turns"
 
 
 def _spreads(groups: Sequence[Group], size_deg: float, confidence: float) -> tuple[SpreadPair, ...]:

@@ -7,6 +7,7 @@ nothing over half a revolution.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -110,7 +111,7 @@ def in_frames(columns: FloatArray, frame: Sequence[str]) -> tuple[tuple[str, ...
 def _in_frame(frame: str, columns: FloatArray, test: AddedTerms, part: slice, confidence: float) -> FrameGrain:
     pair, cov = test.coefficients[part], test.cov[part, part]
     double = direction_deg(pair, cov, test.dof_left, confidence)
-    shift = 180.0 * np.floor(0.5 * double.value / 180.0)
+    shift = 180.0 * math.floor(0.5 * double.value / 180.0)
     return FrameGrain(
         frame=frame,
         amplitude=length_of(pair, cov, test.dof_left, confidence),

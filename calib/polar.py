@@ -57,7 +57,7 @@ def _noncentrality(f: float, dof: float, chance: float) -> float:
 def direction_deg(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) -> Estimate:
     """Return the direction of a pair, in -180 to 180, with Fieller's interval; 180 to either side where unbounded."""
     t = t_quantile(confidence, dof)
-    angle = math.degrees(math.atan2(pair[1], pair[0]))
+    angle = math.degrees(math.atan2(float(pair[1]), float(pair[0])))
     length = float(np.hypot(*pair))
     if length == 0.0:
         return Estimate(value=angle, u=180.0, low=angle - 180.0, high=angle + 180.0, confidence=confidence)
@@ -66,8 +66,8 @@ def direction_deg(pair: FloatArray, cov: FloatArray, dof: float, confidence: flo
     size, axes = np.linalg.eigh(np.outer(pair, pair) - t**2 * cov)
     if size[1] <= 0.0:
         return Estimate(value=angle, u=min(u, 180.0), low=angle - 180.0, high=angle + 180.0, confidence=confidence)
-    main = axes[:, 1] * np.sign(axes[:, 1] @ pair)
-    middle = math.degrees(math.atan2(main[1], main[0]))
+    main = axes[:, 1] * math.copysign(1.0, float(axes[:, 1] @ pair))
+    middle = math.degrees(math.atan2(float(main[1]), float(main[0])))
     middle += 360.0 * round((angle - middle) / 360.0)
     half = math.degrees(math.atan(math.sqrt(max(-float(size[0]), 0.0) / float(size[1]))))
     return Estimate(value=angle, u=min(u, 180.0), low=middle - half, high=middle + half, confidence=confidence)
