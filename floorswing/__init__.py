@@ -16,13 +16,18 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from floorswing.fitting import fit as fit
     from floorswing.measuring import measure as measure
+    from floorswing.report.making import write_report as write_report
 
 __version__ = "0.1.0"
 
-_HOMES = {"fit": "floorswing.fitting", "measure": "floorswing.measuring"}
+_HOMES = {
+    "fit": "floorswing.fitting",
+    "measure": "floorswing.measuring",
+    "write_report": "floorswing.report.making",
+}
 """Where each public function lives; loaded when first asked for, since some need a second to load."""
 
-__all__ = ["__version__", "fit", "measure"]
+__all__ = ["__version__", "fit", "measure", "write_report"]
 
 
 def __getattr__(name: str) -> Any:

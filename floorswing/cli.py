@@ -24,6 +24,7 @@ COMMANDS: dict[str, str] = {
     "measure": "Measure the turns in clips filmed from above.",
     "fit": "Fit heading change against commanded wheel degrees.",
     "command": "Say what to command for wanted angles.",
+    "report": "Write the report: answer, pictures, evidence and record on one page.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""
 

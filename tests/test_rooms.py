@@ -80,9 +80,12 @@ def test_neither_vision_nor_calib_prints(room: str):
         assert not calls_of(path) & {"print", "input"}, path
 
 
-def test_one_module_opens_clips():
+def test_one_module_opens_clips_and_one_writes_them():
     users = [path.relative_to(ROOT) for room in ROOMS for path in modules_of(room) if "av" in imported(path)]
-    assert users == [Path("vision/frames.py")]
+    assert users == [Path("vision/frames.py"), Path("floorswing/report/recorder.py")]
+    recorder = (ROOT / "floorswing" / "report" / "recorder.py").read_text(encoding="utf-8")
+    assert recorder.count("av.open(") == 1
+    assert 'mode="w"' in recorder
     for room in ROOMS:
         for path in modules_of(room):
             assert "VideoCapture" not in path.read_text(encoding="utf-8"), path
