@@ -17,6 +17,7 @@ from typing import Any, NoReturn, TypeVar
 
 import numpy as np
 
+from floorswing.clip_names import place_of
 from floorswing.columns import EVENT_COLUMNS, HEADING_COLUMNS, HEADING_DECIMALS, TURN_COLUMNS, TURN_DECIMALS
 from floorswing.errors import FileError, one_line, why
 from floorswing.records import ClipSource, MeasuredTurn, Measurement
@@ -117,7 +118,7 @@ _AGAIN = "measure the clip again"
 
 
 def _source_of(clip: Mapping[str, Any]) -> ClipSource:
-    return ClipSource(path=Path(clip["path"]), sha256=str(clip["sha256"]), info=ClipInfo(**clip["info"]))
+    return ClipSource(path=place_of(clip["path"]), sha256=str(clip["sha256"]), info=ClipInfo(**clip["info"]))
 
 
 def _contribution(line: Mapping[str, Any]) -> Contribution:

@@ -10,6 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 
+from floorswing.clip_names import Place
 from floorswing.trial import Trial
 from vision.records import ClipInfo, Contribution, Event, PoseTrack
 
@@ -61,7 +62,7 @@ class MeasuredTurn:
 class ClipSource:
     """Which clip was measured: enough to find it again and to know that it is the same one."""
 
-    path: Path
+    path: Place
     sha256: str
     info: ClipInfo
 

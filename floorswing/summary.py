@@ -70,6 +70,31 @@ def sentence(measurement: Measurement) -> str:
     return f"{measurement.name}: {'; '.join(parts)}."
 
 
+def batch_table(failures: Sequence[tuple[str, str]], measured: Sequence[Measurement], n_kept: int) -> str:
+    """Return what became of several clips: one line for all, then one for each, the failures first.
+
+    Parameters
+    ----------
+    failures : sequence of (str, str)
+        Name of each clip that failed, and why.
+    measured : sequence of Measurement
+        The others.
+    n_kept : int
+        How many of these were measured before.
+    """
+    kept = f" ({n_kept} of them before)" if n_kept else ""
+    lines = [f"{_count(len(failures) + len(measured), 'clip')}: {len(failures)} failed, {len(measured)} measured{kept}"]
+    names = [name for name, _ in failures] + [one.name for one in measured]
+    width = max((len(name) for name in names), default=0)
+    lines += [f"  {name:<{width}}  failed    {why}" for name, why in sorted(failures)]
+    for one in sorted(measured, key=lambda one: one.name):
+        n_matched = sum(not math.isnan(turn.commanded_wheel_deg) for turn in one.turns)
+        matched = "" if n_matched == len(one.turns) else f", {n_matched} with a command"
+        warned = f", {_count(len(one.warnings), 'warning')}" if one.warnings else ""
+        lines.append(f"  {one.name:<{width}}  measured  {_count(len(one.turns), 'turn')}{matched}{warned}")
+    return "\n".join(lines)
+
+
 def _matched_part(measurement: Measurement, n_commands: int) -> str:
     n_matched = sum(not math.isnan(turn.commanded_wheel_deg) for turn in measurement.turns)
     if n_matched == len(measurement.turns) and not any(e.kind == MISSING_TURN for e in measurement.events):

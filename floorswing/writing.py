@@ -6,9 +6,11 @@ Whatever stops the program in between (a full disk, Ctrl-C) leaves what was ther
 
 from __future__ import annotations
 
+import contextlib
 import os
+import re
 import shutil
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from pathlib import Path
 
 from floorswing.errors import FileError, why
@@ -149,6 +151,57 @@ def write_folder(out: Path, name: str, contents: Mapping[str, str], *, mark: str
     finally:
         shutil.rmtree(hidden, ignore_errors=True)
     return out / name
+
+
+def clear_leftovers(out: Path, *, alive: Callable[[int], bool] | None = None) -> None:
+    """Finish or remove what a process that was killed while writing left in `out`.
+
+    A killed `write_folder` leaves a hidden folder, named after its process, with a part of the new files or, for a
+    moment, with the old ones. The old ones go back to their place; a part of new ones is removed.
+
+    Parameters
+    ----------
+    out : Path
+        The folder that folders are written into; it need not exist.
+    alive : callable, optional
+        Whether the process of that number is still running; for tests.
+    """
+    is_alive = alive if alive is not None else _is_alive
+    for hidden in sorted(out.glob(".*")) if out.is_dir() else []:
+        named = _LEFTOVER.fullmatch(hidden.name)
+        if named is None or not hidden.is_dir() or hidden.is_symlink() or is_alive(int(named["process"])):
+            continue
+        if named["old"]:
+            _put_back(hidden, out / named["name"])
+        else:
+            shutil.rmtree(hidden, ignore_errors=True)
+
+
+_LEFTOVER = re.compile(r"\.(?P<name>.+)\.(?P<process>[0-9]{1,9})(?P<old>\.old)?")
+
+
+def _put_back(old: Path, target: Path) -> None:
+    """Restore a folder that was to be replaced; if it has been, keep only what the new one does not hold."""
+    with contextlib.suppress(OSError):
+        if not target.exists():
+            os.rename(old, target)
+            return
+        for kept in old.iterdir():
+            if not (target / kept.name).exists():
+                os.rename(kept, target / kept.name)
+        shutil.rmtree(old)
+
+
+def _is_alive(process: int) -> bool:
+    if os.name == "nt":  # there is no harmless signal to ask with; what may be in use is left alone
+        return True
+    try:
+        os.kill(process, 0)
+    except ProcessLookupError:
+        return False
+    except OSError:
+        return True
+    return True
 
 
 def _replaceable(target: Path, out: Path, mark: str) -> Path:

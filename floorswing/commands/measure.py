@@ -11,11 +11,14 @@ import click
 
 from floorswing.cli import EXIT_SOME_FAILED, EXIT_WRONG
 from floorswing.errors import one_line
-from floorswing.progress import Bars
+from floorswing.progress import Board
+
+MOST_TABLES = 6
+"""More clips than these are reported by a sentence each, without their tables of turns."""
 
 
 @click.command(short_help="Measure the turns in clips filmed from above.")
-@click.argument("clips", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="CLIP...")
+@click.argument("clips", nargs=-1, required=True, metavar="CLIP...")
 @click.option("--trial", required=True, type=click.Path(path_type=Path), help="Trial file (TOML) of these clips.")
 @click.option(
     "--out",
@@ -24,54 +27,112 @@ from floorswing.progress import Bars
     help="Folder to write into; each clip gets a folder of its own there.",
 )
 @click.option("--continued", is_flag=True, help="The commands run on from one clip to the next, in this order.")
+@click.option("--again", is_flag=True, help="Measure even what was measured before with nothing changed since.")
+@click.option(
+    "--workers",
+    type=click.IntRange(min=1),
+    help="Clips measured side by side, each in a process of its own; by default as many as there are cores.",
+)
+@click.option(
+    "--scheduler",
+    metavar="ADDRESS",
+    help="Measure on the workers of this Dask scheduler (tcp://host:8786); they open the paths and URLs.",
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the turns as JSON instead of tables.")
-def command(clips: tuple[Path, ...], trial: Path, out: Path, continued: bool, as_json: bool) -> None:
+def command(
+    clips: tuple[str, ...],
+    trial: Path,
+    out: Path,
+    continued: bool,
+    again: bool,
+    workers: int | None,
+    scheduler: str | None,
+    as_json: bool,
+) -> None:
     """Measure the turns in each CLIP and write them to a folder named after it.
 
-    The folder holds turns.csv (one row a turn), events.csv (what was not a turn), heading.csv (one row a
-    frame) and measurement.json (settings, estimates, uncertainty budget, warnings).
-    """
-    from floorswing.measuring import Failure, measure_each
-    from floorswing.records import Measurement
+    A CLIP is a video file, or a folder of them. The folder written holds turns.csv (one row a turn), events.csv
+    (what was not a turn), heading.csv (one row a frame) and measurement.json (settings, estimates, uncertainty
+    budget, warnings).
 
-    measured: list[Measurement] = []
-    failed: list[Failure] = []
-    with Bars() as progress:
-        for outcome in measure_each(clips, trial, out, continued=continued, progress=progress):
-            progress.clear()
-            if isinstance(outcome, Failure):
-                failed.append(outcome)
-                click.echo(f"Error: {about(outcome.clip, outcome.error)}", err=True)
-                continue
-            measured.append(replace(outcome, track=None))  # long clips have long tracks
-            _report(outcome, as_json)
-    if as_json:
-        click.echo(json.dumps([_document(one) for one in measured], indent=2, ensure_ascii=False))
-    if failed:
-        all_wrong = not measured and all(failure.is_wrong_file for failure in failed)
+    What the output folder holds already from the same clip, trial, settings and program is kept, so that a batch
+    that was stopped goes on where it was. A clip that fails does not stop the others; the exit code is then 1.
+    """
+    from floorswing.batch import Batch
+
+    if scheduler is not None and workers is not None:
+        raise click.UsageError("--workers and --scheduler: give one of them; a scheduler has its own workers")
+    batch = Batch(clips, trial, out, continued=continued, again=again, workers=workers, scheduler=scheduler)
+    told = _Told(len(batch.names), as_json)
+    with Board(batch.names) as board:
+        for outcome in batch.run(board):
+            board.finish(outcome.name)
+            told.hear(outcome)
+    told.sum_up()
+    if told.failed:
+        all_wrong = not told.measured and all(failure.is_wrong_file for failure in told.failed)
         raise click.exceptions.Exit(EXIT_WRONG if all_wrong else EXIT_SOME_FAILED)
 
 
-def about(clip: Path, message: object) -> str:
+class _Told:
+    """What the outcomes are told as: lines while they come, and a table at the end."""
+
+    def __init__(self, n_clips: int, as_json: bool) -> None:
+        self._n_clips = n_clips
+        self._as_json = as_json
+        self.measured: list[Any] = []
+        self.failed: list[Any] = []
+        self._n_kept = 0
+
+    def hear(self, outcome: Any) -> None:
+        """Print what is to be said about one clip."""
+        from floorswing.batch import Kept
+        from floorswing.clip_job import Failure
+
+        if isinstance(outcome, Failure):
+            self.failed.append(outcome)
+            click.echo(f"Error: {about(outcome.clip, outcome.error)}", err=True)
+            return
+        kept = isinstance(outcome, Kept)
+        one = outcome.measurement if isinstance(outcome, Kept) else outcome
+        self._n_kept += kept
+        self.measured.append(replace(one, track=None))  # long clips have long tracks
+        self._report(one, kept)
+
+    def _report(self, one: Any, kept: bool) -> None:
+        from floorswing.summary import sentence, turns_table
+
+        for warning in one.warnings:
+            click.echo(f"Warning: {about(one.source.path, warning)}", err=True)
+        if not kept and (one.folder / "fit.json").exists():
+            click.echo(f"Warning: {one.folder / 'fit.json'} is of an earlier measurement; fit again", err=True)
+        if self._as_json:
+            return
+        if self._n_clips <= MOST_TABLES:
+            click.echo(turns_table(one.turns))
+        click.echo(sentence(one))
+        if kept:
+            click.echo(f"Kept from before in {one.folder}; nothing has changed since (--again measures anew)\n")
+        else:
+            click.echo(f"Written to {one.folder}\n")
+
+    def sum_up(self) -> None:
+        """Print the JSON document, or after several clips a table with the failures first."""
+        from floorswing.summary import batch_table
+
+        if self._as_json:
+            click.echo(json.dumps([_document(one) for one in self.measured], indent=2, ensure_ascii=False))
+        elif self._n_clips > 1:
+            failures = [(failure.name, about(failure.clip, failure.error)) for failure in self.failed]
+            click.echo(batch_table(failures, self.measured, self._n_kept))
+
+
+def about(clip: Path | str, message: object) -> str:
     """Return the message on one line, with the clip's whole path in front and its name only once."""
     line = one_line(message)
-    for said in (f"{clip}: ", f"{clip.name}: "):
-        line = line.removeprefix(said)
-    return f"{clip}: {line}"
-
-
-def _report(one: Any, as_json: bool) -> None:
-    from floorswing.summary import sentence, turns_table
-
-    for warning in one.warnings:
-        click.echo(f"Warning: {about(one.source.path, warning)}", err=True)
-    if (one.folder / "fit.json").exists():
-        click.echo(f"Warning: {one.folder / 'fit.json'} is of an earlier measurement; fit again", err=True)
-    if as_json:
-        return
-    click.echo(turns_table(one.turns))
-    click.echo(sentence(one))
-    click.echo(f"Written to {one.folder}\n")
+    for name in (str(clip), str(clip).rpartition("/")[2], Path(clip).name):
+        line = line.removeprefix(f"{one_line(name)}: ")
+    return f"{one_line(clip)}: {line}"
 
 
 def _document(one: Any) -> dict[str, Any]:

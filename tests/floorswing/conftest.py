@@ -144,7 +144,7 @@ def fake_pipeline(monkeypatch: pytest.MonkeyPatch) -> Fake:
     outcomes: dict[str, ClipResult | BaseException] = {}
 
     def measure_clip(
-        path: Path, setup: object, *, progress: Callable[[float, float], None] | None = None
+        path: Path, setup: object, *, progress: Callable[[float, float], None] | None = None, **_: object
     ) -> ClipResult:
         outcome = outcomes[Path(path).stem]
         if isinstance(outcome, BaseException):
@@ -154,7 +154,7 @@ def fake_pipeline(monkeypatch: pytest.MonkeyPatch) -> Fake:
             progress(10.0, 10.0)
         return outcome
 
-    monkeypatch.setattr("floorswing.measuring.measure_clip", measure_clip)
+    monkeypatch.setattr("floorswing.clip_job.measure_clip", measure_clip)
 
     def set_outcomes(**named: ClipResult | BaseException) -> None:
         outcomes.update(named)

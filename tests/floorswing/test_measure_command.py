@@ -23,7 +23,8 @@ MakeClip = Callable[[str], Path]
 
 
 def measure(*arguments: object) -> Result:
-    return CliRunner().invoke(cli, ["measure", *map(str, arguments)])
+    """Run the command in this process alone, where the pipeline is replaced."""
+    return CliRunner().invoke(cli, ["measure", "--workers", "1", *map(str, arguments)])
 
 
 @pytest.fixture
@@ -106,10 +107,11 @@ def test_commands_that_do_not_fit_are_exit_code_2(fake_pipeline: Fake, clip: Mak
 
 
 def test_wrong_paths_are_one_line_and_exit_code_2(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
-    a = clip("a.mp4")
+    a, empty = clip("a.mp4"), out.parent / "empty"
+    empty.mkdir()
     for arguments in [
         ("no.mp4", "--trial", trial_file, "--out", out),
-        (out.parent, "--trial", trial_file, "--out", out),
+        (empty, "--trial", trial_file, "--out", out),
         (a, "--trial", "no.toml", "--out", out),
         (a, "--trial", trial_file, "--out", trial_file),
     ]:

@@ -9,8 +9,10 @@ from pathlib import Path
 
 import pytest
 
+from floorswing.batch import Batch
 from floorswing.errors import CommandsMismatch, FileError, TrialError
-from floorswing.measuring import Failure, SomeClipsFailed, measure, measure_each, sha256_of
+from floorswing.fingerprint import sha256_of
+from floorswing.measuring import Failure, SomeClipsFailed, measure
 from vision.errors import ClipError, MarkersNotFound
 
 from .conftest import Fake, clip_result
@@ -92,7 +94,7 @@ def test_each_clip_shows_all_commands_unless_they_run_on(fake_pipeline: Fake, cl
 def test_commands_that_run_on_past_a_failed_clip(fake_pipeline: Fake, clip: MakeClip, trial_file: Path):
     fake_pipeline(a=clip_result(GOOD[:2]), b=ClipError("torn"), c=clip_result(GOOD[2:]))
     clips = [clip(f"{name}.mp4") for name in "abc"]
-    outcomes = list(measure_each(clips, trial_file, continued=True))
+    outcomes = list(Batch(clips, trial_file, continued=True).run())
     assert [isinstance(outcome, Failure) for outcome in outcomes] == [False, True, False]
 
 
@@ -113,8 +115,11 @@ def test_what_is_wrong_with_the_call_is_said_before_anything_is_measured(
     a = clip("a.mp4")
     with pytest.raises(FileError, match=r"no\.mp4: no such file"):
         measure([a, tmp_path / "no.mp4"], trial_file)
-    with pytest.raises(FileError, match="is a folder"):
-        measure([a, tmp_path], trial_file)
+    (tmp_path / "empty").mkdir()
+    with pytest.raises(FileError, match="empty: holds no clip"):
+        measure([a, tmp_path / "empty"], trial_file)
+    with pytest.raises(FileError, match="workers: 0"):
+        measure([a], trial_file, workers=0)
     with pytest.raises(TrialError):
         measure([a], tmp_path / "no.toml")
     with pytest.raises(FileError, match="is not a folder"):
