@@ -28,7 +28,7 @@ from calib.table import TurnTable
 from calib.turns import Turns, reversals
 
 GAIN, BAND_WHEEL_DEG, SCATTER_DEG, U_DEG = 0.48, 7.0, 0.5, 0.02
-ORDERS = [balanced_order([150.0, 220.0], 3, seed).wheel_deg for seed in range(10)]
+ORDERS = [balanced_order([190.0], 6, seed).wheel_deg for seed in range(10)]
 EFFECTS = {
     "nothing": {},
     "drift of 0.04 deg a turn": {"drift": 0.04},
@@ -95,7 +95,7 @@ def best_power(table: TurnTable, effect: dict) -> float:
 
 
 def consistency(trials: int) -> None:
-    print(f"Judging one trial of {len(ORDERS[0])} turns, two sizes, each test by itself at 5 %, {trials} trials a line")
+    print(f"Judging one trial of {len(ORDERS[0])} turns, each test by itself at 5 %, {trials} trials a line")
     print(f"{'what is there':26}" + "".join(f"{name:>15}" for name in CHECKS))
     for label, effect in EFFECTS.items():
         start, found, family, best = time.monotonic(), defaultdict(list), [], []
@@ -134,7 +134,7 @@ def comparison(trials: int) -> None:
     n = len(ORDERS[0])
     print(f"\nTwo floors, {n} turns on each, compared at +90 deg, margin 1 deg, {trials} trials a line")
     print("  true difference   spread ratio   'different'  nominal   'same'  nominal   F test  nominal   Brown-F.")
-    for apart, ratio in ((0.0, 1.0), (0.4, 1.0), (1.0, 1.0), (0.0, 2.0), (0.5, 2.0)):
+    for apart, ratio in ((0.0, 1.0), (0.4, 1.0), (1.0, 1.0), (0.0, 2.0)):
         start, verdicts, different, f_test, bf_test, u2 = time.monotonic(), [], [], [], [], []
         for trial in range(trials):
             rng = np.random.default_rng([trial, 3])

@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 from calib.fit import Fit
 from calib.linear import least_squares
 from calib.models import design_of
-from calib.scatter import shape_of
 from calib.table import TurnTable
 
 FloatArray = NDArray[np.float64]
@@ -45,6 +44,15 @@ class AboutFit:
         return np.asarray(1.0 / self.relative**2)
 
     @property
+    def base(self) -> FloatArray:
+        """Columns of the relation, and of a shift of each run where there are several, shape (N, P + R)."""
+        names = dict.fromkeys(self.table.run)
+        if len(names) < 2:
+            return self.design
+        member = np.array(self.table.run)[:, None] == np.array(list(names))
+        return np.hstack([self.design, member * self.relative[:, None]])
+
+    @property
     def evened_deg(self) -> FloatArray:
         """Residuals brought to the scatter of a turn of typical size, shape (N,)."""
         return np.asarray(self.residual_deg / self.relative)
@@ -59,9 +67,10 @@ def about_fit(table: TurnTable, fit: Fit) -> AboutFit:
     design = design_of(turns, fit.model)
     along = np.asarray(turns.heading_deg * turns.side)
     first = np.maximum(design @ fit.coefficients, 1e-3 * fit.size_deg)
-    variance = shape_of(first, fit.size_deg, fit.model.law)
+    variance = np.ones(len(turns))
     if fit.scatter_deg > 0.0:
-        variance = (turns.u_deg**2 + fit.scatter_deg**2 * variance) / (fit.u_typical_deg**2 + fit.scatter_deg**2)
+        scatter = np.array([fit.scatter_at_deg(size) for size in first])
+        variance = (turns.u_deg**2 + scatter**2) / (fit.u_typical_deg**2 + fit.scatter_deg**2)
     relative = np.sqrt(variance)
     solved = least_squares(design, along, 1.0 / variance)
     return AboutFit(

@@ -45,7 +45,9 @@ def find_factor(about: AboutFit, name: str, *, confidence: float = 0.95) -> Fact
     """
     labels, columns = columns_of(about.table.factors[name])
     extra = columns * about.expected_deg[:, None]
-    test = added_terms(about.design, extra, about.along_deg, about.weight)
+    if _by_run(about.table.run, about.table.factors[name]):
+        raise NotIdentified("it changes from run to run only; compare the turns by it")
+    test = added_terms(about.base, extra, about.along_deg, about.weight)
     u = np.sqrt(np.diag(test.cov))
     return Factor(
         name=name,
@@ -76,6 +78,10 @@ def columns_of(values: Sequence[str]) -> tuple[tuple[str, ...], FloatArray]:
     member = np.array([[value == level for level in levels[1:]] for value in values], dtype=float)
     first = levels[0] or "blank"
     return tuple(f"{level or 'blank'} against {first}" for level in levels[1:]), member
+
+
+def _by_run(run: Sequence[str], values: Sequence[str]) -> bool:
+    return len(set(zip(run, values, strict=True))) == len(set(run)) > 1
 
 
 def _number(text: str) -> float:

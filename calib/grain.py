@@ -18,7 +18,7 @@ from calib.about_fit import AboutFit
 from calib.errors import NotIdentified
 from calib.intervals import Estimate
 from calib.polar import direction_deg, length_of
-from calib.terms import AddedTerms, added_terms
+from calib.terms import AddedTerms, NotVaried, added_terms
 
 FloatArray = NDArray[np.float64]
 
@@ -89,9 +89,9 @@ def find_grain(about: AboutFit, *, confidence: float = 0.95) -> Grain:
     columns = grain_columns(table.start_heading_deg, change) * table.turns.side[:, None]
     frames, extra = in_frames(columns, table.frame)
     try:
-        test = added_terms(about.design, extra, about.along_deg, about.weight)
-    except NotIdentified as error:
-        raise NotIdentified(f"the start headings: {error}; start at headings other than these") from None
+        test = added_terms(about.base, extra, about.along_deg, about.weight)
+    except NotVaried:
+        raise NotIdentified("the start headings were not varied enough; start some turns at other headings") from None
     return Grain(
         frames=tuple(
             _in_frame(frame, columns[np.array(table.frame) == frame], test, slice(2 * k, 2 * k + 2), confidence)

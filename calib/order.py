@@ -21,7 +21,9 @@ from calib.turns import reversals
 FloatArray = NDArray[np.float64]
 
 TRIES = 40
-"""Walks drawn for each block; the one in which a drift meets the combinations most evenly is kept."""
+"""Orders drawn; the one that tells direction, size, start and drift apart best is kept (D-optimality)."""
+MANY = 100
+"""From so many blocks on, chance alone sees to that."""
 QUANTITIES = ("gain counter-clockwise", "gain clockwise", "lost at a reversal", "drift", "offset")
 
 
@@ -86,13 +88,13 @@ def balanced_order(sizes_wheel_deg: Sequence[float], blocks: int, seed: int = 0)
         raise ValueError(f"{blocks} blocks; accepted: 1 or more")
     rng = np.random.default_rng(seed)
     home = float(rng.choice([-1.0, 1.0]))
-    wheel, block = [home * float(rng.choice(sizes))], [0]
-    for n in range(blocks):
-        drawn = [_block(rng, sizes, home) for _ in range(TRIES)]
-        best = min(drawn, key=lambda one: _lopsided(one, home))
-        wheel.extend(best.tolist())
-        block.extend([n + 1] * len(best))
-    return Order(wheel_deg=np.array(wheel), block=tuple(block), seed=seed)
+    first = home * float(rng.choice(sizes))
+    drawn = [
+        np.concatenate([[first], *(_block(rng, sizes, home) for _ in range(blocks))])
+        for _ in range(TRIES if blocks < MANY else 1)
+    ]
+    block = np.repeat(np.arange(blocks + 1), [1, *([4 * len(sizes)] * blocks)])
+    return Order(wheel_deg=max(drawn, key=_information), block=tuple(block.tolist()), seed=seed)
 
 
 def _block(rng: np.random.Generator, sizes: FloatArray, home: float) -> FloatArray:
@@ -113,13 +115,10 @@ def _block(rng: np.random.Generator, sizes: FloatArray, home: float) -> FloatArr
     return wheel
 
 
-def _lopsided(wheel: FloatArray, home: float) -> float:
-    """Return how far a drift within a block would be mistaken for direction, start or size."""
-    time = np.linspace(-1.0, 1.0, len(wheel))
-    turned = np.append(home, np.sign(wheel[:-1])) != np.sign(wheel)
-    effects = np.column_stack([np.sign(wheel), 2.0 * turned - 1.0, np.abs(wheel) - np.abs(wheel).mean()])
-    effects = effects / np.maximum(np.abs(effects).max(axis=0), 1e-12)
-    return float(np.sum((time @ effects) ** 2))
+def _information(wheel: FloatArray) -> float:
+    """Return the logarithm of the determinant of what the turns tell of all quantities, a drift among them."""
+    design = _design(wheel)
+    return float(np.linalg.slogdet(design.T @ design)[1])
 
 
 def naive_order(sizes_wheel_deg: Sequence[float], n_turns: int) -> FloatArray:
@@ -132,14 +131,15 @@ def naive_order(sizes_wheel_deg: Sequence[float], n_turns: int) -> FloatArray:
 def merit(planned: FloatArray, other: FloatArray) -> Merit:
     """Return what an order is worth against another."""
     first, second = _design(planned), _design(other)
-    n_first, n_second = (float(np.linalg.slogdet(one.T @ one / len(one))[1]) for one in (first, second))
-    told = np.linalg.matrix_rank(second) == second.shape[1]
-    if np.linalg.matrix_rank(first) < first.shape[1]:
+    n_columns = first.shape[1]
+    n_first, n_second = (_information(one) - n_columns * math.log(len(one) - 1) for one in (planned, other))
+    told = np.linalg.matrix_rank(second) == n_columns
+    if np.linalg.matrix_rank(first) < n_columns:
         raise CalibError("this order cannot tell direction, reversal and drift apart; plan more blocks")
     return Merit(
         u_planned=_uncertainties(first),
         u_other=_uncertainties(second),
-        d_efficiency=math.exp((n_first - n_second) / first.shape[1]) if told else math.inf,
+        d_efficiency=math.exp((n_first - n_second) / n_columns) if told else math.inf,
     )
 
 

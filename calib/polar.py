@@ -17,8 +17,9 @@ FloatArray = NDArray[np.float64]
 def length_of(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) -> Estimate:
     """Return the length of a pair of normal estimates.
 
-    The interval inverts the noncentral F distribution of the squared length, so that it reaches 0 where the pair may be
-    nothing but scatter; exact where both have the same variance.
+    The interval inverts the noncentral chi-square distribution of the squared length, so that it reaches 0 where the
+    pair may be nothing but scatter, and is Student's where it is far from 0; it is for pairs of one variance, and close
+    to right for others (bench/power.py, tests).
 
     Parameters
     ----------
@@ -33,25 +34,24 @@ def length_of(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) 
     u = math.sqrt(float(towards @ cov @ towards))
     if u == 0.0:
         return Estimate(value=length, u=0.0, low=length, high=length, confidence=confidence)
-    f = 0.5 * (length / u) ** 2
     tail = 0.5 * (1.0 - confidence)
+    wide = u * t_quantile(confidence, dof) / float(special.ndtri(1.0 - tail))
+    square = (length / wide) ** 2
     return Estimate(
         value=length,
         u=u,
-        low=u * math.sqrt(_noncentrality(f, dof, 1.0 - tail)),
-        high=u * math.sqrt(_noncentrality(f, dof, tail)),
+        low=wide * math.sqrt(_noncentrality(square, 1.0 - tail)),
+        high=wide * math.sqrt(_noncentrality(square, tail)),
         confidence=confidence,
     )
 
 
-def _noncentrality(f: float, dof: float, chance: float) -> float:
-    """Return the noncentrality for which a smaller F has this chance; 0 where none does."""
-    if float(special.fdtr(2.0, dof, f)) <= chance:
+def _noncentrality(square: float, chance: float) -> float:
+    """Return the noncentrality for which a smaller chi-square with 2 dof has this chance; 0 where none does."""
+    if float(special.chdtr(2.0, square)) <= chance:
         return 0.0
-    high = 4.0 * (2.0 * f + 10.0)
-    while float(special.ncfdtr(2.0, dof, high, f)) > chance and high < 1e8:
-        high *= 2.0
-    return float(brentq(lambda nc: float(special.ncfdtr(2.0, dof, nc, f)) - chance, 0.0, high, xtol=1e-10))
+    high = (math.sqrt(square) + 10.0) ** 2
+    return float(brentq(lambda nc: float(special.chndtr(square, 2.0, nc)) - chance, 0.0, high, xtol=1e-10))
 
 
 def direction_deg(pair: FloatArray, cov: FloatArray, dof: float, confidence: float) -> Estimate:

@@ -18,6 +18,7 @@ from scipy import special
 
 from calib.errors import NotEnoughTurns, NotIdentified
 from calib.intervals import Estimate, sd_estimate
+from calib.terms import spanned
 
 FloatArray = NDArray[np.float64]
 
@@ -85,7 +86,7 @@ def run_parts(
     data = np.asarray(values, dtype=float)
     names, which = np.unique(np.asarray(run), return_inverse=True)
     if len(names) < 2:
-        raise NotIdentified("there is one run only, so nothing is known of the scatter between runs")
+        raise NotIdentified("there is one run only")
     base = np.ones((len(data), 1)) if design is None else np.asarray(design, dtype=float)
     member = (which[:, None] == np.arange(len(names))).astype(float)
     free = member - _onto(base, member)
@@ -95,7 +96,7 @@ def run_parts(
         raise NotIdentified("runs cannot be told from commands: no command was driven in more than one run")
     left = data - _onto(base, data[:, None])[:, 0]
     squares_between = float(np.sum((directions.T @ left) ** 2))
-    dof_within = len(data) - _rank(base) - dof_between
+    dof_within = len(data) - spanned(base).shape[1] - dof_between
     if dof_within < 1:
         raise NotEnoughTurns(
             f"{len(data)} turns in {len(names)} runs leave nothing to tell the scatter within runs; repeat some turns",
@@ -120,17 +121,13 @@ def _clean(squares: float, data: FloatArray) -> float:
 
 
 def _basis(columns: FloatArray, scale: float) -> FloatArray:
-    """Return orthonormal directions that the columns span."""
+    """Return orthonormal directions that the columns span, beyond rounding at a given scale."""
     left, size, _ = np.linalg.svd(columns, full_matrices=False)
     return np.asarray(left[:, size > 1e-9 * scale])
 
 
-def _rank(columns: FloatArray) -> int:
-    return int(_basis(columns, float(np.linalg.norm(columns))).shape[1])
-
-
 def _onto(base: FloatArray, columns: FloatArray) -> FloatArray:
-    directions = _basis(base, float(np.linalg.norm(base)))
+    directions = spanned(base)
     return np.asarray(directions @ (directions.T @ columns))
 
 

@@ -18,6 +18,10 @@ LEAST_LEFT = 0.02
 FEWEST_DOF = 2
 
 
+class NotVaried(NotIdentified):
+    """Terms that the turns cannot tell from the relation or from each other."""
+
+
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
 class AddedTerms:
     """Terms added to a relation, tested together.
@@ -47,7 +51,7 @@ def added_terms(
     Parameters
     ----------
     base : ndarray, shape (N, P)
-        Columns of the relation as it is.
+        Columns of the relation as it is; they may depend on each other.
     extra : ndarray, shape (N, Q)
         Columns of the terms.
     data, weight : ndarray, shape (N,)
@@ -56,21 +60,23 @@ def added_terms(
 
     Raises
     ------
+    NotVaried
+        If the terms cannot be told from the relation or from each other.
     NotIdentified
-        If the terms cannot be told from the relation or from each other, or the turns do not scatter.
+        If the turns do not scatter.
     NotEnoughTurns
     """
     root = np.sqrt(weight)
-    n, n_base, n_extra = len(data), base.shape[1], extra.shape[1]
+    q = spanned(base * root[:, None])
+    n, n_base, n_extra = len(data), q.shape[1], extra.shape[1]
     if n - n_base - n_extra < FEWEST_DOF:
         needed = n_base + n_extra + FEWEST_DOF
         raise NotEnoughTurns(f"{n} turns where {needed} are needed", n_seen=n, n_needed=needed)
-    q, _ = np.linalg.qr(base / np.maximum(np.abs(base).max(axis=0), TINY) * root[:, None])
     scaled, size = _scaled(extra * root[:, None])
     free = scaled - q @ (q.T @ scaled)
     left, kept, right = np.linalg.svd(free, full_matrices=False)
     if not kept.min() > least_left:
-        raise NotIdentified("they were not varied enough beside the commands")
+        raise NotVaried("it was not varied enough beside the commands")
     before = data * root - q @ (q.T @ (data * root))
     along = left.T @ before
     after = before - left @ along
@@ -87,6 +93,12 @@ def added_terms(
         p_value=float(special.fdtrc(n_extra, dof, f)),
         dof_left=dof,
     )
+
+
+def spanned(columns: FloatArray) -> FloatArray:
+    """Return orthonormal directions that columns span, each taken at its own scale; fewer than columns if dependent."""
+    left, size, _ = np.linalg.svd(columns / np.maximum(np.linalg.norm(columns, axis=0), TINY), full_matrices=False)
+    return np.asarray(left[:, size > 1e-9 * size[0]])
 
 
 def _scaled(columns: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -12,7 +12,7 @@ from calib.errors import CalibError, NotIdentified
 from calib.grain import in_frames
 from calib.intervals import Estimate
 from calib.polar import direction_deg, length_of
-from calib.terms import AddedTerms, added_terms
+from calib.terms import AddedTerms, NotVaried, added_terms
 
 FloatArray = NDArray[np.float64]
 
@@ -84,9 +84,9 @@ def find_warp(about: AboutFit, *, confidence: float = 0.95) -> Warp:
     frames, linear = in_frames(metres, table.frame)
     member = np.array(table.frame)
     try:
-        slope = added_terms(about.design, linear, about.along_deg, about.weight)
-    except NotIdentified as error:
-        raise NotIdentified(f"the places: {error}; turn at places that do not lie on one line") from None
+        slope = added_terms(about.base, linear, about.along_deg, about.weight)
+    except NotVaried:
+        raise NotIdentified("the places lie on one line, or change together with the commands") from None
     curve, why = _curve(about, where, linear)
     return Warp(
         frames=tuple(
@@ -110,7 +110,7 @@ def _curve(about: AboutFit, where: FloatArray, linear: FloatArray) -> tuple[Adde
     x, y = (where / max(float(np.abs(where).max()), 1e-9)).T
     _, squares = in_frames(np.column_stack([x**2, x * y, y**2]) * about.expected_deg[:, None], about.table.frame)
     try:
-        return added_terms(np.hstack([about.design, linear]), squares, about.along_deg, about.weight), ""
+        return added_terms(np.hstack([about.base, linear]), squares, about.along_deg, about.weight), ""
     except CalibError as error:
         return None, str(error)
 

@@ -122,7 +122,7 @@ def test_intervals_hold_the_truth():
 
 
 def test_what_cannot_be_told_is_said():
-    with pytest.raises(NotIdentified, match="one run only"):
+    with pytest.raises(NotIdentified, match="there is one run only"):
         run_parts([1.0, 2.0, 3.0], [1, 1, 1])
     with pytest.raises(NotEnoughTurns, match="repeat some"):
         run_parts([1.0, 2.0], [1, 2])
