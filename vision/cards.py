@@ -15,8 +15,11 @@ from vision.template import Optics, Template, build_template
 LOOK_EVERY_S = 0.5
 """How often the cards are looked at while the camera stands still."""
 
-CALM_S = 0.3
-"""A camera that has stood still for so long is believed to stand; until then the cards are looked at in every frame."""
+CALM_S, LONGEST_CALM_S = 0.3, 4.0
+"""A camera that has stood still for so long is believed to stand; until then the cards are looked at in every frame.
+
+One that moves again is believed twice as late, up to the second time: it is in a hand, or it swings.
+"""
 
 STIR_PX = 0.1
 """A common shift of the cards beyond this, and beyond their noise, means that the camera moves."""
@@ -40,6 +43,7 @@ class CardWatcher:
         self._optics = Optics(1.0)
         self._next_s = 0.0
         self._stirred_s = 0.0
+        self._calm_s = CALM_S
         self._seen_s = -1.0
         self._calm: dict[int, FloatArray] = {}
         self.looks: list[CardLook] = []
@@ -102,12 +106,14 @@ class CardWatcher:
     def _watch(self, time_s: float) -> None:
         """Decide how soon to look again, from how far the cards have shifted since the camera last stood still."""
         shifts = [self._known[card_id][0] - before for card_id, before in self._calm.items()]
-        moved_px = float(np.hypot(*np.median(np.concatenate(shifts), axis=0))) if shifts else 0.0
+        moved_px = float(np.median([np.hypot(*shift.mean(axis=0)) for shift in shifts])) if shifts else 0.0
         noise_px = float(np.median([look.u_px for look in self.looks[-len(self._known) :]]))
         if moved_px > max(STIR_PX, 4.0 * noise_px):
+            if time_s - self._stirred_s > self._calm_s:
+                self._calm_s = min(2.0 * self._calm_s, LONGEST_CALM_S)
             self._stirred_s = time_s
             self._calm = {card_id: corners_px for card_id, (corners_px, _) in self._known.items()}
-        if time_s - self._stirred_s > CALM_S:
+        if time_s - self._stirred_s > self._calm_s:
             self._next_s = time_s + LOOK_EVERY_S
 
     def _find_again(

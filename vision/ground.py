@@ -53,7 +53,12 @@ GLANCE_PX, GLANCE_SHARE, GLANCE_THIN = 0.3, 0.6, 2
 """All patches are first compared where they were, every second pixel of each; that is enough so large a share of
 those known again has moved by no more than this."""
 
-SHIFT_WEIGHT = np.array([0.5, 0.5, 1.0, 1.0])
+SHIFT_WEIGHT = np.array([0.25, 0.25, 1.0, 0.1])
+"""How much of a shift, a turn and a growth of the picture comes out in headings, the turn being one: a shift is a small
+tilt of the camera, and a growth is focus breathing."""
+
+SHORTEST_STILL_S = 0.7
+"""A hand that reverses is still for a shorter while."""
 
 STILL_PX = 0.25
 """A camera whose view shifts by less than this between two rests stands still."""
@@ -110,7 +115,7 @@ class GroundPath:
         return far_px if far_px > limit_px else 0.0
 
     def stills(self) -> list[tuple[float, float]]:
-        """Return the stretches (start_s, end_s) in which the view did not move, in order."""
+        """Return the stretches (start_s, end_s) of some length in which the view did not move, in order."""
         seen = np.flatnonzero(np.isfinite(self.shift_px[:, 0]))
         found: list[tuple[int, int]] = []
         for k in map(int, seen):
@@ -118,7 +123,8 @@ class GroundPath:
                 found[-1] = (found[-1][0], k)
             else:
                 found.append((k, k))
-        return [(float(self.time_s[a]), float(self.time_s[b])) for a, b in found if b > a]
+        stretches = [(float(self.time_s[a]), float(self.time_s[b])) for a, b in found]
+        return [still for still in stretches if still[1] - still[0] >= SHORTEST_STILL_S]
 
 
 def _size_px(shift_px: FloatArray) -> float:

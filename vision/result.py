@@ -13,7 +13,7 @@ from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
 from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
 from vision.redraw import FloorFrame, redraw_record
-from vision.steady import CameraPath
+from vision.steady import CameraPath, warp_px
 from vision.turns import Seen, Split
 
 OUT_OF_SQUARE = 0.02
@@ -21,6 +21,9 @@ OUT_OF_SQUARE = 0.02
 
 ILL_FITTING_PX = 0.35
 """Corners that miss the rigid pair by more than this show that something was not rigid, not flat or not still."""
+
+WARPED_PX = 0.12
+"""Cards that miss one common view by more than this are seen through a picture that is warped from frame to frame."""
 
 LITTLE_TURNED_DEG = 80.0
 """With less rotation in the clip the plane is weakly known, and the result says so."""
@@ -39,8 +42,9 @@ def assemble(
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
     frame = _floor_frame(cards)
+    warp = warp_px(corners, path, calibration.p[LENS])
     events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
-    turns = tuple(_placed(_touched(turn, path), frame) for turn in split.turns)
+    turns = tuple(_placed(_touched(turn, path, warp), frame) for turn in split.turns)
     return ClipResult(
         clip=info,
         track=_pose_track(corners, seen, split, frame),
@@ -51,7 +55,7 @@ def assemble(
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
         budget=budget_of(seen, split, calibration, camera_still=not path.held),
-        warnings=(*problems, *_warnings(calibration, cards, path)),
+        warnings=(*problems, *_warnings(calibration, cards, path, warp)),
     )
 
 
@@ -80,8 +84,10 @@ def _placed(turn: Turn, frame: FloorFrame) -> Turn:
     )
 
 
-def _touched(turn: Turn, path: CameraPath) -> Turn:
-    """Flag a turn during which a camera that otherwise stands was knocked."""
+def _touched(turn: Turn, path: CameraPath, warp: float) -> Turn:
+    """Flag a turn in a warped picture, or one during which a camera that otherwise stands was knocked."""
+    if warp > WARPED_PX:
+        return replace(turn, flags=(*turn.flags, "warped"))
     if path.still or (path.held and _held_by_hand(path)):
         return turn
     if path.loose and not _within(turn, path.best):
@@ -185,7 +191,7 @@ def _card_record(card: CardCheck, setup: MarkerSetup) -> dict[str, object]:
     return record
 
 
-def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath) -> list[str]:
+def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath, warp: float) -> list[str]:
     said: list[str] = []
     turned_deg = float(np.degrees(calibration.turned_rad))
     if turned_deg < LITTLE_TURNED_DEG:
@@ -208,6 +214,11 @@ def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath
         f"card {number} did not stay with the others and was left out; was it moved, or is it curled?"
         for number in path.strays
     )
+    if warp > WARPED_PX:
+        said.append(
+            f"the picture is warped from frame to frame, as digital stabilisation does: the floor cards miss a common "
+            f"view by {warp:.2f} px; turns are as uncertain as u_heading_change_deg says; film with stabilisation off"
+        )
     said.extend(_loose(path))
     if path.held and path.n_cards < 2:
         said.append("the camera moved and only one floor card holds the view; lay out three or more")

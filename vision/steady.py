@@ -27,8 +27,13 @@ STILL_PX = 0.12
 AVERAGE_S = 0.4
 """Looks this near in time are averaged while the camera stands."""
 
+SLOW_PX = 0.6
+"""Between two looks no farther apart than this the view is taken to have moved evenly."""
+
 OUTLIER_PX = 1.0
 """A card that misses the common motion by more than this, most of the time, was moved or is not flat."""
+
+FEWEST_TO_WARP = 3
 
 ENOUGH_RAD = 1.4
 """A still stretch in which the robot turned through this much calibrates the plane by itself."""
@@ -209,6 +214,31 @@ def _step_px(looks: _Looks, keep: list[int]) -> FloatArray:
     return steps
 
 
+def warp_px(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> float:
+    """Return how far card corners miss the one view that fits them best: RMS of a look, median over looks.
+
+    Once the lens is straightened, a flat floor seen from two places differs by a homography. Digital stabilisation
+    that warps the picture does not: it slides its parts against each other. Zero if the camera stood still, or if fewer
+    than three cards were in view.
+    """
+    looks = _table(corners.looks)
+    if not path.held or looks is None:
+        return 0.0
+    units = units_for(corners.image_px, side_mm=1.0, length_mm=1.0)
+    keep = [k for k, number in enumerate(looks.ids) if number not in path.strays]
+    straight = undistort((looks.corners_px[:, keep] - units.centre_px) / units.half_px, lens)
+    reference = straight[_reference(looks)]
+    misses = []
+    for seen in straight:
+        common = np.isfinite(seen[:, 0, 0]) & np.isfinite(reference[:, 0, 0])
+        if common.sum() < FEWEST_TO_WARP:
+            continue
+        map_, _ = cv2.findHomography(seen[common].reshape(-1, 2), reference[common].reshape(-1, 2), 0)
+        if map_ is not None:
+            misses.append(float(np.sqrt(np.mean((project(map_, seen[common]) - reference[common]) ** 2))))
+    return units.half_px * float(np.median(misses)) if misses else 0.0
+
+
 def steady(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> CornerTrack:
     """Return the track as seen from the reference view; frames whose view is not known are blanked.
 
@@ -300,7 +330,7 @@ def _map_at(
     seen: FloatArray,
     units: Units,
 ) -> FloatArray | None:
-    """Return the map of a frame: that of its own look, or of the looks around it where these agree."""
+    """Return the map of a frame: that of its own look, or between those of the looks around it where these are near."""
     after = int(np.searchsorted(look_s, time_s - 1e-9))
     if after < len(look_s) and abs(look_s[after] - time_s) < 1e-6:
         return maps[after]
@@ -309,9 +339,12 @@ def _map_at(
     before = after - 1
     apart = seen[after] - seen[before]
     far = np.hypot(apart[..., 0], apart[..., 1]) * units.half_px
-    if not np.isfinite(far).any() or np.nanmedian(far) > STILL_PX:
+    earlier, later = maps[before], maps[after]
+    if earlier is None or later is None or not np.isfinite(far).any() or np.nanmedian(far) > SLOW_PX:
         return None
-    return maps[before] if time_s - look_s[before] < look_s[after] - time_s else maps[after]
+    share = (time_s - look_s[before]) / (look_s[after] - look_s[before])
+    between: FloatArray = (1.0 - share) * earlier + share * later
+    return between
 
 
 def _carry(corners_px: FloatArray, map_: FloatArray, units: Units, lens: FloatArray) -> FloatArray:

@@ -57,6 +57,9 @@ KNOCK_S = 0.2
 LIFT_SHARE = 0.005
 """A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
 
+STANDING_SCALES = 3.0
+"""And beyond so many times what it changes by while the robot stands: a warped picture breathes."""
+
 HIDDEN_LIFT_SHARE = 0.03
 """The same where a marker is partly covered or out of sight."""
 
@@ -299,7 +302,7 @@ def _judge(
     part = slice(move.first, move.last + 1)
     path_mm = float(np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum())
     _, _, wander_mm = _centre(seen, move)
-    lifted = _lifted(seen, part)
+    lifted = _lifted(seen, motion, part)
     if lifted > 0.0:
         return (
             "handled",
@@ -323,12 +326,14 @@ def _judge(
     return "turn", ""
 
 
-def _lifted(seen: Seen, part: slice) -> float:
+def _lifted(seen: Seen, motion: Motion, part: slice) -> float:
     """Return by how much the apparent size changed over a motion; 0 if by no more than the markers' own noise."""
-    change = np.abs(seen.scale[part] / np.nanmedian(seen.scale) - 1.0)
+    every = np.abs(seen.scale / np.nanmedian(seen.scale) - 1.0)
+    change, still = every[part], every[~motion.moving & seen.clear]
+    usual = STANDING_SCALES * float(np.nanquantile(still, 0.9)) if len(still) else 0.0
     for values, limit in (
-        (change[seen.clear[part]], max(LIFT_SHARE, 8.0 * _scale_noise(seen))),
-        (change, HIDDEN_LIFT_SHARE),
+        (change[seen.clear[part]], max(LIFT_SHARE, 8.0 * _scale_noise(seen), usual)),
+        (change, max(HIDDEN_LIFT_SHARE, usual)),
     ):
         if len(values) >= FRAMES_TO_BELIEVE:
             lifted = float(np.sort(values)[-FRAMES_TO_BELIEVE])
@@ -459,14 +464,13 @@ def _gap_events(seen: Seen) -> list[Event]:
     """Return stretches longer than a few frames in which neither marker was seen."""
     times = np.concatenate([[0.0], seen.time_s, [seen.end_s]])
     events = []
-    for before_s, after_s in itertools.pairwise(times):
+    for number, (before_s, after_s) in enumerate(itertools.pairwise(times)):
         if after_s - before_s > GAP_FRAMES * seen.frame_s:
-            events.append(
-                Event(
-                    start_s=float(before_s), end_s=float(after_s), kind="hidden",
-                    detail=f"neither marker seen for {after_s - before_s:.2f} s",
-                )
-            )  # fmt: skip
+            inner = 0 < number < len(seen.index)
+            filmed = not inner or seen.index[number] - seen.index[number - 1] > 1
+            what = "neither marker seen" if filmed else "the clip has no picture"
+            detail = f"{what} for {after_s - before_s:.2f} s"
+            events.append(Event(start_s=float(before_s), end_s=float(after_s), kind="hidden", detail=detail))
     return events
 
 

@@ -155,14 +155,19 @@ def odd_times() -> list[Row]:
 
 def damaged_files() -> list[Row]:
     """Return files that stop or break in the middle."""
+    ends = {"readable": False, "expected_words": ("the file breaks off: nothing could be read after", "flag clipped")}
     whole = {**QUICK, "container_options": {"movflags": "frag_keyframe+empty_moov"}}
     return [
-        plain("cut_off", "file ends at 60 % (fragmented mp4)", storage=whole, damage=("cut", 0.6, 0.0), readable=False),
-        plain("cut_off_mkv", "file ends at 60 % (Matroska)", suffix=".mkv", damage=("cut", 0.6, 0.0), readable=False),
+        plain("cut_off", "file ends at 60 % (fragmented mp4)", storage=whole, damage=("cut", 0.6, 0.0), **ends),
+        plain("cut_off_mkv", "file ends at 60 % (Matroska)", suffix=".mkv", damage=("cut", 0.6, 0.0), **ends),
+        plain("no_index", "mp4 cut off before its index", damage=("cut", 0.6, 0.0), refusal="its index is missing"),
         plain(
-            "no_index", "mp4 cut off before its index: nothing can be read", damage=("cut", 0.6, 0.0), readable=False
+            "spoilt",
+            "a stretch of the file is garbage",
+            suffix=".mkv",
+            damage=("spoil", 0.4, 0.46),
+            expected_events=("hidden",),
         ),
-        plain("spoilt", "a stretch of the file is garbage", suffix=".mkv", damage=("spoil", 0.4, 0.46), readable=False),
     ]
 
 
@@ -230,8 +235,11 @@ def unsteady_cameras() -> list[Row]:
         ),
         plain(
             "stabilised",
-            "digital stabilisation warps the picture",
+            "digital stabilisation warps the picture by some pixels",
             scene=plain_scene(camera=plain_camera(moves=(HandHeld(seed=8),), stabiliser=Stabiliser(seed=2))),
+            readable=False,
+            expected_events=("camera moved",),
+            expected_words=("flag warped (6)", "as digital stabilisation does"),
         ),
     ]
 
@@ -377,12 +385,12 @@ def marker_faults() -> list[Row]:
     double = Card(card_id=0, x_mm=-150.0, y_mm=170.0, angle_deg=25.0, side_mm=40.0)
     return [
         plain("wrong_id", "the fore marker has an id that the trial file does not know",
-              scene=marked(fore=replace(fore, marker_id=7)), readable=False),
+              scene=marked(fore=replace(fore, marker_id=7)), refusal="marker 7 is in view instead"),
         plain("same_id_twice", "another print of the fore marker lies on the floor",
-              scene=plain_scene(cards=(*plain_cards(), double))),
+              scene=plain_scene(cards=(*plain_cards(), double)), refusal="is in view twice"),
         plain("ids_swapped", "fore and aft are swapped: the same heading changes",
               scene=marked(fore=replace(fore, marker_id=1), aft=replace(aft, marker_id=0))),
-        plain("mirrored_print", "the fore marker is printed mirrored", readable=False,
+        plain("mirrored_print", "the fore marker is printed mirrored", refusal="a mirrored print of marker 0",
               scene=marked(fore=replace(fore, mirrored=True))),
         plain("glare", "a lamp shines back from one marker at one rest",
               scene=plain_scene(light=Light(glints=(Glint(at_px=spot, radius_px=9.0),)))),
@@ -399,7 +407,7 @@ def marker_faults() -> list[Row]:
         plain("code_like_floor", "the floor looks like marker modules",
               scene=plain_scene(floor=Floor(kind="chequer", seed=2), cards=())),
         plain("no_markers", "no cart in the picture", scene=plain_scene(robot=replace(Robot(), visible=False)),
-              readable=False),
+              refusal="robot markers 0 and 1 of APRILTAG_36h11"),
         plain("small_code", "markers of the 4X4_50 list",
               scene=plain_scene(robot=replace(Robot(), dictionary="4X4_50"))),
         plain("small_markers", "markers 17 px a side",
