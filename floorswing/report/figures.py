@@ -112,21 +112,26 @@ def _heading_row(ax: Axes, one: Measurement, seen: Sequence[Seen], start_s: floa
             middle_s, 1.0, str(turn.turn.turn), transform=over, ha="center", va="bottom", fontsize=7.0,
             gid=f"turn-{turn.key}-n{2 * k + 1}",
         )  # fmt: skip
-    for event in one.events:
+    for n, event in enumerate(one.events):
         if event.end_s >= start_s and event.start_s <= end_s:
+            top = 0.06 if event.kind == "camera moved" else 1.0  # it can last the whole clip
             ax.axvspan(
-                event.start_s, max(event.end_s, event.start_s + 0.15), facecolor="none", edgecolor=ORANGE, lw=0.4,
-                hatch=EVENT_HATCH.get(event.kind, "..."),
+                event.start_s, max(event.end_s, event.start_s + 0.15), ymax=top, facecolor="none", edgecolor=ORANGE,
+                lw=0.4, hatch=EVENT_HATCH.get(event.kind, "..."),
             )  # fmt: skip
-            ax.text(
-                max(event.start_s, start_s), 0.02, f" {event.kind}", transform=ax.get_xaxis_transform(), fontsize=6.5
-            )
+            low = 0.08 + 0.09 * (n % 3)
+            ax.text(max(event.start_s, start_s), low, f" {_plain(event.kind)}", transform=over, fontsize=6.5)
     inside = (track.time_s >= start_s) & (track.time_s <= end_s)
     still = np.array([state == "rest" for state in track.state])
     ax.plot(track.time_s[inside], track.heading_deg[inside], color=GREY, lw=0.8)
     ax.plot(track.time_s[inside], np.where(still, track.heading_deg, np.nan)[inside], color=INK, lw=1.8)
     ax.set_xlim(start_s, end_s)
     pad(ax, y=0.06)
+
+
+def _plain(text: str, most: int = 16) -> str:
+    """Return the letters of a text that the plots' font has for certain."""
+    return "".join(c if c.isascii() and c.isprintable() else "?" for c in text)[:most]
 
 
 def _heading_alt(one: Measurement, seen: Sequence[Seen]) -> str:
@@ -610,7 +615,7 @@ def budget_picture(subject: Subject, number: int) -> Picture | None:
     total = math.sqrt(math.fsum(line.u_deg**2 for line in lines))
     name = f"budget-{subject.letter}{number + 1}"
     with drawing(HALF_IN, 0.75 + 0.24 * (len(lines) + 1)) as (figure, ax):
-        labels = [*(line.name for line in lines), "together"]
+        labels = [*(_plain(line.name, 60) for line in lines), "together"]
         values = [*(line.u_deg for line in lines), total]
         ax.barh(range(len(values)), values, height=0.55, color=[*[HAIR] * len(lines), BLUE])
         for row, value in enumerate(values):

@@ -8,11 +8,12 @@ from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+from floorswing.errors import FileError
 from floorswing.report.evidence import Evidence, collect, find_clip
 from floorswing.report.gather import Subject, gather
 from floorswing.report.overlay import annotate
 from floorswing.report.page import page
-from floorswing.writing import distinct_names, write_whole
+from floorswing.writing import check_output_folder, distinct_names, write_whole
 
 REPORT_FILE = "report.html"
 
@@ -76,8 +77,9 @@ def write_report(
     """
     listed = [Path(folders)] if isinstance(folders, str | os.PathLike) else [Path(folder) for folder in folders]
     told = progress if progress is not None else _quiet
-    subjects = gather(listed, lambda share: told("reading", share))
     target = Path(out) if out is not None else listed[0] / REPORT_FILE
+    _check_target(target)
+    subjects = gather(listed, lambda share: told("reading", share))
     place = Path(clips) if clips is not None else None
     evidence: dict[str, list[Evidence]] = {}
     missing: list[str] = []
@@ -94,6 +96,15 @@ def write_report(
     return Written(
         path=written, size=written.stat().st_size, subjects=subjects, without_pictures=tuple(missing), overlays=overlays
     )
+
+
+def _check_target(target: Path) -> None:
+    """Refuse a place that cannot be written before the work is done rather than after it."""
+    if target.is_dir():
+        raise FileError(f"{target}: is a folder; give the name of a file to write")
+    if not target.parent.exists():
+        return  # a folder of measurements that is not there has a message of its own
+    check_output_folder(target.parent)
 
 
 def _overlays(subjects: Sequence[Subject], clips: Path | None, folder: Path, told: Progress) -> tuple[Path, ...]:

@@ -61,6 +61,12 @@ def page(trial: Path, tmp_path_factory: pytest.TempPathFactory) -> str:
     return out.read_text(encoding="utf-8")
 
 
+@pytest.fixture
+def no_plots(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Leave the plots out where they are not what is tested: they take longest."""
+    monkeypatch.setattr("floorswing.report.page.pictures_of", lambda subject: [])
+
+
 class Reader(HTMLParser):
     """Collects tags with their attributes, and the text outside style and script."""
 
@@ -127,6 +133,7 @@ def test_what_spoils_confidence_is_said(page: str):
     assert re.search(r"Not in the fit: turn 11\s*, since it strays by", said)
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_a_clean_trial_has_nothing_that_spoils_confidence(tmp_path: Path):
     folder = write_folder(tmp_path, "clean", commands(16), clip=True)
     written = write_report(folder, tmp_path / "r.html", today=TODAY)
@@ -163,6 +170,7 @@ def test_everything_needed_to_do_it_again_is_there(trial: Path, page: str):
     assert "is no longer there; this is what was recorded of it" in text
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_the_trial_file_is_shown_as_it_was_written(tmp_path: Path):
     from floorswing.trial import read_trial
 
@@ -248,6 +256,7 @@ def test_hostile_text_is_shown_as_text(tmp_path: Path):
 
 
 @pytest.mark.parametrize("name", ["$x$", "a\nb", "\ud800", "x" * 5000, "", "\u202e"])
+@pytest.mark.usefixtures("no_plots")
 def test_no_name_breaks_a_page(tmp_path: Path, name: str):
     folder = write_folder(tmp_path, "a", commands(6), robot=name or " ", surface=name or "?", clip=False)
     written = write_report(folder, tmp_path / "r.html")
@@ -297,6 +306,7 @@ def test_before_and_after_are_the_rests_beside_the_turn(trial: Path):
     assert all(after[n] == before[n + 1] for n in range(1, len(one.turns)))
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_a_clip_that_moved_is_found_where_it_is_said_to_be(trial: Path, tmp_path: Path):
     one = read_measurement(trial)
     place = Path(str(one.source.path))
@@ -317,6 +327,7 @@ def test_a_clip_that_moved_is_found_where_it_is_said_to_be(trial: Path, tmp_path
     assert "is not the clip that was measured" in without
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_a_folder_that_keeps_no_view_says_so(trial: Path, tmp_path: Path):
     shutil.copytree(trial, tmp_path / "cork")
     document = json.loads((tmp_path / "cork" / "measurement.json").read_text())
@@ -326,6 +337,7 @@ def test_a_folder_that_keeps_no_view_says_so(trial: Path, tmp_path: Path):
     assert "measure the clip again" in without
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_too_few_turns_are_said_and_shown(tmp_path: Path):
     folder = write_folder(tmp_path, "two", [187.5, -187.5])
     page = write_report(folder, tmp_path / "r.html").path.read_text(encoding="utf-8")
@@ -335,6 +347,7 @@ def test_too_few_turns_are_said_and_shown(tmp_path: Path):
     assert page.count('class="card') == 2
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_a_direction_never_driven_is_not_invented(tmp_path: Path):
     folder = write_folder(tmp_path, "one way", [187.5] * 6)
     text = Reader(write_report(folder, tmp_path / "r.html").path.read_text(encoding="utf-8")).text
@@ -369,6 +382,7 @@ def test_what_the_fit_expects_is_its_own_relation(trial: Path):
     assert math.isnan(expected_deg(subject.result.fit, math.nan, 0.0))
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_several_clips_of_one_trial_are_one_subject_and_surfaces_are_compared(tmp_path: Path):
     a = write_folder(tmp_path / "1", "a", commands(8), clip=False)
     b = write_folder(tmp_path / "2", "b", commands(8), seed=7, clip=False)
@@ -392,9 +406,10 @@ def test_several_clips_of_one_trial_are_one_subject_and_surfaces_are_compared(tm
 
 def test_all_kinds_of_plots_are_there(trial: Path):
     (subject,) = gather([trial])
-    names = [picture.name.split("-")[0] for picture in pictures_of(subject)]
+    pictures = pictures_of(subject)
+    names = [picture.name.split("-")[0] for picture in pictures]
     assert set(names) == {"relation", "tyre", "budget", "repeats", "order", "start", "heading", "path"}
-    for picture in pictures_of(subject):
+    for picture in pictures:
         assert picture.svg.startswith("<svg")
         assert "<metadata>" not in picture.svg
         if picture.name.split("-")[0] not in ("tyre", "budget"):
@@ -426,6 +441,7 @@ def run(*arguments: object) -> Result:
     return CliRunner().invoke(cli, ["report", *map(str, arguments)])
 
 
+@pytest.mark.usefixtures("no_plots")
 def test_the_command_writes_and_says_so(trial: Path, tmp_path: Path):
     result = run(trial, "--out", tmp_path / "r.html")
     assert result.exit_code == 0, result.output
