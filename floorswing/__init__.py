@@ -2,10 +2,11 @@
 
 The steps of the command line as functions, with the same defaults::
 
-    from floorswing import fit, measure
+    from floorswing import compare, fit, measure
 
     measure(["cork.mp4"], "trial.toml", "out")
-    result = fit("out")
+    result = fit("out/cork")
+    comparison = compare(["out/cork", "out/lino"])
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from floorswing.comparing import compare as compare
     from floorswing.fitting import fit as fit
     from floorswing.measuring import measure as measure
     from floorswing.report.making import write_report as write_report
@@ -21,13 +23,14 @@ if TYPE_CHECKING:
 __version__ = "0.1.0"
 
 _HOMES = {
+    "compare": "floorswing.comparing",
     "fit": "floorswing.fitting",
     "measure": "floorswing.measuring",
     "write_report": "floorswing.report.making",
 }
 """Where each public function lives; loaded when first asked for, since some need a second to load."""
 
-__all__ = ["__version__", "fit", "measure", "write_report"]
+__all__ = ["__version__", "compare", "fit", "measure", "write_report"]
 
 
 def __getattr__(name: str) -> Any:

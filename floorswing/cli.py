@@ -24,6 +24,8 @@ COMMANDS: dict[str, str] = {
     "measure": "Measure the turns in clips filmed from above.",
     "fit": "Fit heading change against commanded wheel degrees.",
     "command": "Say what to command for wanted angles.",
+    "compare": "Say whether surfaces, robots, speeds or days differ.",
+    "plan": "Plan how many turns to drive, and in which order.",
     "report": "Write the report: answer, pictures, evidence and record on one page.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""

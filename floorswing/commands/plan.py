@@ -41,7 +41,9 @@ def _sizes(_: click.Context, parameter: click.Parameter, value: str | None) -> t
 @click.option("--detect-deg", type=float, callback=_above_0, help="Difference of two surfaces to be seen.")
 @click.option("--same-within-deg", type=float, callback=_above_0, help="Margin to show two surfaces the same within.")
 @click.option("--hit-rate-share", type=float, callback=_share, help="Wanted half-width: hit rate of each command.")
-@click.option("--expected-hit-rate", type=float, callback=_share, default=0.9, show_default=True)
+@click.option(
+    "--expected-hit-rate", type=float, callback=_share, default=0.9, show_default=True, help="Hit rate to plan for."
+)
 @click.option("--repeats", type=click.IntRange(1, 1000), help="Repeats of each combination, instead of the above.")
 @click.option("--seed", type=click.IntRange(0), default=0, show_default=True, help="Same seed, same order.")
 @click.option("--out", type=click.Path(path_type=Path), help="Trial file to write, with robot and floor of --trial.")
@@ -78,10 +80,10 @@ def command(sizes: tuple[float, ...], **given: Any) -> None:
     if given["as_json"]:
         click.echo(planning.plan_json(found), nl=False)
         return
-    _print(found, written)
+    _print(found, written, out)
 
 
-def _print(found: Any, written: Path | None) -> None:
+def _print(found: Any, written: Path | None, out: Path | None) -> None:
     from floorswing import planning
 
     if found.missing:
@@ -92,3 +94,5 @@ def _print(found: Any, written: Path | None) -> None:
         click.echo("\n" + planning.merit_table(found.plan) + "\n\n" + planning.run_card(found.plan))
     if written is not None:
         click.echo(f"\nWritten to {written}")
+    elif found.plan is None and out is not None:
+        click.echo(f"No trial file was written to {out}.")
