@@ -166,6 +166,19 @@ def comparison(trials: int) -> None:
     print(f"  told one way or the other in the last line: {100 * told:.1f} %")
 
 
+def comparison_over_runs(trials: int) -> None:
+    print(f"\nTwo floors that are alike, three runs of {len(ORDERS[0])} turns on each, at +90 deg, {trials} trials a line")
+    for between in (0.0, 0.25, 1.0):
+        start, different = time.monotonic(), []
+        for trial in range(trials):
+            rng = np.random.default_rng([trial, 4])
+            tables = [(name, simulated(rng, runs=3, between=between)) for name in ("a", "b")]
+            (pair,) = compare_tables(tables, wanted_deg=[90.0]).pairs
+            different.append(pair.p_different <= 0.05)
+        share, seconds = 100 * np.mean(different), time.monotonic() - start
+        print(f"  between runs {between:4.2f} deg: 'different' {share:5.1f} nominal 5{seconds:6.0f} s", flush=True)
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--trials", type=int, default=2000)
@@ -174,6 +187,7 @@ def main() -> None:
     consistency(given.trials)
     between_runs(given.trials)
     comparison(given.trials)
+    comparison_over_runs(given.trials)
 
 
 if __name__ == "__main__":

@@ -28,7 +28,7 @@ FORMAT = 1
 
 
 def compare(
-    folders: Iterable[str | Path],
+    folders: str | Path | Iterable[str | Path],
     *,
     wanted_deg: Sequence[float] = (),
     margin_deg: float = MARGIN_DEG,
@@ -39,7 +39,7 @@ def compare(
 
     Parameters
     ----------
-    folders : iterable of path-like
+    folders : path-like or iterable of them
         Each a folder that ``measure`` wrote for a clip, or one of such folders: the clips in it are runs of one thing,
         unless they are of different robots or floors.
     wanted_deg : sequence of float
@@ -57,7 +57,11 @@ def compare(
     calib.errors.CalibError
         If there are fewer than two things to compare, or one allows no fit.
     """
-    measured = [[read_measurement(clip) for clip in measured_folders([folder])] for folder in folders]
+    listed = [Path(folders)] if isinstance(folders, str | Path) else [Path(folder) for folder in folders]
+    twice = [folder for n, folder in enumerate(listed) if folder in listed[:n]]
+    if twice:
+        raise FileError(f"{twice[0]}: given twice; give each folder once")
+    measured = [[read_measurement(clip) for clip in measured_folders([folder])] for folder in listed]
     tables = _by_column(measured, by) if by is not None else _by_folder(measured)
     found = compare_tables(tables, wanted_deg=wanted_deg, margin_deg=margin_deg, confidence=confidence)
     robots, floors = (len(set(names)) for names in zip(*(_kind(one) for part in measured for one in part), strict=True))

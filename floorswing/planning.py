@@ -119,6 +119,8 @@ def plan(
     if len(sizes) > MOST_SIZES:
         raise CalibError(f"{len(sizes)} sizes of command; at most {MOST_SIZES} can be planned, so give --wheel-deg")
     scatter, source = _scatter(scatter_deg, after)
+    if scatter is None and source and (wanted or Wanted()).needs_scatter:
+        raise CalibError(f"the scatter of single turns is not known, since {source}; give --scatter-deg")
     needs = needs_of(wanted or Wanted(), len(sizes), scatter)
     full = make_plan(sizes, needs, repeats=repeats, seed=seed)
     missing = missing_after(after.turns, sizes, full.repeats) if after is not None else ()
@@ -139,7 +141,7 @@ def _scatter(given: float | None, after: FirstBatch | None) -> tuple[float | Non
     if after is None:
         return None, ""
     if after.fit is None:
-        return None, f"the first batch does not tell it: {after.why_no_fit}"
+        return None, f"the first batch does not tell it ({after.why_no_fit})"
     return after.fit.scatter_deg, "seen in the first batch"
 
 
