@@ -111,7 +111,7 @@ class Batch:
                 threads=self._threads(),
                 asked=asked,
                 known="" if self._continued else self._known(name),
-                asked_by=program(),
+                asked_by=program() if self._scheduler is not None else "",
             )
 
     def _threads(self) -> int | None:

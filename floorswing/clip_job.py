@@ -58,7 +58,7 @@ class ClipJob:
     known : str
         Fingerprint of the results that are there already; empty for none.
     asked_by : str
-        Digest of the program that asked: another program does not answer.
+        Digest of the program that asked: another program does not answer; empty for any.
     """
 
     name: str
@@ -93,7 +93,7 @@ class UnchangedClip:
 def do_clip(job: ClipJob, tell: Callable[[float], None]) -> SeenClip | UnchangedClip | Failure:
     """Measure one clip, unless its results are known; what goes wrong with it is returned, not raised."""
     try:
-        if job.asked_by != program():
+        if job.asked_by and job.asked_by != program():
             raise ProgramError("the worker has another version of floorswing; install the same one on all machines")
         with local_file(job.clip) as path:
             return _measured(job, path, tell)

@@ -45,7 +45,7 @@ def run_on_cluster(
         _listen(client, tell)
         numbers = {client.submit(_do, task, n, job, pure=False): n for n, job in enumerate(jobs)}
         try:
-            for future in as_completed(list(numbers)):
+            for future in as_completed(list(numbers), loop=client.loop):
                 outcome = _outcome(future)
                 future.release()
                 yield numbers.pop(future), outcome

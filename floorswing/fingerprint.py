@@ -16,7 +16,8 @@ from floorswing.errors import FileError, why
 from floorswing.trial import Trial
 
 LIBRARIES = ("av", "numpy", "opencv-python-headless", "scipy")
-ROOMS = ("vision", "calib", "floorswing")
+SOURCES = ("vision/*.py", "calib/match.py", "floorswing/pipeline.py", "floorswing/matching.py")
+"""The modules that decide what a measurement says."""
 
 
 def fingerprint(clips_sha256: list[str], asked: str, versions_used: Mapping[str, str]) -> str:
@@ -44,13 +45,12 @@ def digest_of_request(trial: Trial, settings: Mapping[str, Any]) -> str:
 
 @functools.cache
 def program() -> str:
-    """Return a digest of the program's own source, so that a changed program measures anew."""
+    """Return a digest of the source that decides what a measurement says: changed, it measures anew."""
     root = Path(__file__).resolve().parent.parent
     digest = hashlib.sha256()
-    for room in ROOMS:
-        for path in sorted((root / room).rglob("*.py")):
-            digest.update(path.relative_to(root).as_posix().encode())
-            digest.update(path.read_bytes())
+    for path in sorted(path for pattern in SOURCES for path in root.glob(pattern)):
+        digest.update(path.relative_to(root).as_posix().encode())
+        digest.update(path.read_bytes())
     return digest.hexdigest()
 
 

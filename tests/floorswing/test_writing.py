@@ -11,7 +11,14 @@ from hypothesis import strategies as st
 
 from floorswing import writing
 from floorswing.errors import FileError
-from floorswing.writing import check_output_folder, distinct_names, safe_name, write_folder, write_whole
+from floorswing.writing import (
+    check_output_folder,
+    clear_leftovers,
+    distinct_names,
+    safe_name,
+    write_folder,
+    write_whole,
+)
 
 MARK = "measurement.json"
 NEW = {"turns.csv": "new turns", MARK: "new"}
@@ -202,3 +209,30 @@ def test_distinct_names_are_distinct_whatever_the_case(stems: list[str]):
 
 def test_distinct_names_are_numbered_in_order():
     assert distinct_names(["run", "rest", "run", "run-2"]) == ["run", "rest", "run-2", "run-2-2"]
+
+
+def test_what_a_killed_process_left_is_finished_or_removed(tmp_path: Path):
+    def make(folder: str, **files: str) -> None:
+        (tmp_path / folder).mkdir()
+        for name, content in files.items():
+            (tmp_path / folder / name).write_text(content)
+
+    make(".a.123", turns="half-written")
+    make(".b.123.old", turns="before", fit="ours")  # killed between the two renames
+    make("c", turns="new")
+    make(".c.123.old", turns="before", fit="ours")  # killed after both
+    make(".d.77", turns="being written")
+    make(".git", turns="not ours")
+    make(".e.123x", turns="not ours")
+    clear_leftovers(tmp_path, alive=lambda process: process == 77)
+    assert sorted(path.name for path in tmp_path.iterdir()) == [".d.77", ".e.123x", ".git", "b", "c"]
+    assert (tmp_path / "b" / "turns").read_text() == "before"
+    assert (tmp_path / "c" / "turns").read_text() == "new"
+    assert (tmp_path / "c" / "fit").read_text() == "ours"
+    clear_leftovers(tmp_path / "no")
+
+
+def test_a_process_that_runs_is_known_to_run(tmp_path: Path):
+    (tmp_path / f".a.{os.getpid()}").mkdir()
+    clear_leftovers(tmp_path)
+    assert (tmp_path / f".a.{os.getpid()}").exists()
