@@ -167,7 +167,8 @@ def comparison(trials: int) -> None:
 
 
 def comparison_over_runs(trials: int) -> None:
-    print(f"\nTwo floors that are alike, three runs of {len(ORDERS[0])} turns on each, at +90 deg, {trials} trials a line")
+    n = len(ORDERS[0])
+    print(f"\nTwo floors that are alike, three runs of {n} turns on each, at +90 deg, {trials} trials a line")
     for between in (0.0, 0.25, 1.0):
         start, different = time.monotonic(), []
         for trial in range(trials):
