@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -20,7 +21,10 @@ if TYPE_CHECKING:
 @click.option("--out", type=click.Path(path_type=Path), help="File to write.  [default: report.html in the first DIR]")
 @click.option("--clips", type=click.Path(path_type=Path), help="Folder where the clips are now, if they were moved.")
 @click.option("--overlay", is_flag=True, help="Also write each clip with outlines, heading and change drawn in.")
-def command(folders: tuple[Path, ...], out: Path | None, clips: Path | None, overlay: bool) -> None:
+@click.option(
+    "--margin-deg", type=float, default=1.0, show_default=True, help="Difference of heading that does not matter."
+)
+def command(folders: tuple[Path, ...], out: Path | None, clips: Path | None, overlay: bool, margin_deg: float) -> None:
     """Write a report on the measured clips in each DIR: folders that `measure` wrote, or folders of these.
 
     The page is one HTML file that needs nothing else: it opens from a mail and prints. Clips of one robot on one
@@ -29,8 +33,10 @@ def command(folders: tuple[Path, ...], out: Path | None, clips: Path | None, ove
     """
     from floorswing.report.making import write_report
 
+    if not (math.isfinite(margin_deg) and margin_deg > 0.0):
+        raise click.UsageError(f"--margin-deg: found {margin_deg:g}; accepted: degrees above 0")
     with _bars() as progress:
-        written = write_report(folders, out, clips=clips, overlay=overlay, progress=progress)
+        written = write_report(folders, out, clips=clips, overlay=overlay, margin_deg=margin_deg, progress=progress)
     for said in written.without_pictures:
         click.echo(f"Warning: {said}", err=True)
     n_turns = sum(len(subject.seen) for subject in written.subjects)

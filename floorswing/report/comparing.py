@@ -9,14 +9,28 @@ from dataclasses import dataclass
 from markupsafe import Markup
 
 from calib.command import command_for
+from calib.compare import CANNOT_TELL, DIFFERENT, MARGIN_DEG, SAME, Pair, compare_tables
+from calib.compare import Comparison as Pairs
 from calib.errors import CalibError
 from calib.fit import Fit
-from calib.intervals import Estimate, ratio_estimate
+from floorswing.comparing import comparison_sentences
 from floorswing.numbers import two_digits
 from floorswing.report.figures import Picture
 from floorswing.report.gather import Subject
-from floorswing.report.plotting import HAIR, INK, SUBJECT_LOOK, WIDE_IN, drawing, pad, svg_of
-from floorswing.report.sentences import named, signed, with_u
+from floorswing.report.plotting import (
+    BLUE,
+    GREEN,
+    HAIR,
+    INK,
+    PALE,
+    SUBJECT_LOOK,
+    VERMILION,
+    WIDE_IN,
+    drawing,
+    pad,
+    svg_of,
+)
+from floorswing.report.sentences import named, signed, visible, with_u
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -50,25 +64,49 @@ def title_of(subject: Subject) -> Markup:
     return Markup("{} on {}").format(named(subject.robot), named(subject.surface))
 
 
-def compared(subjects: Sequence[Subject], n_doubts: Sequence[int]) -> Comparison:
-    """Return the comparison of two or more subjects; the first is what the others are held against.
+def compared(subjects: Sequence[Subject], n_doubts: Sequence[int], margin_deg: float = MARGIN_DEG) -> Comparison:
+    """Return the comparison of two or more subjects, each pair at a quarter turn each way.
 
     Parameters
     ----------
     subjects : sequence of Subject
     n_doubts : sequence of int
         How many reservations each has.
+    margin_deg : float
+        Difference of heading that does not matter.
     """
-    fitted = [one for one in subjects if one.result is not None]
+    fitted = [one for one in subjects if one.result is not None and one.table is not None]
     lines = tuple(_line(one, count) for one, count in zip(subjects, n_doubts, strict=True))
     starred = any("*" in line.plus + line.minus for line in lines)
+    found, why_not = _pairs(fitted, margin_deg)
+    names = {_group_name(one): _short(one, fitted) for one in fitted}
     return Comparison(
-        answer=tuple(_answers(fitted)),
+        answer=tuple(_answers(found, names)) if found else (Markup("Nothing can be compared: {}.").format(why_not),),
         lines=lines,
         note="* Extrapolated: such commands were not tried there." if starred else "",
-        sentences=tuple(_sentences(fitted)),
-        pictures=tuple(_pictures(fitted)),
+        sentences=tuple(_told(found)) if found else (),
+        pictures=tuple(_pictures(fitted, found)) if found else (),
     )
+
+
+def _pairs(fitted: Sequence[Subject], margin_deg: float) -> tuple[Pairs | None, str]:
+    """Return the pairs held against each other, or why they cannot be."""
+    if len(fitted) < 2:
+        return None, "fewer than two of these allow a fit"
+    tables = [(_group_name(one), one.table) for one in fitted if one.table is not None]
+    try:
+        return compare_tables(tables, margin_deg=margin_deg), ""
+    except CalibError as error:
+        return None, visible(str(error))
+
+
+def _group_name(subject: Subject) -> str:
+    return subject.letter
+
+
+def _told(found: Pairs) -> list[Markup]:
+    """Return all that the comparison says, the groups by their letters."""
+    return [Markup("{}").format(signed(visible(one)).replace(" %", "\u00a0%")) for one in comparison_sentences(found)]
 
 
 def _line(subject: Subject, n_doubts: int) -> Line:
@@ -106,51 +144,49 @@ def _lands(fit: Fit) -> str:
     return f"±{two_digits(0.5 * (one.high_deg - one.low_deg))}°"
 
 
-def relative_gain(one: Fit, first: Fit) -> Estimate:
-    """Return how much further a wheel degree turns the robot than in the first fit, as a share.
+def _answers(found: Pairs, names: dict[str, Markup]) -> list[Markup]:
+    """Return a sentence for each pair with the first, at the first angle compared."""
+    first, angle = found.groups[0].name, found.pairs[0].wanted_deg
+    return [
+        _verdict(pair, found.margin_deg, names)
+        for pair in found.pairs
+        if pair.first == first and pair.wanted_deg == angle
+    ]
 
-    The two fits are independent; the interval is Fieller's, with the fewer degrees of freedom of the two.
-    """
-    a, b = one.gain(), first.gain()
-    ratio = ratio_estimate(
-        a.value,
-        b.value,
-        var_above=a.u**2,
-        var_below=b.u**2,
-        cov=0.0,
-        dof=min(one.dof, first.dof),
-        confidence=0.95,
+
+def _verdict(pair: Pair, margin_deg: float, names: dict[str, Markup]) -> Markup:
+    """Return what is said of a pair, and what to do."""
+    side = math.copysign(1.0, pair.wanted_deg)
+    apart, (here, there) = pair.heading_deg, pair.commands_wheel_deg
+    text = {
+        SAME: (
+            "{b} turns like {a} within {margin}: {value} degrees apart at a turn of {angle} ({low} to {high}, "
+            "95\u00a0%). The command {here} serves both."
+        ),
+        DIFFERENT: (
+            "{b} turns {value} degrees {way} than {a} at a turn of {angle} ({low} to {high}, 95\u00a0%): command "
+            "{there} where {here} serves on {letter}."
+        ),
+        CANNOT_TELL: (
+            "Whether {b} turns like {a} within {margin} cannot be told yet: they are {value} degrees apart at a turn "
+            "of {angle} ({low} to {high}, 95\u00a0%). {more}"
+        ),
+    }[pair.verdict]
+    more = f"About {pair.more} more {pair.more_of} of each would tell." if pair.more is not None else ""
+    return Markup(text).format(
+        a=names[pair.first],
+        b=names[pair.second],
+        letter=pair.first,
+        margin=f"{margin_deg:g} degree{'' if margin_deg == 1.0 else 's'}",
+        value=two_digits(abs(apart.value)),
+        way="further" if side * apart.value > 0 else "less far",
+        angle=signed(f"{pair.wanted_deg:+g}"),
+        low=signed(f"{apart.low:+.2f}"),
+        high=signed(f"{apart.high:+.2f}"),
+        here=signed(f"{here:+.1f}"),
+        there=signed(f"{there:+.1f}"),
+        more=more,
     )
-    return Estimate(value=ratio.value - 1.0, u=ratio.u, low=ratio.low - 1.0, high=ratio.high - 1.0, confidence=0.95)
-
-
-def _answers(fitted: Sequence[Subject]) -> list[Markup]:
-    if len(fitted) < 2:
-        return [Markup("Fewer than two of these could be fitted, so nothing can be compared.")]
-    first, *others = fitted
-    said = []
-    for one in others:
-        assert one.result is not None
-        assert first.result is not None
-        apart = relative_gain(one.result.fit, first.result.fit)
-        told = apart.low > 0.0 or apart.high < 0.0
-        text = (
-            "{b} turns {value} {way} for the same command than {a} ({low} to {high}, 95\u00a0%)."
-            if told
-            else "{b} and {a} turn alike for the same command as far as these turns tell: {value} apart "
-            "({low} to {high}, 95\u00a0%)."
-        )
-        said.append(
-            Markup(text).format(
-                a=_short(first, fitted),
-                b=_short(one, fitted),
-                value=f"{abs(apart.value):.2%}",
-                way="further" if apart.value > 0 else "less far",
-                low=signed(f"{apart.low:+.2%}"),
-                high=signed(f"{apart.high:+.2%}"),
-            )
-        )
-    return said
 
 
 def _short(subject: Subject, among: Sequence[Subject]) -> Markup:
@@ -160,60 +196,67 @@ def _short(subject: Subject, among: Sequence[Subject]) -> Markup:
     return Markup("<strong>{}</strong> ({})").format(name, subject.letter)
 
 
-def _sentences(fitted: Sequence[Subject]) -> list[Markup]:
-    if len(fitted) < 2:
-        return []
-    spread = sorted(fitted, key=lambda one: one.result.fit.scatter_deg if one.result else math.inf)
-    best, worst = spread[0], spread[-1]
-    assert best.result is not None
-    assert worst.result is not None
-    a, b = best.result.fit.repeatability_deg(), worst.result.fit.repeatability_deg()
-    apart = "which is more than these intervals leave to chance" if b.low > a.high else "but the intervals overlap"
-    return [
-        Markup(
-            "Turns repeat best on {best}, {a} degrees (standard deviation, {a_low} to {a_high}), and worst on {worst}, "
-            "{b} degrees ({b_low} to {b_high}), {apart}."
-        ).format(
-            best=_short(best, fitted),
-            worst=_short(worst, fitted),
-            a=two_digits(a.value),
-            a_low=two_digits(a.low),
-            a_high=two_digits(a.high),
-            b=two_digits(b.value),
-            b_low=two_digits(b.low),
-            b_high=two_digits(b.high),
-            apart=apart,
+def _pictures(fitted: Sequence[Subject], found: Pairs) -> list[Picture]:
+    return [_side_by_side(fitted), _differences(found)]
+
+
+def _differences(found: Pairs) -> Picture:
+    """Plot the difference of each pair, with its interval, against the margin."""
+    pairs = found.pairs
+    with drawing(WIDE_IN, 0.75 + 0.26 * len(pairs)) as (figure, ax):
+        ax.axvspan(-found.margin_deg, found.margin_deg, color=PALE, lw=0)
+        ax.axvline(0.0, color=HAIR, lw=0.8)
+        for row, pair in enumerate(pairs):
+            one = pair.heading_deg
+            colour, mark = _VERDICT_LOOK[pair.verdict]
+            ax.plot([one.low, one.high], [row, row], color=colour, lw=1.6)
+            fill = "white" if pair.verdict == CANNOT_TELL else colour
+            ax.plot([one.value], [row], mark, mec=colour, mfc=fill, ms=5.5)
+            ax.text(1.015, row, pair.verdict, transform=ax.get_yaxis_transform(), va="center", fontsize=7.0)
+        labels = [signed(f"{pair.second} less {pair.first}, at {pair.wanted_deg:+g}°") for pair in pairs]
+        ax.set_yticks(range(len(pairs)), labels)
+        ax.set_ylim(len(pairs) - 0.5, -0.5)
+        pad(ax, x=0.06)
+        ax.set_xlabel("difference of heading for the same command, deg")
+        said = "; ".join(
+            f"{pair.second} less {pair.first} at {pair.wanted_deg:+g} degrees {pair.heading_deg.value:+.2f}, "
+            f"{pair.verdict}"
+            for pair in pairs
         )
-    ]
+        alt = f"Differences of heading with 95 % intervals against a margin of {found.margin_deg:g} degrees: {said}."
+        svg = svg_of(figure, "differences", alt)
+    return Picture(
+        name="differences",
+        title="Differences and the margin",
+        caption=(
+            f"Marks with 95 % intervals; shaded: within {found.margin_deg:g} degrees either way, which does not "
+            "matter. Diamond: the same within the margin; triangle: different; open circle: cannot be told yet. The "
+            "verdicts are adjusted over all pairs."
+        ),
+        alt=alt,
+        svg=svg,
+        shape="wide",
+    )
 
 
-def _pictures(fitted: Sequence[Subject]) -> list[Picture]:
-    return [_side_by_side(fitted)] if len(fitted) > 1 else []
+_VERDICT_LOOK = {SAME: (GREEN, "D"), DIFFERENT: (VERMILION, "^"), CANNOT_TELL: (BLUE, "o")}
 
 
 def _side_by_side(fitted: Sequence[Subject]) -> Picture:
     """Plot gain, difference from the first, and repeatability of each subject, with intervals."""
     fits = [one.result.fit for one in fitted if one.result is not None]
-    columns: list[tuple[str, list[Estimate | None]]] = [
+    columns = [
         ("heading per wheel degree", [fit.gain() for fit in fits]),
-        (
-            f"difference from {fitted[0].letter}, %",
-            [None, *(_percent(fit, fits[0]) for fit in fits[1:])],
-        ),
         ("repeatability, deg", [fit.repeatability_deg() for fit in fits]),
     ]
-    with drawing(WIDE_IN, 0.75 + 0.3 * len(fitted), columns=3, sharey=True) as (figure, axes):
+    with drawing(WIDE_IN, 0.75 + 0.3 * len(fitted), columns=2, sharey=True) as (figure, axes):
         for ax, (label, values) in zip(axes, columns, strict=True):
             for row, one in enumerate(values):
                 colour, mark = SUBJECT_LOOK[row % len(SUBJECT_LOOK)]
-                if one is None:
-                    ax.plot([0.0], [row], mark, mfc="white", mec=colour)
-                    continue
                 ax.plot([one.low, one.high], [row, row], color=colour, lw=1.6)
                 ax.plot([one.value], [row], mark, color=colour, ms=5)
             ax.set_xlabel(label)
             pad(ax, x=0.08)
-        axes[1].axvline(0.0, color=HAIR, lw=0.8, zorder=0.5)
         axes[0].set_yticks(range(len(fitted)), [one.letter for one in fitted], color=INK)
         axes[0].set_ylim(len(fitted) - 0.5, -0.5)
         parts = "; ".join(
@@ -225,16 +268,8 @@ def _side_by_side(fitted: Sequence[Subject]) -> Picture:
     return Picture(
         name="side-by-side",
         title="Side by side",
-        caption=(
-            "Marks with their 95 % intervals. A difference whose interval keeps clear of the line at 0 is told apart."
-        ),
+        caption="Marks with their 95 % intervals.",
         alt=alt,
         svg=svg,
         shape="wide",
     )
-
-
-def _percent(fit: Fit, first: Fit) -> Estimate:
-    one = relative_gain(fit, first)
-    value, u, low, high = (100.0 * part for part in (one.value, one.u, one.low, one.high))
-    return Estimate(value=value, u=u, low=low, high=high, confidence=one.confidence)

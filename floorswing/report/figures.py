@@ -11,10 +11,13 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import ArrayLike
 
+from calib.consistency import Check
 from calib.fit import Fit
+from calib.grain import grain_columns
 from calib.intervals import t_quantile
 from calib.models import SIDE_NAMES
 from calib.tolerance import tolerance_factor
+from floorswing.consistency_report import SEEN_LEVEL
 from floorswing.numbers import two_digits
 from floorswing.records import Measurement
 from floorswing.report.gather import USUAL_DEG, Seen, Subject
@@ -405,34 +408,45 @@ def order_picture(subject: Subject) -> Picture | None:
         reach = _scatter_band(ax, subject)
         for turn in usable:
             _residual(ax, turn.order, turn, reach)
-        kept = [turn for turn in usable if not turn.left_out]
-        slope = _slope([turn.order for turn in kept], [turn.along_deg for turn in kept])
+        said = _draw_drift(ax, subject)
         ax.set_xlabel("turn, in the order driven")
         ax.set_ylabel("further than fit, deg")
         pad(ax, x=0.02)
-        alt = f"Distance from the fit against the order driven, {len(usable)} turns; {slope}."
+        alt = f"Distance from the fit against the order driven, {len(usable)} turns. {said}"
         svg = svg_of(figure, name, alt)
     return Picture(
         name=name,
         title="Against order: drift",
-        caption=f"A trend would show wear, warming or a falling battery. Here: {slope}. Band: 95 % of single turns.",
+        caption=f"A trend would show wear, warming or a falling battery. {said} Band: 95 % of single turns.",
         alt=alt,
         svg=svg,
     )
 
 
-def _slope(x: Sequence[float], y: Sequence[float]) -> str:
-    """Return the least-squares trend with its 95 % interval, in words."""
-    n = len(x)
-    if n < 4:
-        return "too few turns for a trend"
-    a, b = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
-    da = a - a.mean()
-    slope = float(da @ b / (da @ da))
-    left = b - b.mean() - slope * da
-    half = t_quantile(0.95, n - 2) * math.sqrt(float(left @ left) / (n - 2) / float(da @ da))
-    told = "told apart from none" if abs(slope) > half else "not told apart from none"
-    return f"{10 * slope:+.3f} ± {10 * half:.3f} degrees over ten turns (95 %), {told}"
+def _draw_drift(ax: Axes, subject: Subject) -> str:
+    """Draw the trend and say what it is worth; the line is that of a turn of typical size."""
+    check, drift = _check(subject, "drift"), subject.consistency.drift if subject.consistency else None
+    if drift is None:
+        return f"No trend can be told: {check.reason}." if check is not None else ""
+    slope = drift.slope_deg
+    for number in range(len(subject.measurements)):
+        order = [turn.order for turn in subject.seen if turn.key.startswith(f"{subject.letter}{number + 1}-")]
+        if len(order) > 1:
+            ends = np.array([order[0], order[-1]], dtype=float)
+            ax.plot(ends, slope.value * (ends - ends.mean()), color=GREEN, lw=1.2, ls=(0, (5, 2)))
+    p = check.p_adjusted if check else math.nan
+    seen = "seen" if p <= SEEN_LEVEL else "not seen"
+    return (
+        f"Dashed: {_signed(slope.value, 3)} degrees a turn ({_signed(slope.low, 3)} to {_signed(slope.high, 3)}, "
+        f"{100.0 * slope.confidence:g} %); a trend is {seen} (p = {p:.2g}, adjusted)."
+    )
+
+
+def _check(subject: Subject, name: str) -> Check | None:
+    """Return a question asked of the turns, by name."""
+    if subject.consistency is None:
+        return None
+    return next((check for check in subject.consistency.checks if check.name == name), None)
 
 
 def _scatter_band(ax: Axes, subject: Subject) -> float:
@@ -456,6 +470,7 @@ def start_picture(subject: Subject) -> Picture | None:
         reach = _scatter_band(ax, subject)
         for turn in usable:
             _residual(ax, turn.turn.start_heading_deg % 360.0, turn, reach)
+        said = _draw_grain(ax, subject)
         ax.set_xlim(-8, 368)
         ax.set_xticks(range(0, 361, 90))
         ax.set_xlabel("heading at the start, deg")
@@ -463,19 +478,36 @@ def start_picture(subject: Subject) -> Picture | None:
         places = {round(turn.turn.start_heading_deg % 360.0 / 15.0) % 24 for turn in usable}
         alt = (
             f"Distance from the fit against the heading at the start, {len(usable)} turns from about {len(places)} "
-            "different headings."
+            f"different headings. {said}"
         )
         svg = svg_of(figure, name, alt)
     return Picture(
         name=name,
         title="Against start heading: grain",
-        caption=(
-            "A floor with a grain helps or brakes with two cycles a revolution. "
-            f"These turns start from about {len(places)} different headings."
-        ),
+        caption=f"A floor with a grain helps or brakes with two cycles a revolution. {said}",
         alt=alt,
         svg=svg,
     )
+
+
+def _draw_grain(ax: Axes, subject: Subject) -> str:
+    """Draw what the fitted grain does to a turn of typical size, and say what it is worth."""
+    check, found = _check(subject, "grain"), subject.consistency.grain if subject.consistency else None
+    if found is None or subject.result is None:
+        return f"No grain can be told: {check.reason}." if check is not None else ""
+    parts = []
+    for one in found.frames:
+        axis_rad = math.radians(2.0 * one.axis_deg.value)
+        pair = one.amplitude.value * np.array([math.cos(axis_rad), math.sin(axis_rad)])
+        start_deg = np.linspace(0.0, 360.0, 181)
+        for side in subject.result.fit.sides if len(found.frames) == 1 else ():
+            extra = side * grain_columns(start_deg, np.full(181, side * subject.result.fit.size_deg)) @ pair
+            ax.plot(start_deg, extra, color=SIDE_COLOUR[side], lw=1.0, ls="-" if side > 0 else (0, (4, 2)))
+        parts.append(f"{100.0 * one.amplitude.value:.1f} % along {one.axis_deg.value:.0f} degrees")
+    seen = "seen" if check is not None and check.p_adjusted <= SEEN_LEVEL else "not seen"
+    curves = "Curves: the fitted grain for a turn of typical size, " if len(found.frames) == 1 else "Fitted: "
+    p = check.p_adjusted if check else math.nan
+    return f"{curves}{', '.join(parts)}; a grain is {seen} (p = {p:.2g}, adjusted)."
 
 
 def path_picture(subject: Subject, number: int) -> Picture | None:

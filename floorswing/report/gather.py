@@ -9,13 +9,16 @@ from pathlib import Path
 
 import numpy as np
 
+from calib.consistency import Consistency, judge
 from calib.errors import CalibError
 from calib.fit import Fit
+from calib.table import TurnTable
 from calib.turns import reversals
 from floorswing.errors import FileError
 from floorswing.files import read_measurement
-from floorswing.fitting import FIT_FILE, FitResult, fit_measurements, measured_folders, read_fit
+from floorswing.fitting import FIT_FILE, FitResult, fit_measurements, measured_folders, read_fit, usable_turns
 from floorswing.records import MeasuredTurn, Measurement
+from floorswing.turn_tables import table_of
 
 USUAL_DEG = (45.0, 90.0, 180.0, 360.0)
 """The angles that the first screen answers for."""
@@ -88,6 +91,10 @@ class Subject:
         What is to be said of a ``fit.json`` found beside; empty for nothing.
     seen : tuple of Seen
         All turns in order.
+    table : TurnTable or None
+        The turns given to the fit; None where they allow none.
+    consistency : Consistency or None
+        What they say of their consistency.
     """
 
     letter: str
@@ -96,6 +103,8 @@ class Subject:
     no_fit: str
     fit_note: str
     seen: tuple[Seen, ...]
+    table: TurnTable | None = None
+    consistency: Consistency | None = None
 
     @property
     def robot(self) -> str:
@@ -154,6 +163,7 @@ def letter_of(number: int) -> str:
 
 def _subject(letter: str, group: list[Measurement]) -> Subject:
     result, no_fit, note = _fitted(group)
+    table, consistency = _judged(group, result) if result is not None else (None, None)
     return Subject(
         letter=letter,
         measurements=tuple(group),
@@ -161,7 +171,15 @@ def _subject(letter: str, group: list[Measurement]) -> Subject:
         no_fit=no_fit,
         fit_note=note,
         seen=tuple(_all_seen(letter, group, result)),
+        table=table,
+        consistency=consistency,
     )
+
+
+def _judged(group: list[Measurement], result: FitResult) -> tuple[TurnTable, Consistency]:
+    turns, given, _ = usable_turns(group)
+    table = table_of(group, turns, given)
+    return table, judge(table, result.fit)
 
 
 def _fitted(group: list[Measurement]) -> tuple[FitResult | None, str, str]:

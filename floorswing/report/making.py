@@ -8,6 +8,7 @@ from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+from calib.compare import MARGIN_DEG
 from floorswing.errors import FileError
 from floorswing.report.evidence import Evidence, collect, find_clip
 from floorswing.report.gather import Subject, gather
@@ -50,6 +51,7 @@ def write_report(
     *,
     clips: str | os.PathLike[str] | None = None,
     overlay: bool = False,
+    margin_deg: float = MARGIN_DEG,
     today: datetime.date | None = None,
     progress: Progress | None = None,
 ) -> Written:
@@ -66,6 +68,8 @@ def write_report(
         Folder in which the clips are now, if they were moved since they were measured.
     overlay : bool
         Whether each clip is also written with outlines, heading and running change drawn in, beside the page.
+    margin_deg : float
+        Difference of heading that does not matter where several are compared.
     today : date, optional
         Date that the page bears.
     progress : callable, optional
@@ -90,7 +94,7 @@ def write_report(
             evidence[subject.letter].append(found)
             missing.extend([f"{one.name}: {found.missing}"] if found.missing else [])
     told("page", 0.0)
-    text = page(subjects, evidence, today=today if today is not None else datetime.date.today())
+    text = page(subjects, evidence, today=today or datetime.date.today(), margin_deg=margin_deg)
     written = write_whole(target, text)
     overlays = _overlays(subjects, place, written.parent, told) if overlay else ()
     return Written(

@@ -16,7 +16,9 @@ from typing import Any
 
 from markupsafe import Markup
 
+from calib.compare import MARGIN_DEG
 from calib.fit import UNKNOWN_SLACK
+from calib.intervals import Estimate
 from floorswing import __version__
 from floorswing.errors import TrialError
 from floorswing.files import events_csv, heading_csv, measurement_json, plain, turns_csv
@@ -31,6 +33,7 @@ from floorswing.report.sentences import (
     Side,
     answer,
     any_extrapolated,
+    consistency_words,
     named,
     reservations,
     sides_of,
@@ -65,6 +68,8 @@ class Chapter:
     every_start: Sequence[Side]
     beyond: str
     doubts: Sequence[Markup]
+    judged: Sequence[str]
+    cells: Sequence[Mapping[str, str]]
     pictures: Sequence[Picture]
     rows: Sequence[Mapping[str, Any]]
     cards: Sequence[Mapping[str, Any]]
@@ -74,7 +79,13 @@ class Chapter:
     first: str
 
 
-def page(subjects: Sequence[Subject], evidence: Mapping[str, Sequence[Evidence]], *, today: datetime.date) -> str:
+def page(
+    subjects: Sequence[Subject],
+    evidence: Mapping[str, Sequence[Evidence]],
+    *,
+    today: datetime.date,
+    margin_deg: float = MARGIN_DEG,
+) -> str:
     """Return the whole page.
 
     Parameters
@@ -83,6 +94,8 @@ def page(subjects: Sequence[Subject], evidence: Mapping[str, Sequence[Evidence]]
     evidence : mapping of str to sequence of Evidence
         For each subject's letter the stills of its clips, in order.
     today : date
+    margin_deg : float
+        Difference of heading that does not matter where subjects are compared.
     """
     from jinja2 import Environment, StrictUndefined
 
@@ -94,7 +107,7 @@ def page(subjects: Sequence[Subject], evidence: Mapping[str, Sequence[Evidence]]
     chapters = [_chapter(one, evidence[one.letter]) for one in subjects]
     comparison: Comparison | None = None
     if len(subjects) > 1:
-        comparison = compared(subjects, [len(chapter.doubts) for chapter in chapters])
+        comparison = compared(subjects, [len(chapter.doubts) for chapter in chapters], margin_deg)
     return template.render(
         title=_title(subjects),
         heading=_heading(subjects),
@@ -171,6 +184,8 @@ def _chapter(subject: Subject, evidence: Sequence[Evidence]) -> Chapter:
         every_start=sides_of(subject, every_start=True),
         beyond=any_extrapolated(subject),
         doubts=reservations(subject, missing),
+        judged=consistency_words(subject),
+        cells=_cells(subject),
         pictures=pictures_of(subject),
         rows=[_row(one, subject) for one in subject.seen],
         cards=cards,
@@ -277,6 +292,31 @@ def _cards(subject: Subject, shelves: Sequence[Shelf]) -> list[dict[str, Any]]:
             }
         )
     return cards
+
+
+def _cells(subject: Subject) -> list[dict[str, str]]:
+    """Return the table of commands: how many, how true, how repeatable."""
+    if subject.consistency is None:
+        return []
+    start = {None: "any", True: "reversed", False: "the same way"}
+    return [
+        {
+            "wheel": signed(f"{cell.wheel_deg:+g}"),
+            "start": start[cell.after_reversal],
+            "n": str(cell.n),
+            "mean": _number(cell.mean_deg.value, 2, sign=True),
+            "off": _bounded(cell.trueness_deg, sign=True),
+            "against": f"wanted {_number(cell.wanted_deg, 1, sign=True)}" if cell.wanted_is_given else "the fit",
+            "spread": "–" if cell.repeatability_deg is None else _bounded(cell.repeatability_deg),
+        }
+        for cell in subject.consistency.cells
+    ]
+
+
+def _bounded(one: Estimate, *, sign: bool = False) -> str:
+    """Return a value with its interval, if that has bounds."""
+    value, low, high = (_number(part, 2, sign=sign) for part in (one.value, one.low, one.high))
+    return f"{value} ({low} to {high})" if math.isfinite(one.low) and math.isfinite(one.high) else value
 
 
 def _path(points: Sequence[tuple[float, float]]) -> str:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 import re
+import unicodedata
 from collections import defaultdict
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
@@ -19,6 +20,7 @@ from calib.errors import CalibError
 from calib.fit import UNKNOWN_SLACK, Fit
 from calib.intervals import Estimate
 from calib.models import SIDE_NAMES
+from floorswing.consistency_report import consistency_sentences
 from floorswing.fitting import FitResult, contact_sentence, quantities
 from floorswing.numbers import decimals_for, two_digits
 from floorswing.report.gather import USUAL_DEG, Seen, Subject
@@ -38,7 +40,7 @@ def named(text: str, most: int = LONGEST_NAME) -> Markup:
 
 def visible(text: str) -> str:
     """Return text with characters that cannot stand in a page replaced."""
-    return "".join(c if c.isprintable() or c in "\n\t" or 0x2000 <= ord(c) < 0x2070 else "\ufffd" for c in text)
+    return "".join("\ufffd" if unicodedata.category(c) in ("Cc", "Cs") and c not in "\n\t" else c for c in text)
 
 
 def with_u(estimate: Estimate, *, sign: bool = False) -> tuple[str, str, str]:
@@ -241,9 +243,17 @@ def reservations(subject: Subject, missing: Sequence[tuple[str, str]] = ()) -> l
         *_events(subject),
         *_out_of_fit(subject),
         *(_of_fit(subject.result) if subject.result else []),
+        *(Markup("{}").format(one) for one in consistency_words(subject) if one.startswith("Seen")),
         *(Markup("{}: {}.").format(named(clip), reason) for clip, reason in missing),
         *([Markup("{}.").format(sentence_case(subject.fit_note))] if subject.fit_note else []),
     ]
+
+
+def consistency_words(subject: Subject) -> list[str]:
+    """Return what the turns say of their consistency, a sentence each."""
+    if subject.consistency is None:
+        return []
+    return [signed(visible(one)).replace("%", "\u00a0%") for one in consistency_sentences(subject.consistency)]
 
 
 def sentence_case(text: str) -> str:
