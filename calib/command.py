@@ -6,11 +6,43 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from calib.errors import NotIdentified
 from calib.fit import CONFIDENCE, Fit
-from calib.intervals import Estimate, ratio_estimate, t_quantile
+from calib.intervals import Estimate
+from calib.mixture import Part, mixed_t
 from calib.models import SIDE_NAMES
+from calib.scatter import LawShare
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Landing:
+    """Where turns land under one law of scatter.
+
+    Parameters
+    ----------
+    weight : float
+        How much the law is believed.
+    bias_deg : float
+        Mean heading change less the wanted one, along the command.
+    u_mean_deg : float
+        Standard uncertainty of that mean.
+    scatter_deg : float
+        Standard deviation of single turns.
+    """
+
+    weight: float
+    bias_deg: float
+    u_mean_deg: float
+    scatter_deg: float
+
+    @property
+    def u_next_deg(self) -> float:
+        """Standard uncertainty of the next turn."""
+        return math.hypot(self.u_mean_deg, self.scatter_deg)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -35,6 +67,7 @@ class Command:
     u_mean_deg : float
         Standard uncertainty of the mean heading change at this command.
     dof : int
+    laws : tuple of Landing
     """
 
     wanted_deg: float
@@ -47,6 +80,7 @@ class Command:
     scatter_deg: float
     u_mean_deg: float
     dof: int
+    laws: tuple[Landing, ...]
 
 
 def command_for(
@@ -71,30 +105,34 @@ def command_for(
     size = abs(wanted_deg)
     gain = fit.gain_row(side)
     lost = fit.lost_row() * float(after_reversal) - fit.offset_row(side)
-    wheel = ratio_estimate(
-        size + float(lost @ fit.coefficients),
-        float(gain @ fit.coefficients),
-        var_above=float(lost @ fit.cov @ lost),
-        var_below=float(gain @ fit.cov @ gain),
-        cov=float(lost @ fit.cov @ gain),
-        dof=fit.dof,
-        confidence=confidence,
+    wheel = fit.ratio(lost, gain, confidence, plus=size)
+    landing = tuple(_landing(one, fit, gain * wheel.value - lost, size) for one in fit.laws)
+    band = mixed_t(
+        [Part(weight=one.weight, value=size + one.bias_deg, u=one.u_next_deg) for one in landing], fit.dof, confidence
     )
     row = gain * wheel.value - lost
-    scatter_deg, u_mean_deg = fit.scatter_at_deg(size), math.sqrt(float(row @ fit.cov @ row))
-    half = t_quantile(confidence, fit.dof) * math.hypot(scatter_deg, u_mean_deg)
     low, high = fit.tried_wheel_deg
     return Command(
         wanted_deg=wanted_deg,
         after_reversal=after_reversal,
         wheel_deg=_signed(wheel, side),
-        low_deg=min(side * (size - half), side * (size + half)),
-        high_deg=max(side * (size - half), side * (size + half)),
+        low_deg=min(side * band.low, side * band.high),
+        high_deg=max(side * band.low, side * band.high),
         confidence=confidence,
         extrapolated=not 0.98 * low <= wheel.value <= 1.02 * high,
-        scatter_deg=scatter_deg,
-        u_mean_deg=u_mean_deg,
+        scatter_deg=fit.scatter_at_deg(size),
+        u_mean_deg=math.sqrt(float(row @ fit.cov @ row)),
         dof=fit.dof,
+        laws=landing,
+    )
+
+
+def _landing(law: LawShare, fit: Fit, row: FloatArray, size_deg: float) -> Landing:
+    return Landing(
+        weight=law.weight,
+        bias_deg=float(row @ law.coefficients) - size_deg,
+        u_mean_deg=math.sqrt(float(row @ law.cov @ row)),
+        scatter_deg=law.scatter_at_deg(size_deg, fit.size_deg),
     )
 
 

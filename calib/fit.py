@@ -4,21 +4,24 @@ Along the direction of the command, ``heading change = gain * (|wheel degrees| -
 whatever the direction, with one gain or one for each direction, with or without dead band and offset, and with one of
 three laws for the scatter of single turns. Which of these the data support is decided by the corrected information
 criterion, and the ranking is kept; but an interval from terms that the data themselves chose holds the truth too seldom
-(bench/coverage.py), so unless told otherwise every term that the turns can tell stays in. Strays are left out and
+(bench/coverage.py), so unless told otherwise every term that the turns can tell stays in, and the three laws are
+averaged by how likely they are. Strays are left out and
 named, and a fit that they pull little at stands beside. What a plan cannot tell apart is said, not invented.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
 from calib.errors import CalibError, NotEnoughTurns
-from calib.intervals import Estimate, ratio_estimate, sd_estimate, t_estimate
+from calib.intervals import Estimate, t_estimate
 from calib.linear import TINY
+from calib.mixture import Part, RatioPart, mixed_ratio, mixed_sd, mixed_t
 from calib.models import (
     SIDE_NAMES,
     Candidate,
@@ -30,7 +33,7 @@ from calib.models import (
     sides_of,
 )
 from calib.robust import RobustFit, robust_fit
-from calib.scatter import LAWS, ScatterFit, fit_with_scatter, shape_of
+from calib.scatter import LawShare, ScatterFit, average_over_laws, fit_with_scatter, scatter_variance_deg2
 from calib.strays import FEWEST_DOF, STRAGGLER_LEVEL, STRAY_LEVEL, extreme_residuals, most_strays
 from calib.turns import Turns
 
@@ -38,8 +41,10 @@ FloatArray = NDArray[np.float64]
 
 CONFIDENCE = 0.95
 FEWEST_TURNS = 3
-STRONG = 6.0
-"""Difference of the criterion that counts as strong evidence (Burnham and Anderson 2002, 2.6)."""
+STRONG = 10.0
+"""Difference of the criterion that leaves a model no support (Burnham and Anderson 2002, 2.6)."""
+MOST_ROUNDS = 4
+"""Rounds of leaving out strays and fitting the others."""
 UNKNOWN_SLACK = "the slack of the wheels before it is not known, and a dead band is fitted"
 
 
@@ -66,7 +71,9 @@ class Fit:
     cov : ndarray, shape (P, P)
     dof : int
     scatter_deg, size_deg : float
-        Repeatability of a turn of that size; other sizes follow the model's law.
+        Repeatability of a turn of that size; other sizes follow the laws.
+    laws : tuple of LawShare
+        The laws of scatter, each with its weight.
     n_turns : int
     tried_wheel_deg : tuple of float
         Smallest and largest size of the commands.
@@ -96,6 +103,7 @@ class Fit:
     dof: int
     scatter_deg: float
     size_deg: float
+    laws: tuple[LawShare, ...]
     n_turns: int
     tried_wheel_deg: tuple[float, float]
     candidates: tuple[Candidate, ...]
@@ -133,10 +141,32 @@ class Fit:
             row[-1] = side
         return row
 
+    def linear(self, row: FloatArray, confidence: float = CONFIDENCE) -> Estimate:
+        """Return a weighted sum of the coefficients, its interval averaged over the laws of scatter."""
+        parts = [
+            Part(weight=one.weight, value=float(row @ one.coefficients), u=math.sqrt(float(row @ one.cov @ row)))
+            for one in self.laws
+        ]
+        return mixed_t(parts, self.dof, confidence)
+
+    def ratio(self, above: FloatArray, below: FloatArray, confidence: float, *, plus: float = 0.0) -> Estimate:
+        """Return one weighted sum of the coefficients (and a number `plus`) over another, by Fieller's interval."""
+        parts = [
+            RatioPart(
+                weight=one.weight,
+                above=plus + float(above @ one.coefficients),
+                below=float(below @ one.coefficients),
+                var_above=float(above @ one.cov @ above),
+                var_below=float(below @ one.cov @ below),
+                cov=float(above @ one.cov @ below),
+            )
+            for one in self.laws
+        ]
+        return mixed_ratio(parts, self.dof, confidence)
+
     def gain(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate:
         """Return heading change per wheel degree (deg/deg)."""
-        row = self.gain_row(side)
-        return t_estimate(float(row @ self.coefficients), float(np.sqrt(row @ self.cov @ row)), self.dof, confidence)
+        return self.linear(self.gain_row(side), confidence)
 
     def robust_gain(self, side: float | None = None, confidence: float = CONFIDENCE) -> Estimate | None:
         """Return the gain by the fit that strays pull little at."""
@@ -150,41 +180,41 @@ class Fit:
         """Return the wheel degrees lost at a reversal; None where the model has none."""
         if not self.model.dead_band:
             return None
-        lost, gain = self.lost_row(), self.gain_row(side)
-        return ratio_estimate(
-            float(lost @ self.coefficients),
-            float(gain @ self.coefficients),
-            var_above=float(lost @ self.cov @ lost),
-            var_below=float(gain @ self.cov @ gain),
-            cov=float(lost @ self.cov @ gain),
-            dof=self.dof,
-            confidence=confidence,
-        )
+        return self.ratio(self.lost_row(), self.gain_row(side), confidence)
 
     def offset_deg(self, confidence: float = CONFIDENCE) -> Estimate | None:
         """Return the heading added to every turn whatever its direction; None where the model has none."""
         if not self.model.offset:
             return None
-        u = float(np.sqrt(self.cov[-1, -1]))
-        return t_estimate(float(self.coefficients[-1]), u, self.dof, confidence)
+        return self.linear(np.eye(len(self.coefficients))[-1], confidence)
 
     def repeatability_deg(self, confidence: float = CONFIDENCE) -> Estimate:
         """Return the standard deviation of single turns of `size_deg` (ISO 5725-1, repeatability)."""
-        return sd_estimate(self.scatter_deg, self.dof, confidence, beside=self.u_typical_deg)
+        parts = [Part(weight=one.weight, value=one.scatter_deg, u=0.0) for one in self.laws]
+        return mixed_sd(parts, self.dof, confidence, beside=self.u_typical_deg)
 
     def scatter_at_deg(self, size_deg: float) -> float:
         """Return the standard deviation of single turns of a given size."""
-        return float(self.scatter_deg * (abs(size_deg) / self.size_deg) ** LAWS[self.model.law])
+        variance = scatter_variance_deg2(self.laws, np.array([abs(size_deg)]), self.size_deg)
+        return float(np.sqrt(variance[0]))
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
 class _Choice:
-    """The models fitted to one set of turns, best by the criterion first, and the one that intervals rest on."""
+    """The models fitted to one set of turns, best by the criterion first, and those that intervals rest on.
+
+    Parameters
+    ----------
+    turns : Turns
+    ranked : tuple of (Candidate, ScatterFit)
+    best, full : tuple of (Model, ScatterFit)
+        The one chosen, and that with every term; laws averaged.
+    """
 
     turns: Turns
     ranked: tuple[tuple[Candidate, ScatterFit], ...]
-
     best: tuple[Model, ScatterFit]
+    full: tuple[Model, ScatterFit]
 
 
 def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = False) -> Fit:
@@ -215,11 +245,12 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = Fal
     _check_direction(turns)
     strays: tuple[int, ...] = ()
     choice, place = _choose(turns, np.ones(len(turns), dtype=bool), drop_terms)
-    for _ in range(0 if keep_strays else 3):
-        found = _far_out(turns, choice, STRAY_LEVEL)
-        if set(found) <= set(strays):
+    for _ in range(0 if keep_strays else MOST_ROUNDS):
+        # Strays blow up the scatter and bend its law, so they are judged again by what the others say.
+        found = tuple(sorted(_far_out(turns, choice, STRAY_LEVEL)))
+        if found == strays:
             break
-        strays = tuple(sorted({*strays, *found}))
+        strays = found
         kept = np.ones(len(turns), dtype=bool)
         kept[list(strays)] = False
         choice, place = _choose(turns, kept, drop_terms)
@@ -237,12 +268,22 @@ def _choose(turns: Turns, kept: NDArray[np.bool_], drop_terms: bool) -> tuple[_C
     can_tell = can_tell_dead_band(turns.take(known)) if known.any() else False
     chosen = known if can_tell else kept
     ranked = _ranked(turns.take(chosen), dead_band=can_tell)
-    best = ranked[0] if drop_terms else _fullest(ranked)
-    if can_tell and not best[0].model.dead_band:  # turns with unknown slack count again
+    full = _averaged(ranked, _fullest(ranked))
+    best = _averaged(ranked, ranked[0][0].model) if drop_terms else full
+    if can_tell and not best[0].dead_band:  # turns with unknown slack count again
         chosen = kept
-        best = (best[0], _fit_model(turns.take(kept), best[0].model) or best[1])
-    choice = _Choice(turns=turns.take(chosen), ranked=ranked, best=(best[0].model, best[1]))
+        again = [_fit_model(turns.take(kept), replace(best[0], law=one.law)) for one in best[1].shares]
+        fits = [one for one in again if one is not None]
+        best = (best[0], average_over_laws(fits)) if len(fits) == len(again) else best
+    choice = _Choice(turns=turns.take(chosen), ranked=ranked, best=best, full=full)
     return choice, np.flatnonzero(chosen)
+
+
+def _averaged(ranked: tuple[tuple[Candidate, ScatterFit], ...], model: Model) -> tuple[Model, ScatterFit]:
+    """Return a model's terms under all laws that were tried, averaged; the law named is the most likely one."""
+    alike = [found for one, found in ranked if replace(one.model, law=model.law) == model]
+    mean = average_over_laws(alike)
+    return replace(model, law=mean.law), mean
 
 
 def _ranked(turns: Turns, *, dead_band: bool) -> tuple[tuple[Candidate, ScatterFit], ...]:
@@ -255,15 +296,13 @@ def _ranked(turns: Turns, *, dead_band: bool) -> tuple[tuple[Candidate, ScatterF
     return tuple(sorted(fitted, key=lambda one: one[0].aicc))
 
 
-def _fullest(ranked: tuple[tuple[Candidate, ScatterFit], ...]) -> tuple[Candidate, ScatterFit]:
-    """Return the model with every term; the law of scatter, and an offset, by strong evidence only."""
+def _fullest(ranked: tuple[tuple[Candidate, ScatterFit], ...]) -> Model:
+    """Return the model with every term; an offset only where the turns leave no doubt of it."""
     best = ranked[0][0]
     without = [one for one in ranked if not one[0].model.offset]
     offset = best.model.offset and without[0][0].aicc - best.aicc > STRONG
-    pool = [one for one in ranked if one[0].model.offset == offset]
-    most = max((one[0].model.separate_gains + one[0].model.dead_band) for one in pool)
-    full = [one for one in pool if one[0].model.separate_gains + one[0].model.dead_band == most]
-    return max(full, key=lambda one: one[1].residual_likelihood)
+    pool = [one.model for one, _ in ranked if one.model.offset == offset]
+    return max(pool, key=lambda one: one.separate_gains + one.dead_band)
 
 
 def nominal_size_deg(turns: Turns) -> FloatArray:
@@ -288,8 +327,8 @@ def _far_out(turns: Turns, choice: _Choice, level: float) -> tuple[int, ...]:
     design = design_of(rows, model)
     if len(rows) - design.shape[1] < FEWEST_DOF:
         return ()
-    shape = shape_of(nominal_size_deg(rows), found.size_deg, model.law)
-    variance = np.maximum(rows.u_deg**2 + found.scatter_deg**2 * shape, TINY)
+    scatter2 = scatter_variance_deg2(found.shares, nominal_size_deg(rows), found.size_deg)
+    variance = np.maximum(rows.u_deg**2 + scatter2, TINY)
     far = extreme_residuals(
         design, rows.heading_deg * rows.side, variance.min() / variance, most=most_strays(len(rows)), level=level
     )
@@ -316,6 +355,7 @@ def _concluded(turns: Turns, choice: _Choice, place: NDArray[np.intp], strays: t
         dof=scatter.linear.dof,
         scatter_deg=scatter.scatter_deg,
         size_deg=scatter.size_deg,
+        laws=scatter.shares,
         n_turns=len(choice.turns),
         tried_wheel_deg=(float(size.min()), float(size.max())),
         candidates=tuple(candidate for candidate, _ in choice.ranked),
@@ -347,8 +387,8 @@ def _stray_reason(turns: Turns, n: int, model: Model, scatter: ScatterFit) -> st
 def _robust(turns: Turns, model: Model, scatter: ScatterFit) -> RobustFit | None:
     usable = np.isfinite(turns.reversed_) if model.dead_band else np.ones(len(turns), dtype=bool)
     rows = turns.take(usable)
-    shape = shape_of(nominal_size_deg(rows), scatter.size_deg, model.law)
-    variance = rows.u_deg**2 + max(scatter.scatter_deg, 1e-9) ** 2 * shape
+    scatter2 = scatter_variance_deg2(scatter.shares, nominal_size_deg(rows), scatter.size_deg)
+    variance = rows.u_deg**2 + np.maximum(scatter2, 1e-18)
     try:
         return robust_fit(design_of(rows, model), rows.heading_deg * rows.side, variance)
     except CalibError:
@@ -356,16 +396,11 @@ def _robust(turns: Turns, model: Model, scatter: ScatterFit) -> RobustFit | None
 
 
 def _if_any(choice: _Choice) -> tuple[Estimate | None, Estimate | None]:
-    """Return dead band and difference of the gains by the best model that has them."""
-    band = difference = None
-    for candidate, scatter in choice.ranked:
-        fit = _bare(choice.turns, candidate.model, scatter)
-        if band is None and candidate.model.dead_band:
-            band = fit.dead_band_wheel_deg()
-        if difference is None and candidate.model.separate_gains:
-            apart = direction_difference(fit)
-            difference = apart[0] if apart else None
-    return band, difference
+    """Return dead band and difference of the gains by the model with every term."""
+    model, scatter = choice.full
+    fit = _bare(choice.turns, model, scatter)
+    apart = direction_difference(fit)
+    return fit.dead_band_wheel_deg(), apart[0] if apart else None
 
 
 def _bare(turns: Turns, model: Model, scatter: ScatterFit) -> Fit:
@@ -378,6 +413,7 @@ def _bare(turns: Turns, model: Model, scatter: ScatterFit) -> Fit:
         dof=scatter.linear.dof,
         scatter_deg=scatter.scatter_deg,
         size_deg=scatter.size_deg,
+        laws=scatter.shares,
         n_turns=len(turns),
         tried_wheel_deg=(0.0, 0.0),
         candidates=(),
@@ -411,6 +447,6 @@ def direction_difference(fit: Fit, confidence: float = CONFIDENCE) -> tuple[Esti
         return None
     row = fit.gain_row(1.0) - fit.gain_row(-1.0)
     mean = fit.gain().value
-    value, u = float(row @ fit.coefficients) / mean, float(np.sqrt(row @ fit.cov @ row)) / mean
-    p_value = 2.0 * float(stats.t.sf(abs(value) / u, fit.dof)) if u > 0.0 else 0.0
-    return t_estimate(value, u, fit.dof, confidence), p_value
+    apart = fit.linear(row / mean, confidence)
+    p_value = 2.0 * float(stats.t.sf(abs(apart.value) / apart.u, fit.dof)) if apart.u > 0.0 else 0.0
+    return apart, p_value

@@ -10,11 +10,13 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import special
 
-from calib.command import Command
+from calib.command import Command, Landing
 from calib.intervals import Estimate, t_quantile
-from calib.tolerance import tolerance_factor
+from calib.mixture import Part, mixed_t
+from calib.tolerance import HalfBand, tolerance_half_width
 
 GRID = 240
 """Points to a side of the grid of equal probability that stands for what is not known of mean and scatter."""
@@ -46,11 +48,16 @@ def tolerance_band(command: Command, coverage: float = 0.95, confidence: float =
     command : Command
     coverage, confidence : float
     """
+    laws = [
+        HalfBand(
+            weight=one.weight, u_centre=math.hypot(one.u_mean_deg, one.bias_deg), sd=one.scatter_deg
+        )
+        for one in command.laws
+    ]
     if command.scatter_deg == 0.0:
         half = t_quantile(confidence, command.dof) * command.u_mean_deg
     else:
-        n = (command.scatter_deg / max(command.u_mean_deg, 1e-9 * command.scatter_deg)) ** 2
-        half = tolerance_factor(n, command.dof, coverage, confidence) * command.scatter_deg
+        half = tolerance_half_width(laws, command.dof, coverage, confidence)
     return Band(
         low_deg=command.wanted_deg - half,
         high_deg=command.wanted_deg + half,
@@ -79,13 +86,39 @@ def hit_rate(command: Command, tolerance_deg: float, confidence: float = 0.95) -
         raise ValueError(f"tolerance {tolerance_deg}; accepted: an angle above 0")
     if command.scatter_deg == 0.0:
         return Estimate(value=1.0, u=0.0, low=1.0, high=1.0, confidence=confidence)
+    shares, weights = [], []
+    for law in command.laws:
+        one = _shares(law, command.dof, tolerance_deg).ravel()
+        shares.append(one)
+        weights.append(np.full(len(one), law.weight / len(one)))
+    value, weight = np.concatenate(shares), np.concatenate(weights)
+    mean = float(weight @ value)
+    tail = 0.5 - 0.5 * confidence
+    low, high = np.quantile(value, [tail, 1.0 - tail], weights=weight, method="inverted_cdf")
+    return Estimate(
+        value=sum(one.weight * _share(one, tolerance_deg) for one in command.laws),
+        u=math.sqrt(float(weight @ (value - mean) ** 2)),
+        low=float(low),
+        high=float(high),
+        confidence=confidence,
+    )
+
+
+def _share(law: Landing, tolerance_deg: float) -> float:
+    """Return the share within the tolerance if mean and scatter were what they are estimated to be."""
+    ends = np.array([tolerance_deg - law.bias_deg, -tolerance_deg - law.bias_deg]) / law.scatter_deg
+    return float(special.ndtr(ends[0]) - special.ndtr(ends[1]))
+
+
+def _shares(law: Landing, dof: float, tolerance_deg: float) -> NDArray[np.float64]:
+    """Return the shares under equally likely pairs of scatter and mean."""
     middle = (np.arange(GRID) + 0.5) / GRID
-    scatter = command.scatter_deg * np.sqrt(command.dof / special.chdtri(command.dof, 1.0 - middle))[:, None]
-    bias = command.u_mean_deg / command.scatter_deg * scatter * special.ndtri(middle)[None, :]
-    shares = special.ndtr((tolerance_deg - bias) / scatter) - special.ndtr((-tolerance_deg - bias) / scatter)
-    low, high = np.quantile(shares, [0.5 - 0.5 * confidence, 0.5 + 0.5 * confidence])
-    value = float(special.erf(tolerance_deg / command.scatter_deg / math.sqrt(2.0)))
-    return Estimate(value=value, u=float(np.std(shares)), low=float(low), high=float(high), confidence=confidence)
+    scatter = law.scatter_deg * np.sqrt(dof / special.chdtri(dof, 1.0 - middle))[:, None]
+    bias = law.bias_deg + law.u_mean_deg / law.scatter_deg * scatter * special.ndtri(middle)[None, :]
+    within: NDArray[np.float64] = special.ndtr((tolerance_deg - bias) / scatter) - special.ndtr(
+        (-tolerance_deg - bias) / scatter
+    )
+    return within
 
 
 def closure(command: Command, n_turns: int, confidence: float = 0.95) -> Band:
@@ -95,7 +128,15 @@ def closure(command: Command, n_turns: int, confidence: float = 0.95) -> Band:
     """
     if n_turns < 1:
         raise ValueError(f"{n_turns} turns; accepted: 1 or more")
-    half = t_quantile(confidence, command.dof) * math.hypot(
-        math.sqrt(n_turns) * command.scatter_deg, n_turns * command.u_mean_deg
-    )
-    return Band(low_deg=-half, high_deg=half, coverage=None, confidence=confidence)
+    parts = [
+        Part(
+            weight=one.weight,
+            value=n_turns * one.bias_deg,
+            u=math.hypot(math.sqrt(n_turns) * one.scatter_deg, n_turns * one.u_mean_deg),
+        )
+        for one in command.laws
+    ]
+    error = mixed_t(parts, command.dof, confidence)
+    side = math.copysign(1.0, command.wanted_deg)
+    low, high = sorted((side * error.low, side * error.high))
+    return Band(low_deg=low, high_deg=high, coverage=None, confidence=confidence)

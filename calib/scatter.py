@@ -2,17 +2,46 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from calib.linear import TINY, LinearFit, least_squares
+from calib.mixture import worth
 
 FloatArray = NDArray[np.float64]
 
 LAWS = {"constant": 0.0, "root": 0.5, "proportional": 1.0}
 """Noise laws by name: the power of the turn's size with which the standard deviation grows."""
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class LawShare:
+    """A noise law with how much it is believed, and the fit under it.
+
+    Parameters
+    ----------
+    law : str
+        A key of `LAWS`.
+    weight : float
+        The shares of all laws add up to one.
+    scatter_deg : float
+        Under this law, of a turn of the data's typical size.
+    coefficients : ndarray, shape (P,)
+    cov : ndarray, shape (P, P)
+    """
+
+    law: str
+    weight: float
+    scatter_deg: float
+    coefficients: FloatArray
+    cov: FloatArray
+
+    def scatter_at_deg(self, size: float, typical: float) -> float:
+        """Return the standard deviation of turns of a size, the data's typical size given."""
+        return float(self.scatter_deg * (abs(size) / typical) ** LAWS[self.law])
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -26,8 +55,10 @@ class ScatterFit:
     scatter_deg : float
         Repeatability standard deviation of a turn of `size_deg`.
     size_deg : float
-        Size of turn that `scatter_deg` stands for: the root mean square of the data.
+        Size of turn that `scatter_deg` stands for: the geometric mean of the data, where the laws differ least.
     law : str
+        The most likely one.
+    shares : tuple of LawShare
     variance_deg2 : ndarray, shape (N,)
     log_likelihood : float
         At the maximum over coefficients, the scatter from its residual likelihood.
@@ -39,6 +70,7 @@ class ScatterFit:
     scatter_deg: float
     size_deg: float
     law: str
+    shares: tuple[LawShare, ...]
     variance_deg2: FloatArray
     log_likelihood: float
     residual_likelihood: float
@@ -59,7 +91,7 @@ def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: 
         A key of `LAWS`.
     """
     u = np.maximum(u, 1e-3 * float(u.max()))
-    typical = float(np.sqrt(np.mean(size**2)))
+    typical = float(np.exp(np.mean(np.log(size))))
     shape = shape_of(size, typical, law)
     first = least_squares(design, data, 1.0 / shape)
     if not np.any(u > 0.0):
@@ -110,10 +142,56 @@ def _made(
         scatter_deg=scatter,
         size_deg=typical,
         law=law,
+        shares=(
+            LawShare(
+                law=law,
+                weight=1.0,
+                scatter_deg=scatter,
+                coefficients=final.coefficients,
+                cov=final.unscaled_cov,
+            ),
+        ),
         variance_deg2=variance,
         log_likelihood=likelihood,
         residual_likelihood=float(_residual_likelihood(design, data, variance[None, :])[0]),
     )
+
+
+def average_over_laws(fits: Sequence[ScatterFit]) -> ScatterFit:
+    """Return the mean of fits of one model to one set of data under different laws, weighted by their likelihood.
+
+    Which law holds is seldom clear from a few dozen turns. The covariance of the mean holds what the laws disagree by,
+    so that intervals do not rest on one of them.
+
+    References
+    ----------
+    Buckland, Burnham and Augustin (1997), Model selection: an integral part of inference, Biometrics 53, 603-618.
+    """
+    best = max(fits, key=lambda one: one.residual_likelihood)
+    if len(fits) == 1:
+        return best
+    weight = worth(np.exp(np.array([one.residual_likelihood - best.residual_likelihood for one in fits])))
+    shares = tuple(
+        replace(one.shares[0], weight=float(w)) for w, one in zip(weight, fits, strict=True) if w > 0.0
+    )
+    each = np.array([one.linear.coefficients for one in fits])
+    mean = weight @ each
+    within = np.einsum("k,kij->ij", weight, np.array([one.linear.unscaled_cov for one in fits]))
+    between = np.einsum("k,ki,kj->ij", weight, each - mean, each - mean)
+    residuals = weight @ np.array([one.linear.residuals for one in fits])
+    return replace(
+        best,
+        linear=replace(best.linear, coefficients=mean, unscaled_cov=within + between, residuals=residuals),
+        scatter_deg=float(np.sqrt(weight @ np.array([one.scatter_deg**2 for one in fits]))),
+        shares=shares,
+        variance_deg2=weight @ np.array([one.variance_deg2 for one in fits]),
+    )
+
+
+def scatter_variance_deg2(shares: Sequence[LawShare], size: FloatArray, typical: float) -> FloatArray:
+    """Return the variance of single turns of these sizes, the laws weighted as they are believed."""
+    parts = [one.weight * one.scatter_deg**2 * shape_of(size, typical, one.law) for one in shares]
+    return np.asarray(sum(parts), dtype=np.float64)
 
 
 def _residual_likelihood(design: FloatArray, data: FloatArray, variance: FloatArray) -> FloatArray:

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
+from scipy import special, stats
 from scipy.optimize import brentq
 
 
@@ -25,16 +27,44 @@ def tolerance_factor(n: float, dof: float, coverage: float, confidence: float) -
     ----------
     ISO 16269-6:2014; Krishnamoorthy and Mathew (2009), Statistical Tolerance Regions, 2.3.
     """
+    return tolerance_half_width([HalfBand(weight=1.0, u_centre=1.0 / math.sqrt(n), sd=1.0)], dof, coverage, confidence)
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class HalfBand:
+    """A normal population as far as it is known under one law: `u_centre` and `sd` in one unit."""
+
+    weight: float
+    u_centre: float
+    sd: float
+
+
+def tolerance_half_width(laws: Sequence[HalfBand], dof: float, coverage: float, confidence: float) -> float:
+    """Return the half width of the band about the centre that holds a share, the laws weighted as they are believed.
+
+    Parameters
+    ----------
+    laws : sequence of HalfBand
+        Weights add up to one.
+    dof : float
+        Degrees of freedom of the standard deviations.
+    coverage, confidence : float
+    """
     _check(coverage, confidence)
     nodes, weights = np.polynomial.legendre.leggauss(96)
     z = 4.5 * (nodes + 1.0)
     density = 4.5 * weights * 2.0 * stats.norm.pdf(z)
-    reach2 = stats.ncx2.ppf(coverage, 1, z**2 / n)
+    reach2 = [stats.ncx2.ppf(coverage, 1, (z * one.u_centre / one.sd) ** 2) * one.sd**2 for one in laws]
 
-    def short(log_factor: float) -> float:
-        return float(density @ stats.chi2.sf(dof * reach2 * math.exp(-2.0 * log_factor), dof)) - confidence
+    def short(log_half: float) -> float:
+        sure = [
+            one.weight * float(density @ special.chdtrc(dof, dof * reach * math.exp(-2.0 * log_half)))
+            for one, reach in zip(laws, reach2, strict=True)
+        ]
+        return sum(sure) - confidence
 
-    return math.exp(float(brentq(short, math.log(1e-3), math.log(1e6), xtol=1e-12)))
+    middle = math.log(max(one.sd for one in laws))
+    return math.exp(float(brentq(short, middle + math.log(1e-3), middle + math.log(1e6), xtol=1e-12)))
 
 
 def one_sided_factor(n: float, dof: float, coverage: float, confidence: float) -> float:

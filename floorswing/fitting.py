@@ -11,14 +11,18 @@ from typing import Any
 
 import numpy as np
 
+from calib.consistency import Consistency, judge
 from calib.fit import CONFIDENCE, Fit, direction_difference, fit_turns
 from calib.geometry import Robot, contact_fraction, effective_track_mm
 from calib.intervals import Estimate
 from calib.models import SIDE_NAMES, Candidate, Model
+from calib.scatter import LawShare
 from calib.turns import Turns, reversals
+from floorswing.consistency_report import consistency_document
 from floorswing.errors import FileError
 from floorswing.files import plain, read_json, read_measurement
 from floorswing.records import MeasuredTurn, Measurement
+from floorswing.turn_tables import table_of
 from floorswing.writing import write_whole
 
 FIT_FILE = "fit.json"
@@ -58,6 +62,8 @@ class FitResult:
     left_out : tuple of LeftOut
     stragglers : tuple of (clip, turn)
         Turns that lie far out and are in the fit nevertheless.
+    consistency : Consistency or None
+        How consistent the turns of the fit are, at 95 %.
     """
 
     fit: Fit
@@ -67,6 +73,7 @@ class FitResult:
     used: tuple[tuple[str, int], ...]
     left_out: tuple[LeftOut, ...]
     stragglers: tuple[tuple[str, int], ...] = ()
+    consistency: Consistency | None = None
 
 
 def fit(
@@ -136,6 +143,7 @@ def fit_measurements(measurements: Sequence[Measurement], *, keep_strays: bool =
         used=tuple(one for n, one in enumerate(given) if n not in reasons),
         left_out=(*left_out, *more),
         stragglers=tuple(given[n] for n in fitted.stragglers),
+        consistency=judge(table_of(measurements, turns, given), fitted),
     )
 
 
@@ -209,12 +217,23 @@ def fit_json(result: FitResult, confidence: float = CONFIDENCE) -> str:
         "turns_used": [{"clip": clip, "turn": turn} for clip, turn in result.used],
         "turns_left_out": plain(result.left_out),
         "stragglers": [{"clip": clip, "turn": turn} for clip, turn in result.stragglers],
+        "consistency": None if result.consistency is None else consistency_document(result.consistency),
         "solution": {
             "sides": list(fitted.sides),
             "coefficients": fitted.coefficients.tolist(),
             "cov": fitted.cov.tolist(),
             "scatter_deg": fitted.scatter_deg,
             "size_deg": fitted.size_deg,
+            "laws": [
+                {
+                    "law": one.law,
+                    "weight": one.weight,
+                    "scatter_deg": one.scatter_deg,
+                    "coefficients": one.coefficients.tolist(),
+                    "cov": one.cov.tolist(),
+                }
+                for one in fitted.laws
+            ],
             "u_typical_deg": fitted.u_typical_deg,
             "tried_wheel_deg": list(fitted.tried_wheel_deg),
         },
@@ -289,6 +308,7 @@ def _fit_of(document: Mapping[str, Any]) -> Fit:
         dof=int(document["degrees_of_freedom"]),
         scatter_deg=float(solution["scatter_deg"]),
         size_deg=float(solution["size_deg"]),
+        laws=tuple(_law_of(one) for one in solution["laws"]),
         n_turns=int(document["n_turns"]),
         u_typical_deg=float(solution["u_typical_deg"]),
         tried_wheel_deg=(float(low), float(high)),
@@ -302,6 +322,16 @@ def _fit_of(document: Mapping[str, Any]) -> Fit:
         notes=tuple(document["notes"]),
         residuals_deg=np.zeros(0),
         standardised=np.zeros(0),
+    )
+
+
+def _law_of(one: Mapping[str, Any]) -> LawShare:
+    return LawShare(
+        law=str(one["law"]),
+        weight=float(one["weight"]),
+        scatter_deg=float(one["scatter_deg"]),
+        coefficients=np.array(one["coefficients"], float),
+        cov=np.array(one["cov"], float),
     )
 
 
