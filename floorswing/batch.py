@@ -18,11 +18,12 @@ from floorswing.clip_names import find_clips, is_url, stem_of
 from floorswing.errors import CommandsMismatch, FileError, FloorswingError
 from floorswing.files import HEADING_FILE, read_measurement, write_measurement
 from floorswing.fingerprint import digest_of_request, fingerprint, program, sha256_of, versions
-from floorswing.matching import DOUBTFUL_BELOW, Matched, match_clip, match_clips
+from floorswing.matching import DOUBTFUL_BELOW, NO_REMEDIES, Matched, Remedies, match_clip, match_clips
 from floorswing.records import Measurement
 from floorswing.trial import Trial, read_trial
 from floorswing.workers import run_in_workers
 from floorswing.writing import check_output_folder, clear_leftovers, distinct_names
+from vision.records import ClipResult
 
 Progress = Callable[[str, float], None]
 """Called with the name of a clip and the fraction of it that is done."""
@@ -67,6 +68,7 @@ class Batch:
         sparse: bool = False,
         workers: int | None = 1,
         scheduler: str | None = None,
+        remedies: Remedies = NO_REMEDIES,
     ) -> None:
         self._places = find_clips(clips, here=scheduler is None)
         self._trial = trial if isinstance(trial, Trial) else read_trial(Path(trial))
@@ -74,6 +76,8 @@ class Batch:
         if self._out is not None:
             check_output_folder(self._out)
         self._continued = continued
+        self._remedies = remedies
+        remedies.commands_of(len(self._trial.commands.wheel_deg))  # said before an hour is spent
         self._again = again
         self._sparse = sparse
         self._scheduler = scheduler
@@ -94,6 +98,7 @@ class Batch:
             "commands_continue_across_clips": self._continued,
             "doubtful_match_below": DOUBTFUL_BELOW,
             "sparse": self._sparse,
+            "remedies": asdict(self._remedies),
         }
 
     def _asked(self) -> str:
@@ -156,10 +161,13 @@ class Batch:
                 if isinstance(clip, UnchangedClip):
                     yield self._kept(clip.name)
                     continue
-                yield self._measurement(clip, match_clip(clip.result, self._trial.commands), clip.fingerprint)
+                yield self._measurement(clip, self._match(clip.result), clip.fingerprint)
             except (CalibError, CommandsMismatch, FileError) as error:
                 place = clip.clip if isinstance(clip, UnchangedClip) else clip.source.path
                 yield Failure(name=clip.name, clip=place, error=error)
+
+    def _match(self, result: ClipResult) -> Matched:
+        return match_clip(result, self._trial.commands, self._remedies)
 
     def _kept(self, name: str) -> Kept:
         assert self._out is not None
@@ -211,7 +219,8 @@ class Batch:
         clips = [clip for clip in seen if isinstance(clip, SeenClip)]
         failures = {clip.name: clip for clip in seen if isinstance(clip, Failure)}
         try:
-            matches = match_clips([clip.result for clip in clips], self._trial.commands) if clips else []
+            results = [clip.result for clip in clips]
+            matches = match_clips(results, self._trial.commands, self._remedies) if clips else []
         except (CalibError, CommandsMismatch) as error:
             places = dict(zip(self.names, self._places, strict=True))
             for clip in seen:

@@ -9,6 +9,8 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+import numpy as np
+
 from calib.match import Match, match_turns
 from floorswing.commands_file import Commands
 from floorswing.errors import CommandsMismatch
@@ -33,32 +35,92 @@ class Matched:
     warnings: tuple[str, ...]
 
 
-def match_clip(result: ClipResult, commands: Commands) -> Matched:
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Remedies:
+    """What somebody knows about the trial that the pictures do not show.
+
+    Parameters
+    ----------
+    from_command : int
+        The first turn filmed answers this command, counted from 1, or a later one.
+    undriven : tuple of int
+        Commands, counted from 1, that were never driven.
+    stray_turns : tuple of int
+        Turns, as numbered in ``turns.csv``, that answer no command.
+    """
+
+    from_command: int = 1
+    undriven: tuple[int, ...] = ()
+    stray_turns: tuple[int, ...] = ()
+
+    def commands_of(self, n_commands: int) -> list[int]:
+        """Return the commands, counted from 0, that a turn can answer.
+
+        Raises
+        ------
+        CommandsMismatch
+            If a number is not one of a command.
+        """
+        for number in (self.from_command, *self.undriven):
+            if not 1 <= number <= n_commands:
+                raise CommandsMismatch(
+                    f"command {number} was named, but the trial has {_count(n_commands, 'command')}; accepted: 1 to "
+                    f"{n_commands}",
+                    n_turns=0,
+                    n_commands=n_commands,
+                    n_matched=0,
+                )
+        never = {number - 1 for number in self.undriven}
+        return [number for number in range(self.from_command - 1, n_commands) if number not in never]
+
+    def turns_of(self, n_turns: int) -> list[int]:
+        """Return the turns, counted from 0, that may answer a command.
+
+        Raises
+        ------
+        CommandsMismatch
+            If a number is not one of a turn.
+        """
+        for number in self.stray_turns:
+            if not 1 <= number <= n_turns:
+                raise CommandsMismatch(
+                    f"turn {number} was named, but {_count(n_turns, 'turn')} were seen; accepted: 1 to {n_turns}",
+                    n_turns=n_turns,
+                    n_commands=0,
+                    n_matched=0,
+                )
+        return [number for number in range(n_turns) if number + 1 not in self.stray_turns]
+
+
+NO_REMEDIES = Remedies()
+
+
+def match_clip(result: ClipResult, commands: Commands, remedies: Remedies = NO_REMEDIES) -> Matched:
     """Match the turns of one clip to the whole list of commands.
 
     Raises
     ------
     CommandsMismatch
-        If fewer than half of the turns answer a command.
+        If fewer than half of the turns answer a command, or a remedy names what is not there.
     """
-    return match_clips([result], commands)[0]
+    return match_clips([result], commands, remedies)[0]
 
 
-def match_clips(results: Sequence[ClipResult], commands: Commands) -> list[Matched]:
+def match_clips(
+    results: Sequence[ClipResult], commands: Commands, remedies: Remedies = NO_REMEDIES
+) -> list[Matched]:
     """Match the turns of several clips, filmed one after the other, to one list that runs through them all.
+
+    Turns named as strays are counted through all clips.
 
     Raises
     ------
     CommandsMismatch
-        If fewer than half of the turns answer a command.
+        If fewer than half of the turns answer a command, or a remedy names what is not there.
     """
     turns = [turn for result in results for turn in result.turns]
-    match = match_turns(
-        [turn.heading_change_deg for turn in turns],
-        [turn.u_heading_change_deg for turn in turns],
-        commands.wheel_deg,
-    )
-    _refuse_mismatch(match, len(turns), commands)
+    match = _match(turns, commands, remedies)
+    _refuse_mismatch(match, len(turns) - len(remedies.stray_turns), commands)
     matched = []
     first = 0
     for result, missing in zip(results, _missing_of_clips(results, match), strict=True):
@@ -67,8 +129,31 @@ def match_clips(results: Sequence[ClipResult], commands: Commands) -> list[Match
     return matched
 
 
+def _match(turns: Sequence[Turn], commands: Commands, remedies: Remedies) -> Match:
+    """Return the pairing of the turns and commands that may answer each other, numbered as all of them are."""
+    asked, driven = remedies.commands_of(len(commands.wheel_deg)), remedies.turns_of(len(turns))
+    match = match_turns(
+        [turns[n].heading_change_deg for n in driven],
+        [turns[n].u_heading_change_deg for n in driven],
+        [commands.wheel_deg[n] for n in asked],
+    )
+    answers: list[int | None] = [None] * len(turns)
+    probability = np.ones(len(turns))
+    for n, command, p in zip(driven, match.command_index, match.probability, strict=True):
+        answers[n] = None if command is None else asked[command]
+        probability[n] = p
+    return Match(
+        command_index=tuple(answers),
+        probability=probability,
+        missing=tuple(asked[command] for command in match.missing),
+        extra=tuple(n for n, command in enumerate(answers) if command is None),
+        gain_deg_per_wheel_deg=match.gain_deg_per_wheel_deg,
+        mirrored=match.mirrored,
+    )
+
+
 def _refuse_mismatch(match: Match, n_turns: int, commands: Commands) -> None:
-    n_matched = n_turns - len(match.extra)
+    n_matched = sum(command is not None for command in match.command_index)
     if 2 * n_matched >= n_turns and not match.mirrored:
         return
     n_commands = len(commands.wheel_deg)
@@ -78,7 +163,10 @@ def _refuse_mismatch(match: Match, n_turns: int, commands: Commands) -> None:
             "with every sign changed they would fit: positive turns the robot counter-clockwise from above"
         )
     else:
-        advice = "check [commands] wheel_deg: one entry for each turn, in the order driven"
+        advice = (
+            "check [commands] wheel_deg: one entry for each turn, in the order driven; --from-command, --undriven "
+            "and --stray-turns say what the pictures do not"
+        )
     raise CommandsMismatch(
         f"the commands do not fit the turns: {found}; {advice}",
         n_turns=n_turns,

@@ -10,6 +10,7 @@ from floorswing.batch import Batch, Kept, Progress
 from floorswing.clip_job import Failure
 from floorswing.errors import FloorswingError
 from floorswing.files import read_heading
+from floorswing.matching import NO_REMEDIES, Remedies
 from floorswing.records import Measurement
 from floorswing.trial import Trial
 
@@ -46,6 +47,7 @@ def measure(
     sparse: bool = False,
     workers: int = 1,
     scheduler: str | None = None,
+    remedies: Remedies = NO_REMEDIES,
     progress: Progress | None = None,
 ) -> list[Measurement]:
     """Measure the turns in one clip or several.
@@ -69,6 +71,8 @@ def measure(
         Processes that measure clips side by side; 1 for this process alone.
     scheduler : str, optional
         Address of a Dask scheduler whose workers measure the clips instead; they open the paths and URLs.
+    remedies : Remedies
+        What is known about which turns answer which commands, and the pictures do not show.
     progress : callable, optional
         Called with the name of a clip and the fraction of it that is done.
 
@@ -86,7 +90,15 @@ def measure(
     """
     places = [clips] if isinstance(clips, str | os.PathLike) else list(clips)
     batch = Batch(
-        places, trial, out, continued=continued, again=again, sparse=sparse, workers=workers, scheduler=scheduler
+        places,
+        trial,
+        out,
+        continued=continued,
+        again=again,
+        sparse=sparse,
+        workers=workers,
+        scheduler=scheduler,
+        remedies=remedies,
     )
     order = {name: number for number, name in enumerate(batch.names)}
     outcomes = sorted(batch.run(progress), key=lambda outcome: order[outcome.name])

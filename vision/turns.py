@@ -322,6 +322,12 @@ def _judge(
     if wander_mm > DRIVEN_MM and path_mm > np.deg2rad(abs(change)) * 4.0 * DRIVEN_MM:
         return "driven", f"{path_mm:.0f} mm of path, heading changed by {change:.2f} deg"
     if abs(change) < max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg):
+        away = float(np.abs(seen.heading_deg[part] - seen.heading_deg[move.first]).max())
+        if away > max(SMALLEST_TURN_DEG, 4.0 * abs(change)):
+            return "nudge", (
+                f"heading went {away:.1f} deg away and came back to {change:.3f} deg without a rest of "
+                f"{SHORTEST_REST_S:g} s in between"
+            )
         return "nudge", f"heading changed by {change:.3f} deg and came to rest"
     return "turn", ""
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -17,6 +18,14 @@ MOST_TABLES = 6
 """More clips than these are reported by a sentence each, without their tables of turns."""
 
 
+def numbers(ctx: click.Context, param: click.Parameter, value: str | None) -> tuple[int, ...]:
+    """Return whole numbers from 1 that were given with commas between them."""
+    parts = value.split(",") if value is not None else []
+    if not all(re.fullmatch(r" *0*[1-9][0-9]{0,8} *", part) for part in parts):
+        raise click.BadParameter(f"{value!r}; accepted: whole numbers from 1 with commas between them, such as 3,7")
+    return tuple(sorted({int(part) for part in parts}))
+
+
 @click.command(short_help="Measure the turns in clips filmed from above.")
 @click.argument("clips", nargs=-1, required=True, metavar="CLIP...")
 @click.option("--trial", required=True, type=click.Path(path_type=Path), help="Trial file (TOML) of these clips.")
@@ -27,6 +36,20 @@ MOST_TABLES = 6
     help="Folder to write into; each clip gets a folder of its own there.",
 )
 @click.option("--continued", is_flag=True, help="The commands run on from one clip to the next, in this order.")
+@click.option(
+    "--from-command",
+    type=click.IntRange(min=1),
+    default=1,
+    metavar="N",
+    help="The first turn filmed answers command N (counted from 1) or a later one.",
+)
+@click.option("--undriven", callback=numbers, metavar="N,N", help="Commands that were never driven.")
+@click.option(
+    "--stray-turns",
+    callback=numbers,
+    metavar="N,N",
+    help="Turns, as numbered in turns.csv, that answer no command.",
+)
 @click.option("--again", is_flag=True, help="Measure even what was measured before with nothing changed since.")
 @click.option(
     "--workers",
@@ -44,6 +67,9 @@ def command(
     trial: Path,
     out: Path,
     continued: bool,
+    from_command: int,
+    undriven: tuple[int, ...],
+    stray_turns: tuple[int, ...],
     again: bool,
     workers: int | None,
     scheduler: str | None,
@@ -59,10 +85,21 @@ def command(
     that was stopped goes on where it was. A clip that fails does not stop the others; the exit code is then 1.
     """
     from floorswing.batch import Batch
+    from floorswing.matching import Remedies
 
     if scheduler is not None and workers is not None:
         raise click.UsageError("--workers and --scheduler: give one of them; a scheduler has its own workers")
-    batch = Batch(clips, trial, out, continued=continued, again=again, workers=workers, scheduler=scheduler)
+    remedies = Remedies(from_command=from_command, undriven=undriven, stray_turns=stray_turns)
+    batch = Batch(
+        clips,
+        trial,
+        out,
+        continued=continued,
+        again=again,
+        workers=workers,
+        scheduler=scheduler,
+        remedies=remedies,
+    )
     told = _Told(len(batch.names), as_json)
     with Board(batch.names) as board:
         for outcome in batch.run(board):

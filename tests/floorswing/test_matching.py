@@ -8,7 +8,7 @@ import pytest
 
 from floorswing.commands_file import Commands
 from floorswing.errors import CommandsMismatch
-from floorswing.matching import DOUBTFUL_MATCH, EXTRA, match_clip, match_clips
+from floorswing.matching import DOUBTFUL_MATCH, EXTRA, Remedies, match_clip, match_clips
 from vision.records import Event
 
 from .conftest import clip_result
@@ -102,3 +102,45 @@ def test_commands_run_on_across_clips():
 def test_a_long_list_of_missing_turns_stays_one_short_line():
     matched = match_clip(clip_result(CHANGES_DEG), Commands(wheel_deg=COMMANDS.wheel_deg + (190,) * 30))
     assert "and 22 more" in matched.warnings[0]
+
+
+ALIKE = Commands(wheel_deg=(190, 190, 190, 190, -190))
+"""A list in which the pictures alone cannot tell which turn was lost."""
+
+
+def test_the_command_that_a_late_clip_begins_with_takes_the_doubt_away():
+    result = clip_result([90.0, 90.4, 89.9, -90.0])
+    assert DOUBTFUL_MATCH in match_clip(result, ALIKE).turns[0].flags
+    matched = match_clip(result, ALIKE, Remedies(from_command=2))
+    assert [turn.flags for turn in matched.turns] == [()] * 4
+    assert matched.events == ()
+    assert matched.warnings == ()
+
+
+def test_undriven_commands_are_passed_over_and_factors_follow():
+    changes = [*CHANGES_DEG[:1], *CHANGES_DEG[2:4], *CHANGES_DEG[5:]]
+    matched = match_clip(clip_result(changes), COMMANDS, Remedies(undriven=(2, 5)))
+    assert [turn.commanded_wheel_deg for turn in matched.turns] == [190, -190, -380, -760]
+    assert [turn.factors["speed"] for turn in matched.turns] == list("acdf")
+    assert matched.events == ()
+
+
+def test_stray_turns_are_flagged_and_answer_nothing():
+    changes = [*CHANGES_DEG[:2], 90.0, *CHANGES_DEG[2:]]
+    matched = match_clip(clip_result(changes), COMMANDS, Remedies(stray_turns=(3,)))
+    assert [turn.commanded_wheel_deg for turn in matched.turns if EXTRA not in turn.flags] == list(COMMANDS.wheel_deg)
+    assert matched.turns[2].flags == (EXTRA,)
+    assert "no command fits turn 3" in matched.warnings[0]
+
+
+@pytest.mark.parametrize(
+    ("remedies", "says"),
+    [
+        (Remedies(from_command=7), "command 7 was named, but the trial has 6 commands; accepted: 1 to 6"),
+        (Remedies(undriven=(3, 9)), "command 9 was named"),
+        (Remedies(stray_turns=(8,)), "turn 8 was named, but 6 turns were seen; accepted: 1 to 6"),
+    ],
+)
+def test_what_is_not_there_cannot_be_named(remedies, says):
+    with pytest.raises(CommandsMismatch, match=says):
+        match_clip(clip_result(CHANGES_DEG), COMMANDS, remedies)

@@ -162,3 +162,33 @@ def test_a_clip_whose_name_is_no_text_is_measured(fake_pipeline: Fake, tmp_path:
     (one,) = json.loads(result.stdout)
     assert one["folder"] == str(out / "b_d")
     assert read_measurement(out / "b_d").name == "b_d"
+
+
+def test_what_the_pictures_do_not_show_can_be_said(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
+    a = clip("a.mp4")
+    fake_pipeline(a=clip_result([*GOOD[1:2], 33.0, *GOOD[2:3]]))
+    said = ("--from-command", "2", "--undriven", "4", "--stray-turns", " 2")
+    result = measure(a, "--trial", trial_file, "--out", out, *said)
+    assert result.exit_code == 0
+    assert result.stderr.endswith(f"Warning: {a}: no command fits turn 2; counted as extra, not used in a fit\n")
+    settings = json.loads((out / "a" / "measurement.json").read_text())["settings"]
+    assert settings["remedies"] == {"from_command": 2, "undriven": [4], "stray_turns": [2]}
+
+
+@pytest.mark.parametrize(
+    ("said", "answer"),
+    [
+        (("--undriven", "9"), "command 9 was named, but the trial has 4 commands"),
+        (("--from-command", "5"), "command 5 was named"),
+        (("--stray-turns", "7"), "turn 7 was named, but 4 turns were seen"),
+        (("--undriven", "1,,2"), "accepted: whole numbers from 1"),
+        (("--stray-turns", "0"), "accepted: whole numbers from 1"),
+        (("--stray-turns", "9" * 5000), "accepted: whole numbers from 1"),
+    ],
+)
+def test_remedies_that_cannot_be(fake_pipeline, clip: MakeClip, trial_file: Path, out: Path, said, answer):
+    fake_pipeline(a=clip_result(GOOD))
+    result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out, *said)
+    assert result.exit_code == 2
+    assert answer in " ".join(result.stderr.split())
+    assert not out.exists()
