@@ -7,7 +7,6 @@ drawn from the reported pose through the fitted plane, lens and mounting; the pi
 from __future__ import annotations
 
 import base64
-import hashlib
 import math
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -17,7 +16,9 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-from floorswing.errors import why
+from floorswing.clip_names import is_url
+from floorswing.errors import FileError
+from floorswing.fingerprint import sha256_of
 from floorswing.records import Measurement
 from floorswing.report.sight import Sight, Sighter
 from vision.errors import VisionError
@@ -102,20 +103,19 @@ def find_clip(one: Measurement, clips: Path | None) -> Path | str:
     clips : Path or None
         A folder in which to look for a clip of that name; by default its own path.
     """
-    kept = str(one.source.path)
-    path = clips / Path(kept).name if clips is not None else Path(kept)
-    if "://" in kept and clips is None:
+    kept = one.source.path
+    if is_url(kept) and clips is None:
         return f"the clip was measured at {kept} and is not fetched again for pictures; --clips names a folder with it"
+    path = clips / Path(str(kept)).name if clips is not None else Path(kept)
     if not path.is_file():
         return (
             f"the clip {path.name} is no longer at {path}, so its pictures cannot be shown; --clips names the folder "
             "where it is now"
         )
     try:
-        with path.open("rb") as file:
-            digest = hashlib.file_digest(file, "sha256").hexdigest()
-    except OSError as error:
-        return f"the clip {path} cannot be read ({why(error)}), so its pictures cannot be shown"
+        digest = sha256_of(path)
+    except FileError as error:
+        return f"{error}; so its pictures cannot be shown"
     if digest != one.source.sha256:
         return (
             f"the file at {path} is not the clip that was measured (its SHA-256 begins {digest[:12]}, that of the clip "

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -19,6 +19,7 @@ from floorswing.files import read_measurement
 from floorswing.fitting import FIT_FILE, FitResult, fit_measurements, measured_folders, read_fit, usable_turns
 from floorswing.records import MeasuredTurn, Measurement
 from floorswing.turn_tables import table_of
+from floorswing.writing import distinct_names
 
 USUAL_DEG = (45.0, 90.0, 180.0, 360.0)
 """The angles that the first screen answers for."""
@@ -146,7 +147,8 @@ def gather(folders: Sequence[str | Path], progress: Callable[[float], None] | No
     if not any(one.turns for one in measurements):
         raise FileError(f"{', '.join(map(str, paths))}: no turn in it, so there is nothing to report; film some turns")
     groups: dict[tuple[str, str], list[Measurement]] = {}
-    for one in measurements:
+    names = distinct_names(one.name for one in measurements)
+    for one in (replace(one, name=name) for one, name in zip(measurements, names, strict=True)):
         groups.setdefault((one.trial.robot.name, one.trial.floor.surface), []).append(one)
     return tuple(_subject(letter_of(n), group) for n, group in enumerate(groups.values()))
 

@@ -268,11 +268,11 @@ def _said(one: Seen, subject: Subject) -> str:
 
 def _cards(subject: Subject, shelves: Sequence[Shelf]) -> list[dict[str, Any]]:
     """Return the cards of the gallery, what needs looking at first."""
-    by_clip = dict(zip((one.name for one in subject.measurements), shelves, strict=True))
+    by_key = {shelf.key: shelf for shelf in shelves}
     several = len(shelves) > 1
     cards = []
     for one in sorted(subject.seen, key=lambda seen: (seen.standing, seen.order)):
-        shelf = by_clip[one.clip]
+        shelf = by_key[one.key.rpartition("-")[0]]
         before, after = shelf.evidence.before.get(one.turn.turn, -1), shelf.evidence.after.get(one.turn.turn, -1)
         if not shelf.evidence.stills.keys() & {before, after}:
             continue

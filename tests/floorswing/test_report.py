@@ -12,6 +12,7 @@ import math
 import re
 import shutil
 import time
+from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -30,11 +31,12 @@ from floorswing.report.figures import nearest_usual_deg, pictures_of
 from floorswing.report.gather import expected_deg, gather, letter_of
 from floorswing.report.making import write_report
 from floorswing.report.sentences import named, signed, visible
-from floorswing.report.sight import POSE, Sighter
-from vision.frames import Clip
+from floorswing.report.sight import PICTURE, POSE, Sighter
+from vision.frames import Clip, Frame
 from vision.records import Event
+from vision.redraw import pair_px, view_from
 
-from .report_data import GAIN, HOSTILE, RIGHT_TO_LEFT, commands, write_folder
+from .report_data import GAIN, HOSTILE, RIGHT_TO_LEFT, SIZE_PX, commands, redraw, write_folder
 
 TODAY = datetime.date(2026, 12, 1)
 
@@ -498,13 +500,45 @@ def test_wrong_use_is_one_line_and_exit_code_2(trial: Path, tmp_path: Path, what
     assert len(result.stderr.splitlines()) == 1
 
 
-def test_frames_of_a_moved_camera_are_drawn_from_what_is_seen_in_them(trial: Path):
-    """Without codes in the drawn squares nothing is found, so nothing is drawn rather than guessed."""
-    from dataclasses import replace
+@pytest.mark.usefixtures("no_plots")
+def test_clips_of_one_name_are_told_apart(tmp_path: Path):
+    a = write_folder(tmp_path / "1", "clip", commands(8), stray_deg={4: 8.0}, clip=False)
+    b = write_folder(tmp_path / "2", "clip", commands(8), seed=8, clip=False)
+    (subject,) = gather([a, b])
+    assert [one.name for one in subject.measurements] == ["clip", "clip-2"]
+    assert [one.key for one in subject.seen if one.is_stray] == ["A1-4"]
 
+
+def with_codes(quads: np.ndarray, size_px: tuple[int, int]) -> np.ndarray:
+    """Return a picture with the robot's two printed markers at these corners."""
+    picture = np.full(size_px[::-1], 200, np.uint8)
+    dictionary = cv2.aruco.getPredefinedDictionary(cv2.aruco.DICT_APRILTAG_36h11)
+    printed = np.array([[-0.5, -0.5], [159.5, -0.5], [159.5, 159.5], [-0.5, 159.5]], np.float32)
+    for marker_id, quad in enumerate(quads):
+        code = cv2.aruco.generateImageMarker(dictionary, marker_id, 160, borderBits=1)
+        map_ = cv2.getPerspectiveTransform(printed, quad.astype(np.float32))
+        code = cv2.GaussianBlur(code, (0, 0), 1.0)
+        cv2.warpPerspective(code, map_, size_px, picture, cv2.INTER_AREA, cv2.BORDER_TRANSPARENT)
+    return picture
+
+
+def test_frames_of_a_moved_camera_are_drawn_from_what_is_seen_in_them(trial: Path):
+    one = read_measurement(trial, with_track=True)
+    moved = replace(one, events=(Event(start_s=0.1, end_s=0.2, kind="camera moved", detail=""),))
+    quads = 1.2 * pair_px(view_from(redraw(), SIZE_PX), np.array([33.0]), np.zeros(1), np.zeros(1))[0] - 60.0
+    sight = Sighter(moved)(Frame(0, 0.0, with_codes(quads, SIZE_PX), True), 33.0)
+    assert sight is not None
+    assert sight.drawn_from == PICTURE
+    assert np.abs(sight.outlines_px - quads).max() < 1.5  # px; found by contours
+    fore, aft = sight.outlines_mm.mean(axis=1)
+    assert math.degrees(math.atan2(*(fore - aft)[::-1])) == pytest.approx(33.0, abs=1.0)
+    assert np.hypot(*(fore - aft)) == pytest.approx(120.0, abs=2.0)
+
+
+def test_where_nothing_is_seen_nothing_is_drawn(trial: Path):
     one = read_measurement(trial, with_track=True)
     moved = replace(one, events=(Event(start_s=0.1, end_s=0.2, kind="camera moved", detail=""),))
     with Clip(Path(str(one.source.path))) as clip:
         frame = next(clip.frames())
-        assert Sighter(moved)(frame) is None
+        assert Sighter(moved)(frame) is None  # its squares carry no codes
         assert Sighter(one)(frame) is not None
