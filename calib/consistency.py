@@ -44,7 +44,8 @@ class Cell:
         None where the relation makes no difference between the starts.
     n : int
     mean_deg : Estimate
-        Signed heading change; without interval (infinite) for a single turn.
+        Signed heading change; its interval rests on the scatter of all repeats together, brought to this size of turn,
+        and is infinite where nothing was repeated.
     wanted_deg : float
         What it is held against: the wanted angle, or where the trial gives none, what the relation says.
     wanted_is_given : bool
@@ -194,10 +195,12 @@ def judge(table: TurnTable, fit: Fit, *, confidence: float = CONFIDENCE) -> Cons
         asked.ask(f"factor {name}", lambda name=name: find_factor(about, name), lambda one: one.test.p_value)  # type: ignore[misc]
         for name in about.table.factors
     ]
+    pooled = _pooled(about, which)
+    spread = _without_measurement(*pooled, about.table.turns.u_deg, confidence) if pooled[1] else None
     return Consistency(
-        cells=tuple(_cell(about, which == k, key, runs, fit.size_deg, confidence) for k, key in enumerate(keys)),
+        cells=tuple(_cell(about, which == k, key, runs, pooled, confidence) for k, key in enumerate(keys)),
         size_deg=fit.size_deg,
-        repeatability_deg=_pooled(about, which, confidence),
+        repeatability_deg=spread,
         runs=runs,
         drift=drift,
         neighbours=neighbours,
@@ -276,13 +279,10 @@ def _within(about: AboutFit, which: NDArray[np.intp]) -> FloatArray:
     return np.asarray((about.along_deg - sums[which]) / about.relative)
 
 
-def _pooled(about: AboutFit, which: NDArray[np.intp], confidence: float) -> Estimate | None:
+def _pooled(about: AboutFit, which: NDArray[np.intp]) -> tuple[float, int]:
+    """Return the standard deviation within cells, of a turn of typical size, and its degrees of freedom."""
     dof = len(which) - int(which.max()) - 1
-    if dof < 1:
-        return None
-    return _without_measurement(
-        math.sqrt(float(np.sum(_within(about, which) ** 2)) / dof), dof, about.table.turns.u_deg, confidence
-    )
+    return (math.sqrt(float(np.sum(_within(about, which) ** 2)) / dof) if dof else math.nan), dof
 
 
 def _without_measurement(sd: float, dof: int, u_deg: FloatArray, confidence: float) -> Estimate:
@@ -292,7 +292,12 @@ def _without_measurement(sd: float, dof: int, u_deg: FloatArray, confidence: flo
 
 
 def _cell(
-    about: AboutFit, chosen: NDArray[np.bool_], key: Key, runs: RunParts | None, size_deg: float, confidence: float
+    about: AboutFit,
+    chosen: NDArray[np.bool_],
+    key: Key,
+    runs: RunParts | None,
+    pooled: tuple[float, int],
+    confidence: float,
 ) -> Cell:
     turns, along, expected = about.table.turns.take(chosen), about.along_deg[chosen], about.expected_deg[chosen]
     wanted = about.table.wanted_deg[chosen]
@@ -300,10 +305,10 @@ def _cell(
     side, n, mean = float(np.sign(key[0])), len(along), float(along.mean())
     target = float(wanted[0]) * side if given else float(expected.mean())
     n_runs = len({run for run, one in zip(about.table.run, chosen, strict=True) if one})
-    u, dof = _u_mean(along, n_runs, runs, float(np.mean(about.relative[chosen])))
-    sd = float(along.std(ddof=1)) if n > 1 else 0.0
+    u, dof = _u_mean(pooled, about.relative[chosen], n_runs, runs)
     found = t_estimate(mean, u, dof, confidence) if dof else _unbounded(mean, confidence)
     ends = sorted((side * found.low, side * found.high))
+    sd = float(along.std(ddof=1)) if n > 1 else 0.0
     return Cell(
         wheel_deg=key[0],
         after_reversal=key[1],
@@ -318,15 +323,17 @@ def _cell(
     )
 
 
-def _u_mean(along: FloatArray, n_runs: int, runs: RunParts | None, relative: float) -> tuple[float, int]:
+def _u_mean(
+    pooled: tuple[float, int], relative: FloatArray, n_runs: int, runs: RunParts | None
+) -> tuple[float, int]:
     """Return the standard uncertainty of a cell's mean and its degrees of freedom, 0 for none."""
-    n = len(along)
-    if n < 2:
+    sd, dof = pooled
+    if dof == 0:
         return math.nan, 0
-    u = float(along.std(ddof=1)) / math.sqrt(n)
-    if runs is None or runs.p_value > POOLING_LEVEL or n_runs < 2:
-        return u, n - 1
-    return max(u, math.hypot(u, runs.between.value * relative / math.sqrt(n_runs))), n_runs - 1
+    u = sd * float(np.sqrt(np.sum(relative**2))) / len(relative)
+    if runs is None or runs.p_value > POOLING_LEVEL:
+        return u, dof
+    return math.hypot(u, runs.between.value * float(relative.mean()) / math.sqrt(n_runs)), runs.dof_between
 
 
 def _unbounded(value: float, confidence: float) -> Estimate:

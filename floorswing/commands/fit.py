@@ -30,6 +30,7 @@ def command(folders: tuple[Path, ...], out: Path | None, as_json: bool, keep_str
     All clips must be of one robot on one floor. Written are gain, dead band, effective track, contact fraction and
     repeatability, each with its uncertainty and 95 % interval, and which turns were left out and why.
     """
+    from floorswing.consistency_report import consistency_sentences, consistency_table
     from floorswing.fitting import FIT_FILE, fit, fit_json, sentences
 
     target = out or folders[0] / FIT_FILE
@@ -40,6 +41,10 @@ def command(folders: tuple[Path, ...], out: Path | None, as_json: bool, keep_str
     click.echo(_table(result) + "\n")
     for line in sentences(result):
         click.echo(line)
+    if result.consistency is not None:
+        click.echo("\n" + consistency_table(result.consistency) + "\n")
+        for line in consistency_sentences(result.consistency):
+            click.echo(line)
     for one in result.left_out:
         click.echo(f"Left out: turn {one.turn} of {one.clip}, since {one.reason}.")
     click.echo(f"Written to {target}")

@@ -73,12 +73,21 @@ def test_cells_hold_mean_trueness_and_repeatability():
     assert_allclose(cell.mean_deg.value, turns.heading_deg[rows].mean())
     sd = turns.heading_deg[rows].std(ddof=1)
     assert_allclose(cell.repeatability_deg.value, np.sqrt(sd**2 - 0.02**2))
-    assert_allclose(cell.mean_deg.u, sd / 2)
     assert not cell.wanted_is_given
     wanted = dataclasses.replace(table, wanted_deg=np.where(turns.wheel_deg < 0, -70.0, 70.0))
     cell = next(one for one in judged(wanted).cells if one.wheel_deg == -150.0 and one.after_reversal)
     assert cell.wanted_is_given
     assert_allclose(cell.trueness_deg.value, -turns.heading_deg[rows].mean() - 70.0)
+
+
+def test_means_rest_on_the_scatter_of_all_repeats():
+    table = driven(2, wheel_deg=np.tile([190.0, 190.0, -190.0, -190.0], 4))
+    found, turns = judged(table), table.turns
+    cells = [(w, back) for w in (190.0, -190.0) for back in (0.0, 1.0)]
+    repeats = [turns.heading_deg[(turns.wheel_deg == w) & (turns.reversed_ == back)] for w, back in cells]
+    pooled = np.sqrt(sum(np.sum((one - one.mean()) ** 2) for one in repeats) / (15 - 4))
+    assert_allclose([one.mean_deg.u * np.sqrt(one.n) for one in found.cells], pooled, rtol=1e-9)
+    assert_allclose(found.repeatability_deg.value, np.sqrt(pooled**2 - 0.02**2), rtol=1e-9)
 
 
 def test_runs_widen_means():
@@ -109,7 +118,7 @@ def test_odd_plans_give_answers_or_reasons(wheel):
         assert np.isfinite(one.p_value) != bool(one.reason)
     for cell in found.cells:
         assert (cell.repeatability_deg is None) == (cell.n == 1)
-        assert np.isfinite(cell.mean_deg.low) == (cell.n > 1)
+        assert np.isfinite(cell.mean_deg.low) == any(one.n > 1 for one in found.cells)
 
 
 def test_turns_that_do_not_scatter():
