@@ -89,7 +89,7 @@ def command(
 
     if scheduler is not None and workers is not None:
         raise click.UsageError("--workers and --scheduler: give one of them; a scheduler has its own workers")
-    remedies = Remedies(from_command=from_command, undriven=undriven, stray_turns=stray_turns)
+    remedies = Remedies(from_command=from_command, undriven=undriven or (), stray_turns=stray_turns or ())
     batch = Batch(
         clips,
         trial,
