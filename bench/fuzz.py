@@ -24,7 +24,7 @@ import tempfile
 import threading
 import time
 import traceback
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
 
@@ -242,7 +242,7 @@ def _text_damage(data: Bytes, rng: np.random.Generator) -> tuple[Bytes, str]:
 # --- one case, in the child ---
 
 
-def base_clips(folder: Path) -> dict[str, bytes]:
+def base_clips(folder: Path, endings: Sequence[str] = tuple(CLIP_KINDS)) -> dict[str, bytes]:
     """Return a tiny clip of two turns in every container, by its ending."""
     from demo_videos.render import Camera, Drive, Scene, Timing, render_clip, spin_motion
 
@@ -252,7 +252,8 @@ def base_clips(folder: Path) -> dict[str, bytes]:
     drive = Drive(rate_wheel_deg_s=700.0, acceleration_wheel_deg_s2=4000.0)
     motion = spin_motion([120.0, -120.0], drive=drive, rest_s=0.5, start_delay_s=0.4, seed=2)
     found = {}
-    for ending, codec in CLIP_KINDS.items():
+    for ending in endings:
+        codec = CLIP_KINDS[ending]
         path = folder / f"base.{ending}"
         if not path.exists():
             render_clip(scene, motion, path, codec=codec, bitrate=None if codec == "mjpeg" else 400_000, gop=8)
