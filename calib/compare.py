@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from calib.about_fit import AboutFit, about_fit
 from calib.command import command_for
 from calib.consistency import POOLING_LEVEL, cell_columns, cells_of
-from calib.differences import all_alike, difference
+from calib.differences import all_alike, difference, welch_dof
 from calib.equivalence import two_one_sided
 from calib.errors import CalibError, NotEnoughTurns, NotIdentified
 from calib.fit import CONFIDENCE, Fit, fit_turns
@@ -49,18 +49,35 @@ class Group:
     fit : Fit
     about : AboutFit
     n_runs : int
-    inflation : float
-        Factor on the uncertainty of its means for what changes from run to run; 1 where runs are alike or there is one.
-    dof : float
-        Degrees of freedom that its means have.
+    within : float
+        Scatter within runs over the scatter of the fit; 1 where runs are alike or there is one.
+    between_deg : float
+        Standard deviation of runs, for a turn of the fit's typical size; 0 where runs are alike or there is one.
     """
 
     name: str
     fit: Fit
     about: AboutFit
     n_runs: int
-    inflation: float
-    dof: float
+    within: float
+    between_deg: float
+
+    def with_runs(self, u_fit: float, size_deg: float, per_deg: float = 1.0) -> tuple[float, float]:
+        """Return an uncertainty of the fit widened by what changes from run to run, and its degrees of freedom.
+
+        Parameters
+        ----------
+        u_fit : float
+        size_deg : float
+            Size of the turn it is for.
+        per_deg : float
+            Change of the quantity with a heading change of one degree.
+        """
+        if self.between_deg == 0.0:
+            return u_fit, float(self.fit.dof)
+        relative = self.fit.scatter_at_deg(size_deg) / self.fit.scatter_deg if self.fit.scatter_deg > 0.0 else 1.0
+        u_within, u_runs = u_fit * self.within, self.between_deg * relative * abs(per_deg) / math.sqrt(self.n_runs)
+        return math.hypot(u_within, u_runs), welch_dof(u_within, self.fit.dof, u_runs, self.n_runs - 1)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -221,13 +238,14 @@ def _group(name: str, table: TurnTable) -> Group:
     except CalibError as error:
         raise CalibError(f"{name}: {error}") from None
     about = about_fit(table, fit)
-    inflation, dof = _between_runs(about, fit)
-    n_runs = len(set(about.table.run))
-    return Group(name=name, fit=fit, about=about, n_runs=n_runs, inflation=inflation, dof=dof)
+    within, between = _between_runs(about, fit)
+    return Group(
+        name=name, fit=fit, about=about, n_runs=len(set(about.table.run)), within=within, between_deg=between
+    )
 
 
 def _between_runs(about: AboutFit, fit: Fit) -> tuple[float, float]:
-    """Return by how much scatter between runs widens the uncertainty of means, and the degrees of freedom then."""
+    """Return the scatter within runs over that of the fit, and that of runs; 1 and 0 where runs are alike."""
     which, _ = cells_of(about, fit)
     try:
         parts = run_parts(
@@ -236,10 +254,11 @@ def _between_runs(about: AboutFit, fit: Fit) -> tuple[float, float]:
             cell_columns(which) / about.relative[:, None],
         )
     except CalibError:
-        return 1.0, float(fit.dof)
-    if parts.p_value > POOLING_LEVEL or parts.ms_within == 0.0:
-        return 1.0, float(fit.dof)
-    return math.sqrt(max(parts.f, 1.0)), float(parts.dof_between)
+        return 1.0, 0.0
+    if parts.p_value > POOLING_LEVEL:
+        return 1.0, 0.0
+    total = math.hypot(fit.scatter_deg, fit.u_typical_deg)
+    return min(1.0, parts.repeatability.value / total) if total > 0.0 else 1.0, parts.between.value
 
 
 def _angles(groups: Sequence[Group], wanted_deg: Sequence[float]) -> tuple[float, ...]:
@@ -257,39 +276,51 @@ def _angles(groups: Sequence[Group], wanted_deg: Sequence[float]) -> tuple[float
     return angles
 
 
-def mean_at(group: Group, wheel_deg: float) -> tuple[float, float]:
-    """Return the mean heading change along the command from a start the same way, and its standard uncertainty."""
+def mean_at(group: Group, wheel_deg: float) -> tuple[float, float, float]:
+    """Return the mean heading change along the command from a start the same way, its u and degrees of freedom."""
     side = math.copysign(1.0, wheel_deg)
     row = group.fit.gain_row(side) * abs(wheel_deg) + group.fit.offset_row(side)
-    u = math.sqrt(float(row @ group.fit.cov @ row)) * group.inflation
-    return float(row @ group.fit.coefficients), u
+    mean = float(row @ group.fit.coefficients)
+    return mean, *group.with_runs(math.sqrt(float(row @ group.fit.cov @ row)), mean)
+
+
+Found = tuple[float, float, float]
+"""A value with its standard uncertainty and degrees of freedom."""
+
+
+def _apart(two: Sequence[Found], confidence: float) -> tuple[Estimate, float, float]:
+    (first, u_first, dof_first), (second, u_second, dof_second) = two
+    return difference(
+        first,
+        second,
+        u_first=u_first,
+        u_second=u_second,
+        dof_first=dof_first,
+        dof_second=dof_second,
+        confidence=confidence,
+    )
 
 
 def _pair(first: Group, second: Group, wanted: float, margin: float, confidence: float) -> Pair:
-    commands = [command_for(group.fit, wanted, confidence=confidence).wheel_deg for group in (first, second)]
-    wheel, side = commands[0].value, math.copysign(1.0, wanted)
-    (mean_a, u_a), (mean_b, u_b) = mean_at(first, wheel), mean_at(second, wheel)
-    heading, dof, p_different = difference(
-        mean_a, mean_b, u_first=u_a, u_second=u_b, dof_first=first.dof, dof_second=second.dof, confidence=confidence
+    both, side = (first, second), math.copysign(1.0, wanted)
+    commands = [command_for(group.fit, wanted, confidence=confidence).wheel_deg for group in both]
+    gains = [group.fit.gain(side) for group in both]
+    ratio = gains[1].value / gains[0].value
+    heading, dof, p_different = _apart([mean_at(group, commands[0].value) for group in both], confidence)
+    command, _, _ = _apart(
+        [
+            (one.value, *group.with_runs(one.u, abs(wanted), 1.0 / gain.value))
+            for group, one, gain in zip(both, commands, gains, strict=True)
+        ],
+        confidence,
     )
-    command, _, _ = difference(
-        commands[0].value,
-        commands[1].value,
-        u_first=commands[0].u * first.inflation,
-        u_second=commands[1].u * second.inflation,
-        dof_first=first.dof,
-        dof_second=second.dof,
-        confidence=confidence,
-    )
-    gains = [group.fit.gain(side) for group in (first, second)]
-    gain, _, _ = difference(
-        1.0,
-        gains[1].value / gains[0].value,
-        u_first=gains[0].u / gains[0].value * first.inflation * gains[1].value / gains[0].value,
-        u_second=gains[1].u / gains[0].value * second.inflation,
-        dof_first=first.dof,
-        dof_second=second.dof,
-        confidence=confidence,
+    shares = [(1.0, ratio * gains[0].u / gains[0].value), (ratio, gains[1].u / gains[0].value)]
+    relative, _, _ = _apart(
+        [
+            (value, *group.with_runs(u, abs(wanted), value / abs(wanted)))
+            for group, (value, u) in zip(both, shares, strict=True)
+        ],
+        confidence,
     )
     same = two_one_sided(heading.value, heading.u, dof, margin, 1.0 - confidence)
     return Pair(
@@ -300,7 +331,7 @@ def _pair(first: Group, second: Group, wanted: float, margin: float, confidence:
         heading_dof=dof,
         command_wheel_deg=command,
         commands_wheel_deg=(commands[0].value, commands[1].value),
-        gain_relative=gain,
+        gain_relative=relative,
         p_different=p_different,
         p_same=same.p_value,
         verdict="",
@@ -331,7 +362,7 @@ def _with_verdicts(pairs: list[Pair], groups: Sequence[Group], margin: float, le
 
 def _more(pair: Pair, first: Group, second: Group, margin: float, level: float) -> tuple[int | None, str]:
     """Return how many turns, or runs, more in each group would settle a pair."""
-    heading, widened = pair.heading_deg, [group for group in (first, second) if group.inflation > 1.0]
+    heading, widened = pair.heading_deg, [group for group in (first, second) if group.between_deg > 0.0]
     counts = [group.n_runs for group in widened] or [first.fit.n_turns, second.fit.n_turns]
     more = turns_to_settle(heading.value, heading.u, pair.heading_dof, margin, min(counts), level=level)
     return more, "runs" if widened else "turns"
@@ -363,7 +394,7 @@ def _free(group: Group, size_deg: float) -> FloatArray:
 def _together(groups: Sequence[Group], wanted: float) -> Together:
     wheel = command_for(groups[0].fit, wanted).wheel_deg.value
     means = [mean_at(group, wheel) for group in groups]
-    f, above, below, p = all_alike([m for m, _ in means], [u for _, u in means], [group.dof for group in groups])
+    f, above, below, p = all_alike(*(list(column) for column in zip(*means, strict=True)))
     return Together(wanted_deg=wanted, f=f, dof_above=above, dof_below=below, p_value=p)
 
 
@@ -375,7 +406,7 @@ def _notes(groups: Sequence[Group]) -> tuple[str, ...]:
             f"one run only of {', '.join(single)}: what changes from one run to the next (putting the robot down, "
             "battery) cannot be told from what is compared; film each twice or more to tell"
         )
-    widened = [group.name for group in groups if group.inflation > 1.0]
+    widened = [group.name for group in groups if group.between_deg > 0.0]
     if widened:
         notes.append(f"the runs of {', '.join(widened)} differ among themselves; the intervals allow for it")
     banded = [group.fit.model.dead_band for group in groups]

@@ -235,5 +235,5 @@ def _group_document(group: Group, confidence: float) -> dict[str, Any]:
         "n_runs": group.n_runs,
         "gain_deg_per_wheel_deg": plain(group.fit.gain(confidence=confidence)),
         "repeatability_deg": plain(group.fit.repeatability_deg(confidence)),
-        "widened_for_runs": group.inflation,
+        "between_runs_deg": group.between_deg,
     }
