@@ -94,7 +94,9 @@ def hit_rate(command: Command, tolerance_deg: float, confidence: float = 0.95) -
     value, weight = np.concatenate(shares), np.concatenate(weights)
     mean = float(weight @ value)
     tail = 0.5 - 0.5 * confidence
-    low, high = np.quantile(value, [tail, 1.0 - tail], weights=weight, method="inverted_cdf")
+    order = np.argsort(value)
+    places = np.cumsum(weight[order]) - 0.5 * weight[order]
+    low, high = np.interp([tail, 1.0 - tail], places, value[order])
     return Estimate(
         value=sum(one.weight * _share(one, tolerance_deg) for one in command.laws),
         u=math.sqrt(float(weight @ (value - mean) ** 2)),
