@@ -9,7 +9,7 @@ from pathlib import Path
 
 import numpy as np
 
-from calib.consistency import Consistency, judge
+from calib.consistency import Consistency
 from calib.errors import CalibError
 from calib.fit import Fit
 from calib.table import TurnTable
@@ -165,7 +165,6 @@ def letter_of(number: int) -> str:
 
 def _subject(letter: str, group: list[Measurement]) -> Subject:
     result, no_fit, note = _fitted(group)
-    table, consistency = _judged(group, result) if result is not None else (None, None)
     return Subject(
         letter=letter,
         measurements=tuple(group),
@@ -173,15 +172,14 @@ def _subject(letter: str, group: list[Measurement]) -> Subject:
         no_fit=no_fit,
         fit_note=note,
         seen=tuple(_all_seen(letter, group, result)),
-        table=table,
-        consistency=consistency,
+        table=_table(group) if result is not None else None,
+        consistency=result.consistency if result is not None else None,
     )
 
 
-def _judged(group: list[Measurement], result: FitResult) -> tuple[TurnTable, Consistency]:
+def _table(group: list[Measurement]) -> TurnTable:
     turns, given, _ = usable_turns(group)
-    table = table_of(group, turns, given)
-    return table, judge(table, result.fit)
+    return table_of(group, turns, given)
 
 
 def _fitted(group: list[Measurement]) -> tuple[FitResult | None, str, str]:
