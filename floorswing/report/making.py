@@ -82,7 +82,8 @@ def write_report(
     listed = [Path(folders)] if isinstance(folders, str | os.PathLike) else [Path(folder) for folder in folders]
     told = progress if progress is not None else _quiet
     target = Path(out) if out is not None else listed[0] / REPORT_FILE
-    _check_target(target)
+    if out is not None or target.parent.is_dir():  # a folder of measurements that is not there has its own message
+        _check_target(target)
     subjects = gather(listed, lambda share: told("reading", share))
     place = Path(clips) if clips is not None else None
     evidence: dict[str, list[Evidence]] = {}
@@ -106,8 +107,8 @@ def _check_target(target: Path) -> None:
     """Refuse a place that cannot be written before the work is done rather than after it."""
     if target.is_dir():
         raise FileError(f"{target}: is a folder; give the name of a file to write")
-    if not target.parent.exists():
-        return  # a folder of measurements that is not there has a message of its own
+    if not target.parent.is_dir():
+        raise FileError(f"{target}: its folder {target.parent} is not there; make it or choose another place")
     check_output_folder(target.parent)
 
 

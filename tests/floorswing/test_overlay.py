@@ -14,7 +14,7 @@ from click.testing import CliRunner
 from floorswing.cli import cli
 from floorswing.errors import FileError
 from floorswing.files import read_measurement
-from floorswing.report.overlay import annotate, caption, eight_bits, letters, turn_at
+from floorswing.report.overlay import annotate, blank, canvas_size, caption, eight_bits, letters, turn_at
 from floorswing.report.recorder import Recorder
 from vision.redraw import pair_px, view_from
 
@@ -98,6 +98,20 @@ def test_luma_of_any_depth_comes_out_in_eight_bits():
     assert eight_bits(np.full((2, 2), 255, np.uint8), "yuvj420p")[0, 0] == 235
     assert eight_bits(np.full((2, 2), 0, np.uint8), "yuvj420p")[0, 0] == 16
     assert eight_bits(np.full((2, 2), 77, np.uint8), "yuv420p")[0, 0] == 77
+
+
+def test_large_pictures_are_scaled_down_and_odd_ones_cut_to_even(trial: Path):
+    info = read_measurement(trial).source.info
+    large = replace(info, width_px=3840, height_px=2160)
+    assert canvas_size(large) == (1920, 1080, 0.5)
+    assert canvas_size(replace(info, width_px=1081, height_px=1921))[:2] == (1080, 1920)
+    grey = np.full((2160, 3840), 90, np.uint8)
+    canvas = blank(grey, large, *canvas_size(large))
+    assert canvas.luma.shape == (1080, 1920)
+    canvas.line(np.array([[1000.0, 500.0], [1400.0, 500.0]]), (235, 90, 90), 2.0)
+    rows, columns = np.nonzero(canvas.luma > 200)
+    assert abs(rows.mean() - 249.75) < 0.75  # px; half the size, pixel centres kept
+    assert abs(columns.mean() - 599.75) < 0.75
 
 
 def test_an_interruption_leaves_what_was_there(tmp_path: Path):

@@ -484,7 +484,7 @@ def test_the_command_writes_and_says_so(trial: Path, tmp_path: Path):
     assert result.stderr == ""
 
 
-@pytest.mark.parametrize("what", ["nothing", "empty", "file", "out is a folder"])
+@pytest.mark.parametrize("what", ["nothing", "empty", "file", "out is a folder", "out is nowhere"])
 def test_wrong_use_is_one_line_and_exit_code_2(trial: Path, tmp_path: Path, what: str):
     (tmp_path / "empty").mkdir()
     (tmp_path / "file").write_text("x")
@@ -493,6 +493,7 @@ def test_wrong_use_is_one_line_and_exit_code_2(trial: Path, tmp_path: Path, what
         "empty": (tmp_path / "empty",),
         "file": (tmp_path / "file",),
         "out is a folder": (trial, "--out", tmp_path / "empty"),
+        "out is nowhere": (trial, "--out", tmp_path / "no such" / "r.html"),
     }
     result = run(*arguments[what])
     assert result.exit_code == 2

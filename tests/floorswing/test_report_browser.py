@@ -14,10 +14,12 @@ import numpy as np
 import pypdfium2
 import pytest
 
+from floorswing.files import read_measurement
 from floorswing.report.making import write_report
+from floorswing.report.overlay import annotate
 from vision.records import Event
 
-from .report_data import HOSTILE, RIGHT_TO_LEFT, commands, write_folder
+from .report_data import HOSTILE, RIGHT_TO_LEFT, SIZE_PX, commands, write_folder
 
 sync_api = pytest.importorskip("playwright.sync_api", reason="playwright is not installed: pip install -e '.[test]'")
 
@@ -265,3 +267,21 @@ def test_nothing_serious_is_found_by_the_accessibility_checker(browser: Any, rep
 
 
 GRAVE = ("serious", "critical")
+
+
+def test_the_annotated_clip_plays(browser: Any, tmp_path: Path):
+    folder = write_folder(tmp_path, "short", commands(2))
+    one = read_measurement(folder, with_track=True)
+    annotated = annotate(one, Path(str(one.source.path)), tmp_path / "annotated.mp4")
+    page = browser.new_page()
+    kind = 'video/mp4; codecs="avc1.640028"'
+    if not page.evaluate("kind => document.createElement('video').canPlayType(kind)", kind):
+        page.close()
+        pytest.skip("this browser was built without H.264")
+    page.goto(annotated.as_uri())
+    page.wait_for_function("document.querySelector('video')?.readyState >= 2", timeout=15_000)
+    video = page.evaluate("(({videoWidth, videoHeight, duration}) => [videoWidth, videoHeight, duration])"
+                          "(document.querySelector('video'))")  # fmt: skip
+    assert video == pytest.approx([*SIZE_PX, 2.4], abs=0.11)
+    assert page.evaluate("document.querySelector('video').error") is None
+    page.close()
