@@ -15,8 +15,8 @@ from calib.errors import CalibError
 from calib.fit import Fit
 from floorswing.comparing import comparison_sentences
 from floorswing.numbers import two_digits
-from floorswing.report.figures import Picture
 from floorswing.report.gather import Subject
+from floorswing.report.marks import Picture
 from floorswing.report.plotting import (
     BLUE,
     GREEN,

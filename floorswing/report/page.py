@@ -27,8 +27,9 @@ from floorswing.numbers import decimals_for
 from floorswing.records import Measurement
 from floorswing.report.comparing import Comparison, compared, title_of
 from floorswing.report.evidence import Evidence, Still
-from floorswing.report.figures import Picture, pictures_of
+from floorswing.report.figures import pictures_of
 from floorswing.report.gather import Seen, Subject
+from floorswing.report.marks import Picture
 from floorswing.report.sentences import (
     Side,
     answer,

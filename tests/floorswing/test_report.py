@@ -27,9 +27,10 @@ from floorswing.cli import cli
 from floorswing.files import read_measurement, turns_csv
 from floorswing.fitting import fit
 from floorswing.report.evidence import collect, rests_of
-from floorswing.report.figures import nearest_usual_deg, pictures_of
+from floorswing.report.figures import pictures_of
 from floorswing.report.gather import expected_deg, gather, letter_of
 from floorswing.report.making import write_report
+from floorswing.report.repeat_figures import nearest_usual_deg, repeats_picture
 from floorswing.report.sentences import named, signed, visible
 from floorswing.report.sight import PICTURE, POSE, Sighter
 from vision.frames import Clip, Frame
@@ -448,6 +449,14 @@ def test_all_kinds_of_plots_are_there(trial: Path):
         assert "<metadata>" not in picture.svg
         if picture.name.split("-")[0] not in ("tyre", "budget"):
             assert 'data-turn="A1-11"' in picture.svg, picture.name
+
+
+def test_repeats_are_held_against_the_angle_that_the_trial_wants(tmp_path: Path):
+    folder = write_folder(tmp_path, "a", [187.5] * 6, factors={"wanted_deg": "88"}, clip=False)
+    (subject,) = gather([folder])
+    repeats = repeats_picture(subject)
+    assert repeats is not None
+    assert re.search(r"\+88° is [12]\.\d\d° less", repeats.svg)
 
 
 def test_the_same_folder_gives_the_same_page(trial: Path, tmp_path: Path, page: str):
