@@ -36,8 +36,10 @@ def main() -> None:
         page = written.path.read_text(encoding="utf-8")
     n_turns = sum(len(subject.seen) for subject in written.subjects)
     print(f"Python {platform.python_version()}, {platform.machine()}")
-    print(f"{n_turns} turns, {page.count('<symbol')} stills: {wall_s:.1f} s of the clock, {busy_s:.1f} s of the processor")
-    print(f"{written.size / 1e6:.2f} MB: " + ", ".join(f"{name} {size / 1e6:.2f}" for name, size in parts(page).items()))
+    n_stills = page.count("<symbol")
+    print(f"{n_turns} turns, {n_stills} stills: {wall_s:.1f} s of the clock, {busy_s:.1f} s of the processor")
+    shares = ", ".join(f"{name} {size / 1e6:.2f}" for name, size in parts(page).items())
+    print(f"{written.size / 1e6:.2f} MB: {shares}")
     for said in written.without_pictures:
         print(f"without pictures: {said}")
 
