@@ -27,6 +27,7 @@ COMMANDS: dict[str, str] = {
     "compare": "Say whether surfaces, robots, speeds or days differ.",
     "plan": "Plan how many turns to drive, and in which order.",
     "report": "Write the report: answer, pictures, evidence and record on one page.",
+    "logbook": "Keep trials over months, and ask them.",
 }
 """Each command and its line in the list, so that the list needs none of them loaded."""
 

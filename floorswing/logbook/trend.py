@@ -1,0 +1,144 @@
+"""A quantity over time: a chart of the trials with limits and signals, changes dated, and the part between days."""
+
+from __future__ import annotations
+
+import math
+import sqlite3
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from calib.control_chart import Chart, individuals_chart
+from calib.errors import CalibError, NotEnoughTurns
+from calib.runs import RunParts, run_parts
+from floorswing.logbook.selection import LoggedTrial, Selection, some_trials
+from floorswing.logbook.store import LogbookError
+
+QUANTITIES = {
+    "gain": "gain, deg per wheel deg",
+    "repeatability": "repeatability, deg",
+    "command": "command, wheel deg",
+}
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class Trend:
+    """A quantity over the trials of a selection.
+
+    Parameters
+    ----------
+    quantity : str
+        A key of `QUANTITIES`.
+    wanted_deg : float or None
+        The angle commanded for, where the quantity is a command.
+    trials : tuple of LoggedTrial, length N
+    chart : Chart
+    left_out : int
+        Trials whose turns do not give the quantity.
+    days : RunParts or None
+        Scatter of single turns (deg, at their typical size) within and between days; None where it cannot be told.
+    notes : tuple of str
+    """
+
+    quantity: str
+    wanted_deg: float | None
+    trials: tuple[LoggedTrial, ...]
+    chart: Chart
+    left_out: int
+    days: RunParts | None
+    notes: tuple[str, ...]
+
+
+def trend(connection: sqlite3.Connection, chosen: Selection, quantity: str, wanted_deg: float = 90.0) -> Trend:
+    """Return how a quantity went over the chosen trials.
+
+    Raises
+    ------
+    LogbookError
+        If no trial matches, or fewer than three give the quantity.
+    """
+    every = some_trials(connection, chosen)
+    kept = [(one, value) for one in every if (value := value_of(one, quantity, wanted_deg)) is not None]
+    try:
+        chart = individuals_chart([value for _, value in kept])
+    except NotEnoughTurns as error:
+        raise LogbookError(f"{chosen}: {quantity} is known of {error}") from None
+    kinds = {(one.robot, one.surface) for one, _ in kept}
+    notes = (
+        ["the trials are of different robots or surfaces; a signal may be that difference"] if len(kinds) > 1 else []
+    )
+    return Trend(
+        quantity=quantity,
+        wanted_deg=wanted_deg if quantity == "command" else None,
+        trials=tuple(one for one, _ in kept),
+        chart=chart,
+        left_out=len(every) - len(kept),
+        days=_days(connection, [one for one, _ in kept]),
+        notes=tuple(notes),
+    )
+
+
+def value_of(one: LoggedTrial, quantity: str, wanted_deg: float) -> float | None:
+    """Return a trial's value of a quantity, None where its turns do not give it."""
+    if quantity == "gain":
+        return one.gain
+    if quantity == "repeatability":
+        return one.repeatability_deg
+    side = math.copysign(1.0, wanted_deg)
+    gain = one.gain_ccw if side > 0.0 else one.gain_cw
+    if gain is None or one.offset_deg is None:
+        return None
+    return side * (abs(wanted_deg) - side * one.offset_deg) / gain
+
+
+def _days(connection: sqlite3.Connection, kept: Sequence[LoggedTrial]) -> RunParts | None:
+    """Return the scatter within and between days of the heading per wheel degree, at the typical size of turn."""
+    day = {one.id: one.filmed_on for one in kept}
+    if len(set(day.values())) < 2:
+        return None
+    rows = [
+        row
+        for row in connection.execute(
+            "SELECT trial, commanded_wheel_deg, heading_change_deg FROM turn "
+            "WHERE counts AND commanded_wheel_deg IS NOT NULL AND heading_change_deg IS NOT NULL"
+        )
+        if row[0] in day
+    ]
+    if not rows:
+        return None
+    wheel, heading = np.array([row[1] for row in rows]), np.array([row[2] for row in rows])
+    typical = float(np.median(np.abs(wheel)))
+    try:
+        return run_parts(
+            heading / wheel * typical,
+            [day[row[0]] for row in rows],
+            np.column_stack([np.ones(len(wheel)), np.sign(wheel)]) if np.ptp(np.sign(wheel)) else None,
+        )
+    except CalibError:
+        return None
+
+
+def trend_sentences(found: Trend) -> list[str]:
+    """Return in plain sentences what the chart says: its signals, dated."""
+    chart, trials = found.chart, found.trials
+    what = found.quantity if found.wanted_deg is None else f"{found.quantity} for {found.wanted_deg:+g} degrees"
+    said = [
+        f"{what} of {len(trials)} trials from {trials[0].filmed_on} to {trials[-1].filmed_on}: centre "
+        f"{chart.centre:.5g}, limits {chart.low:.5g} to {chart.high:.5g}."
+    ]
+    for signal in chart.signals:
+        one = trials[signal.index]
+        said.append(f"{one.filmed_on}, trial {one.id} ({one.name}): {chart.values[signal.index]:.5g}, {signal.kind}.")
+    if not chart.signals:
+        said.append("No signal: the trials differ by no more than neighbours do.")
+    if found.days is not None:
+        within, between = found.days.repeatability, found.days.between
+        said.append(
+            f"Within a day single turns scatter by {within.value:.2g} degrees, between days by {between.value:.2g} "
+            f"(between {between.low:.2g} and {between.high:.2g}); together {found.days.reproducibility.value:.2g}."
+        )
+    if found.left_out:
+        said.append(f"{found.left_out} trials have too few turns for it and are left out.")
+    said.extend(f"Note: {note}." for note in found.notes)
+    return said
