@@ -49,7 +49,7 @@ class Watch:
 
     def look(self) -> int:
         """Note what is there now; return the number of clips measured so far."""
-        for path in self._out.glob("*/measurement.json") if self._out.exists() else ():
+        for path in self._out.glob("[!.]*/measurement.json") if self._out.exists() else ():
             try:
                 status = path.stat()
             except OSError:

@@ -45,19 +45,19 @@ def measure_clip(
     """
     ground = GroundWatcher()
     with Clip(path, threads=threads) as clip:
-        corners = track_pair(ground.passing(_reported(clip, progress)), setup)
-        info, problems = clip.info, tuple(clip.problems)
+        corners = track_pair(ground.passing(_reported(clip, progress, sparse=sparse)), setup)
+        info, problems, passed_over = clip.info, tuple(clip.problems), tuple(clip.passed_over)
     path_seen = camera_path(corners, ground.path())
     corners, calibration = calibrate_steadied(corners, path_seen)
     poses = solve_poses(corners, calibration)
-    seen = usable_frames(corners, poses)
+    seen = usable_frames(corners, poses, passed_over)
     knocks = path_seen.spans if path_seen.loose else ()
     split = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
     return assemble(info, setup, corners, calibration, seen, split, path_seen, problems)
 
 
-def _reported(clip: Clip, progress: Progress | None) -> Iterator[Frame]:
-    for frame in clip.frames():
+def _reported(clip: Clip, progress: Progress | None, *, sparse: bool) -> Iterator[Frame]:
+    for frame in clip.frames(sparse=sparse):
         if progress is not None and frame.index % 8 == 0:
             progress(frame.time_s, clip.info.duration_s)
         yield frame

@@ -7,11 +7,13 @@ A decoder thread runs ahead of the caller by a few frames, so decoding overlaps 
 
 from __future__ import annotations
 
+import collections
 import contextlib
+import itertools
 import math
 import queue
 import threading
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
@@ -26,6 +28,7 @@ from numpy.typing import NDArray
 from vision.boxes import boxes_of
 from vision.errors import ClipError
 from vision.records import ClipInfo
+from vision.sparse import LOOK_BACK_S, Group, dearest, grouped, is_dear, may_be_passed_over, n_kept, picture_moved
 
 LumaImage = NDArray[np.uint8] | NDArray[np.uint16]
 
@@ -109,6 +112,10 @@ class Clip:
         self.info = _clip_info(self._container, self._stream, self._upright)
         self.problems: list[str] = []
         """What went wrong while reading, a sentence each; complete once `frames` is exhausted."""
+        self.passed_over: list[tuple[float, float]] = []
+        """Stretches (start_s, end_s) that a sparse reading left undecoded; complete once `frames` is exhausted."""
+        self._n_bad = 0
+        self._broken = False
         self._stop = threading.Event()
         self._worker: threading.Thread | None = None
 
@@ -127,8 +134,13 @@ class Clip:
             self._worker.join()
         self._container.close()
 
-    def frames(self) -> Iterator[Frame]:
+    def frames(self, *, sparse: bool = False) -> Iterator[Frame]:
         """Yield the frames in presentation order, once, decoding ahead in a thread of its own.
+
+        Parameters
+        ----------
+        sparse : bool
+            Whether stretches in which nothing moves may be passed over (`vision.sparse`); `passed_over` tells which.
 
         Raises
         ------
@@ -136,7 +148,7 @@ class Clip:
             If not a single frame can be decoded.
         """
         waiting: queue.Queue[Frame | BaseException | None] = queue.Queue(maxsize=FRAMES_AHEAD)
-        self._worker = threading.Thread(target=self._decode_into, args=(waiting,), name="decode", daemon=True)
+        self._worker = threading.Thread(target=self._decode_into, args=(waiting, sparse), name="decode", daemon=True)
         self._worker.start()
         n_frames = 0
         try:
@@ -185,9 +197,9 @@ class Clip:
                     break
             yield frame
 
-    def _decode_into(self, waiting: queue.Queue[Frame | BaseException | None]) -> None:
+    def _decode_into(self, waiting: queue.Queue[Frame | BaseException | None], sparse: bool) -> None:
         try:
-            for frame in self._decode():
+            for frame in self._decode(sparse):
                 if not self._put(waiting, frame):
                     return
             self._put(waiting, None)
@@ -201,15 +213,21 @@ class Clip:
                 return True
         return False
 
-    def _decode(self) -> Iterator[Frame]:
+    def _decode(self, sparse: bool) -> Iterator[Frame]:
         clock = _Clock(self._stream)
-        for index, picture in enumerate(self._pictures(clock)):
+        pictures = self._pictures_sparsely(clock) if sparse else self._pictures(clock)
+        for index, picture in enumerate(pictures):
             yield Frame(index, clock.time_s(picture), self._luma(picture), bool(picture.key_frame))
 
     def _pictures(self, clock: _Clock) -> Iterator[Any]:
         """Yield decoded pictures, stepping over packets that cannot be decoded."""
+        for packet in self._packets(clock):
+            yield from self._decoded(packet)
+        self._note_end(clock)
+
+    def _packets(self, clock: _Clock) -> Iterator[Any]:
+        """Yield the packets of the clip as far as it can be read, and at last the empty one that drains the decoder."""
         packets = self._container.demux(self._stream)
-        n_bad, broken = 0, False
         while True:
             try:
                 packet = next(packets)
@@ -220,19 +238,29 @@ class Clip:
                     f"the file breaks off or is damaged: nothing could be read after {clock.last_s:.2f} s "
                     f"({_reason(error)})"
                 )
-                broken = True
+                self._broken = True
                 break
-            try:
-                yield from packet.decode()
-            except (av.error.FFmpegError, EOFError):
-                n_bad += 1
-        if n_bad:
-            self._note(f"{n_bad} damaged packets could not be decoded")
-        if not broken:
-            self._note_end(clock)
+            yield packet
+
+    def _decoded(self, packet: Any) -> list[Any]:
+        try:
+            return list(packet.decode())
+        except (av.error.FFmpegError, EOFError):
+            self._n_bad += 1
+            return []
+
+    def _pictures_sparsely(self, clock: _Clock) -> Iterator[Any]:
+        """Yield decoded pictures of what moves, and of still stretches little more than the key frames."""
+        reader = _SparseReader(self._stream, self._decoded, self.passed_over)
+        yield from reader.pictures(self._packets(clock))
+        self._note_end(clock)
 
     def _note_end(self, clock: _Clock) -> None:
-        """Say so if the file ends before it should by its own account."""
+        """Say what could not be decoded, and if the file ends before it should by its own account."""
+        if self._n_bad:
+            self._note(f"{self._n_bad} damaged packets could not be decoded")
+        if self._broken:
+            return
         promised_s = self.info.duration_s or 0.0
         boxes = boxes_of(self.path)
         early = promised_s - clock.last_s > max(SHORT_BY_S, SHORT_BY_SHARE * promised_s)
@@ -247,6 +275,122 @@ class Clip:
         if picture.width * picture.height > MAX_PIXELS:
             raise ClipError(_too_large(self.path, picture.width, picture.height))
         return self._upright.apply(_luma_plane(picture))
+
+
+class _SparseReader:
+    """Reads a stream by groups of packets from key frame to key frame; mutable, one for a reading.
+
+    While something moves, groups are decoded in full one after the other. Once the picture stands, the next key frame
+    is decoded by a second decoder, to see whether it still stands there. A still group next to a moving one gives a few
+    frames, any other its key frame alone.
+    """
+
+    def __init__(
+        self, stream: Any, decoded: Callable[[Any], list[Any]], passed_over: list[tuple[float, float]]
+    ) -> None:
+        self._stream = stream
+        self._decoded = decoded
+        self._passed_over = passed_over
+        self._first: int | None = None
+        self._moving = True
+        self._broken_off = False
+        self._quiet = math.inf
+        self._prober = av.CodecContext.create(stream.codec_context.name, "r")
+        self._prober.extradata = stream.codec_context.extradata
+        self._prober.thread_count = stream.codec_context.thread_count
+        self._prober.thread_type = "SLICE"
+
+    def pictures(self, packets: Iterator[Any]) -> Iterator[Any]:
+        pending: Group | None = None  # a still group, until it is known whether the one after it moves
+        after_motion = True
+        group: Group | None = None
+        for following in itertools.chain(grouped(packets, self._time_s), [None]):
+            if group is not None:
+                group.moved = following is None or self._moves(group, following)
+                if pending is not None:
+                    yield from self._still(pending, group, whole=after_motion or group.moved)
+                    after_motion = False
+                pending = None if group.moved else group
+                if group.moved:
+                    yield from self._all_of(group)
+                    after_motion = True
+            group = following
+
+    def _time_s(self, packet: Any) -> float:
+        if packet.pts is None:
+            return math.nan  # the empty packet at the end, or a container without times: never passed over
+        self._first = packet.pts if self._first is None else self._first
+        return float((packet.pts - self._first) * self._stream.time_base)
+
+    def _moves(self, group: Group, following: Group) -> bool:
+        """Return whether anything moves in a group, or may."""
+        self._quiet = min(self._quiet, dearest(group))
+        if self._moving or not may_be_passed_over(group, following) or is_dear(group, self._quiet):
+            following.key = None
+            return True
+        group.key = group.key if group.key is not None else self._probe(group)
+        following.key = self._probe(following)
+        if group.key is None or following.key is None:
+            return True
+        return picture_moved(_luma_plane(group.key), _luma_plane(following.key))
+
+    def _probe(self, group: Group) -> Any:
+        """Return the key frame of a group, decoded apart from the others; None if it cannot be."""
+        try:
+            found = [*self._prober.decode(group.packets[0]), *self._prober.decode(None)]
+            self._prober.flush_buffers()
+        except (av.error.FFmpegError, EOFError):
+            return None
+        return found[0] if found else None
+
+    def _all_of(self, group: Group) -> Iterator[Any]:
+        """Decode a group in full, and note whether something still moves at its end."""
+        self._resume()
+        seen: collections.deque[Any] = collections.deque()
+        for packet in group.packets:
+            for picture in self._decoded(packet):
+                seen.append(picture)
+                while len(seen) > 2 and self._apart_s(seen[1], picture) >= LOOK_BACK_S:
+                    seen.popleft()
+                yield picture
+        self._moving = len(seen) < 2 or picture_moved(_luma_plane(seen[0]), _luma_plane(seen[-1]))
+
+    def _apart_s(self, one: Any, other: Any) -> float:
+        if one.pts is None or other.pts is None:
+            return 0.0
+        return float((other.pts - one.pts) * self._stream.time_base)
+
+    def _still(self, group: Group, following: Group, *, whole: bool) -> Iterator[Any]:
+        """Yield what is wanted of a still group: some frames, or its key frame alone."""
+        kept = n_kept(group) if whole else 1
+        if whole:
+            self._resume()
+            for packet in group.packets[:kept]:
+                yield from self._decoded(packet)
+            yield from self._drained()
+        else:
+            yield from self._drained()
+            yield group.key
+        self._broken_off = True
+        first_s = min(group.times_s[kept:], default=following.times_s[0])
+        last_s = max(time_s for time_s in group.times_s[:kept] if time_s < first_s)
+        if kept < len(group.packets):
+            self._passed_over.append((last_s, following.times_s[0]))
+
+    def _drained(self) -> list[Any]:
+        """Return what the decoder still holds, before packets are left out."""
+        if self._broken_off:
+            return []
+        self._broken_off = True
+        try:
+            return list(self._stream.codec_context.decode(None))
+        except (av.error.FFmpegError, EOFError):
+            return []
+
+    def _resume(self) -> None:
+        if self._broken_off:
+            self._stream.codec_context.flush_buffers()
+        self._broken_off = False
 
 
 class _KeyFrames:

@@ -23,6 +23,7 @@ from vision.rests import (
     find_motion,
     stretches,
 )
+from vision.sparse import time_unread
 
 LONGEST_REST_S = 2.0
 """Only this much of a rest, next to the turn, is averaged: the camera may sink over longer times."""
@@ -77,6 +78,8 @@ class Seen:
         Which frames of the clip these are.
     time_s, heading_deg, x_mm, y_mm, scale, residual_px : ndarray, shape (N,)
         Heading unwrapped.
+    gap_s : ndarray, shape (N - 1,)
+        Time to the next seen frame, less what was passed over undecoded.
     u_heading_deg : ndarray, shape (N,)
         Noise of the single frame.
     by_global : ndarray, shape (N, 21)
@@ -95,6 +98,7 @@ class Seen:
 
     index: NDArray[np.intp]
     time_s: FloatArray
+    gap_s: FloatArray
     heading_deg: FloatArray
     x_mm: FloatArray
     y_mm: FloatArray
@@ -111,8 +115,16 @@ class Seen:
     frame_s: float
 
 
-def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
-    """Return the frames with a believable pose, heading unwrapped along them."""
+def usable_frames(corners: CornerTrack, poses: Poses, passed_over: Sequence[tuple[float, float]] = ()) -> Seen:
+    """Return the frames with a believable pose, heading unwrapped along them.
+
+    Parameters
+    ----------
+    corners : CornerTrack
+    poses : Poses
+    passed_over : sequence of (start_s, end_s)
+        Still stretches that were not decoded: no gaps in sight.
+    """
     steps = np.diff(corners.time_s)
     frame_s = float(np.median(steps[steps > 0])) if np.any(steps > 0) else 1.0 / 30.0
     known = np.isfinite(poses.heading_rad) & np.isfinite(poses.residual_px)
@@ -123,6 +135,7 @@ def usable_frames(corners: CornerTrack, poses: Poses) -> Seen:
     return Seen(
         index=np.flatnonzero(known),
         time_s=corners.time_s[known],
+        gap_s=np.diff(corners.time_s[known]) - time_unread(passed_over, corners.time_s[known]),
         heading_deg=np.degrees(heading_rad),
         x_mm=poses.x_mm[known],
         y_mm=poses.y_mm[known],
@@ -234,7 +247,7 @@ def lag_of(seen: Seen, rests: list[RestHeading]) -> Lag:
 def _jumped(seen: Seen, motion: Motion) -> NDArray[np.bool_]:
     """Return the frames on both sides of a gap in sight over which the robot turned or went somewhere."""
     jumped = np.zeros(len(seen.time_s), dtype=bool)
-    for k in np.flatnonzero(np.diff(seen.time_s) > GAP_FRAMES * seen.frame_s):
+    for k in np.flatnonzero(seen.gap_s > GAP_FRAMES * seen.frame_s):
         turned_deg = abs(seen.heading_deg[k + 1] - seen.heading_deg[k])
         went_mm = np.hypot(seen.x_mm[k + 1] - seen.x_mm[k], seen.y_mm[k + 1] - seen.y_mm[k])
         if turned_deg > max(SMALLEST_TURN_DEG, 12.0 * motion.noise_deg) or went_mm > MOVED_MM:
@@ -362,9 +375,7 @@ def _scale_noise(seen: Seen) -> float:
 
 def _hidden_s(seen: Seen, move: Stretch) -> float:
     """Return the longest gap without sight in a motion, frames on both sides included."""
-    part = slice(max(move.first - 1, 0), move.last + 2)
-    gaps = np.diff(seen.time_s[part])
-    return float(gaps.max(initial=0.0)) if len(gaps) else 0.0
+    return float(seen.gap_s[max(move.first - 1, 0) : move.last + 1].max(initial=0.0))
 
 
 def _change_deg(seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None) -> float:
@@ -469,9 +480,12 @@ def _event(seen: Seen, move: Stretch, kind: str, detail: str) -> Event:
 def _gap_events(seen: Seen) -> list[Event]:
     """Return stretches longer than a few frames in which neither marker was seen."""
     times = np.concatenate([[0.0], seen.time_s, [seen.end_s]])
+    gaps_s = np.diff(times)
+    if len(seen.gap_s):
+        gaps_s[1:-1] = seen.gap_s
     events = []
     for number, (before_s, after_s) in enumerate(itertools.pairwise(times)):
-        if after_s - before_s > GAP_FRAMES * seen.frame_s:
+        if gaps_s[number] > GAP_FRAMES * seen.frame_s:
             inner = 0 < number < len(seen.index)
             filmed = not inner or seen.index[number] - seen.index[number - 1] > 1
             what = "neither marker seen" if filmed else "the clip has no picture"

@@ -51,6 +51,7 @@ def numbers(ctx: click.Context, param: click.Parameter, value: str | None) -> tu
     help="Turns, as numbered in turns.csv, that answer no command.",
 )
 @click.option("--again", is_flag=True, help="Measure even what was measured before with nothing changed since.")
+@click.option("--sparse", is_flag=True, help="Pass over long still stretches undecoded: faster, a little less is seen.")
 @click.option(
     "--workers",
     type=click.IntRange(min=1),
@@ -71,6 +72,7 @@ def command(
     undriven: tuple[int, ...],
     stray_turns: tuple[int, ...],
     again: bool,
+    sparse: bool,
     workers: int | None,
     scheduler: str | None,
     as_json: bool,

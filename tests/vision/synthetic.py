@@ -69,6 +69,7 @@ def seen_from(time_s, heading_deg, *, noise_deg=0.003, seed=0, keep=None, x_mm=0
     return Seen(
         index=np.flatnonzero(keep),
         time_s=time_s[keep],
+        gap_s=np.diff(time_s[keep]),
         heading_deg=(heading_deg + rng.normal(0, noise_deg, n))[keep],
         x_mm=(x_mm + 12.0 * np.cos(turn) + rng.normal(0, 0.01, n))[keep],
         y_mm=(12.0 * np.sin(turn) + rng.normal(0, 0.01, n))[keep],
