@@ -8,7 +8,6 @@ from dataclasses import replace
 import cv2
 import numpy as np
 import pytest
-from numpy.testing import assert_allclose
 
 from tests.vision.synthetic import IMAGE_PX, SIDE_MM, corner_track, truth
 from vision import bundle
