@@ -97,6 +97,10 @@ def svg_of(figure: Figure, name: str, alt: str) -> str:
     """
     import matplotlib as mpl
 
+    engine = figure.get_layout_engine()
+    if engine is not None:  # laid out once here: saving would draw everything twice for it
+        engine.execute(figure)
+        figure.set_layout_engine(None)
     buffer = io.StringIO()
     with mpl.rc_context({"svg.hashsalt": name}):
         figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
