@@ -144,6 +144,7 @@ class GroundWatcher:
         self._n_lost = 0
         self._number = -1
         self._start_px = np.zeros(4)
+        self._shape: tuple[int, ...] = ()
         self._times: list[float] = []
         self._shifts: list[FloatArray] = []
         self._us: list[float] = []
@@ -167,7 +168,7 @@ class GroundWatcher:
         )
 
     def _look(self, time_s: float, image: LumaImage) -> None:
-        if self._number < 0 or self._n_lost >= GIVEN_UP:
+        if self._number < 0 or self._n_lost >= GIVEN_UP or image.shape != self._shape:
             self._number += 1
             self._refer(image, np.zeros(4))
         since_px, u_px = self._common(image)
@@ -183,6 +184,7 @@ class GroundWatcher:
 
     def _refer(self, image: LumaImage, start_px: FloatArray) -> None:
         self._start_px = start_px
+        self._shape = image.shape
         self._patches = _patches_of(image)
         self._glance = _Glance(image, self._patches) if self._patches else None
         size = np.array(image.shape[::-1], dtype=float)

@@ -204,12 +204,7 @@ def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath
             f"the markers' corners miss a rigid pair on one plane by {calibration.residual_px:.2f} px: the camera "
             "moved (floor cards in view would hold it steady), a marker is loose, or the deck rocks"
         )
-    for card in cards:
-        if path.still and card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm:
-            said.append(
-                f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off); is it "
-                "curled, or not lying on the floor?"
-            )
+    said.extend(_uneven(cards) if path.still else [])
     said.extend(
         f"card {number} did not stay with the others and was left out; was it moved, or is it curled?"
         for number in path.strays
@@ -230,6 +225,22 @@ def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath
             for start_s, end_s in path.spans
         )
     return said
+
+
+def _uneven(cards: list[CardCheck]) -> list[str]:
+    """Return what is to be said about cards that do not look square on the robot's plane: most of them accuse it."""
+    off = [card for card in cards if card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm]
+    if len(off) > 1 and 2 * len(off) > len(cards):
+        worst_mm = max(card.out_of_square_mm for card in off)
+        return [
+            f"{len(off)} of {len(cards)} floor cards do not look square on the plane that the robot's markers give (by "
+            f"up to {worst_mm:.1f} mm): a robot marker is creased, curled or loose; stick both on stiff card"
+        ]
+    return [
+        f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off); is it "
+        "curled, or not lying on the floor?"
+        for card in off
+    ]
 
 
 def _loose(path: CameraPath) -> list[str]:

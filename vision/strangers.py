@@ -42,7 +42,7 @@ def _of_another_dictionary(image: LumaImage, setup: MarkerSetup, *, every_lackin
         return None
     best: tuple[int, str] = (0, "")
     for name in sorted(dictionary_names(), key=_size):  # the larger ones of a family hold the smaller
-        if name == setup.dictionary:
+        if name.lower() == setup.dictionary.lower():  # some have two spellings
             continue
         ids = {item.marker_id for item in detect(image, name, (setup.fore_id, setup.aft_id, *setup.card_ids))}
         best = max(best, (len(ids), name), key=lambda item: item[0])

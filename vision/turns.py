@@ -58,8 +58,12 @@ KNOCK_S = 0.2
 LIFT_SHARE = 0.005
 """A change of apparent size beyond this, against the rests, means that the robot was lifted or tilted."""
 
-STANDING_SCALES = 3.0
+STANDING_SCALES = 6.0
 """And beyond so many times what it changes by while the robot stands: a warped picture breathes."""
+
+ROCKED_SHARE, ROCKED_MM = 0.025, 4.0
+"""A smaller change of size, in a turn that strays less from a fixed centre, is a body that rocks: no hand is as exact.
+"""
 
 HIDDEN_LIFT_SHARE = 0.03
 """The same where a marker is partly covered or out of sight."""
@@ -181,6 +185,37 @@ class Split:
     lag: Lag
 
 
+@dataclass(frozen=True, eq=False, slots=True)
+class _Swell:
+    """How much larger or smaller than usual the pair appears, and from when on that means that it was lifted."""
+
+    change: FloatArray
+    limit: float
+    limit_hidden: float
+    """The same where a marker is partly covered or out of sight."""
+
+    def lifted(self, part: slice, clear: NDArray[np.bool_]) -> float:
+        """Return by how much the apparent size changed over a motion; 0 if by no more than the markers' own noise."""
+        change = self.change[part]
+        for values, limit in ((change[clear], self.limit), (change, self.limit_hidden)):
+            if len(values) >= FRAMES_TO_BELIEVE:
+                lifted = float(np.sort(values)[-FRAMES_TO_BELIEVE])
+                if lifted > limit:
+                    return lifted
+        return 0.0
+
+
+def _swell(seen: Seen, motion: Motion) -> _Swell:
+    change = np.abs(seen.scale / np.nanmedian(seen.scale) - 1.0) if len(seen.scale) else seen.scale
+    still = change[~motion.moving & seen.clear]
+    standing = STANDING_SCALES * float(np.nanquantile(still, 0.9)) if len(still) else 0.0
+    return _Swell(
+        change,
+        limit=max(LIFT_SHARE, 8.0 * _scale_noise(seen), standing),
+        limit_hidden=max(HIDDEN_LIFT_SHARE, standing),
+    )
+
+
 def split_turns(
     seen: Seen, cov: FloatArray, *, camera_still: bool = True, knocks: Sequence[tuple[float, float]] = ()
 ) -> Split:
@@ -199,6 +234,7 @@ def split_turns(
     motion = find_motion(seen.time_s, seen.heading_deg, seen.x_mm, seen.y_mm, reach_mm=seen.reach_mm)
     moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
     moves = stretches(moving)
+    swell = _swell(seen, motion)
     rests = _rests_around(seen, moves)
     share = pooled_share(seen.left, [rest for rest in rests if rest is not None])
     lag = lag_of(seen, [rest for rest in rests[1:] if rest is not None])
@@ -211,11 +247,13 @@ def split_turns(
     states = np.where(moving, "move", "rest").astype("<U7")
     for number, move in enumerate(moves):
         before, after = rests[number], rests[number + 1]
-        kind, detail = _judge(seen, motion, move, before, after)
+        kind, detail = _judge(seen, motion, swell, move, before, after)
         if kind == "turn" and _knocked(seen, move, knocks):
             continue
         if kind == "turn":
-            turns.append(_turn(seen, motion, move, before, after, uncertainty))
+            part = slice(move.first, move.last + 1)
+            rocked = swell.lifted(part, seen.clear[part]) > 0.0
+            turns.append(_turn(seen, motion, move, before, after, uncertainty, rocked=rocked))
             states[move.first : move.last + 1] = "turn"
         elif not _knocked(seen, move, knocks):
             events.append(_event(seen, move, kind, detail))
@@ -308,15 +346,20 @@ def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
 
 
 def _judge(
-    seen: Seen, motion: Motion, move: Stretch, before: RestHeading | None, after: RestHeading | None
+    seen: Seen,
+    motion: Motion,
+    swell: _Swell,
+    move: Stretch,
+    before: RestHeading | None,
+    after: RestHeading | None,
 ) -> tuple[str, str]:
     """Return what a motion was: ``turn``, or the kind of an event with a detail."""
     change = _change_deg(seen, move, before, after)
     part = slice(move.first, move.last + 1)
     path_mm = float(np.hypot(np.diff(seen.x_mm[part]), np.diff(seen.y_mm[part])).sum())
     _, _, wander_mm = _centre(seen, move)
-    lifted = _lifted(seen, motion, part)
-    if lifted > 0.0:
+    lifted = swell.lifted(part, seen.clear[part])
+    if lifted > 0.0 and not _rocks(lifted, wander_mm, change):
         return (
             "handled",
             f"apparent size changed by {100.0 * lifted:.1f} %; heading changed by {change:.2f} deg",
@@ -345,20 +388,9 @@ def _judge(
     return "turn", ""
 
 
-def _lifted(seen: Seen, motion: Motion, part: slice) -> float:
-    """Return by how much the apparent size changed over a motion; 0 if by no more than the markers' own noise."""
-    every = np.abs(seen.scale / np.nanmedian(seen.scale) - 1.0)
-    change, still = every[part], every[~motion.moving & seen.clear]
-    usual = STANDING_SCALES * float(np.nanquantile(still, 0.9)) if len(still) else 0.0
-    for values, limit in (
-        (change[seen.clear[part]], max(LIFT_SHARE, 8.0 * _scale_noise(seen), usual)),
-        (change, max(HIDDEN_LIFT_SHARE, usual)),
-    ):
-        if len(values) >= FRAMES_TO_BELIEVE:
-            lifted = float(np.sort(values)[-FRAMES_TO_BELIEVE])
-            if lifted > limit:
-                return lifted
-    return 0.0
+def _rocks(lifted: float, wander_mm: float, change_deg: float) -> bool:
+    """Return whether a change of apparent size is the body's own rocking: small, in a turn that stays on the spot."""
+    return lifted < ROCKED_SHARE and wander_mm < ROCKED_MM and abs(change_deg) > SMALLEST_TURN_DEG
 
 
 def _top_rate(motion: Motion) -> float:
@@ -391,12 +423,14 @@ def _turn(
     before: RestHeading | None,
     after: RestHeading | None,
     uncertainty: Callable[[RestHeading, RestHeading], float],
+    *,
+    rocked: bool,
 ) -> Turn:
     part = slice(move.first, move.last + 1)
     start = float(seen.heading_deg[before.after].mean()) if before else float(seen.heading_deg[move.first])
     end = float(seen.heading_deg[after.before].mean()) if after else float(seen.heading_deg[move.last])
     change = end - start
-    flags = _flags(seen, motion, move, before, after)
+    flags = _flags(seen, motion, move, before, after, rocked=rocked)
     u = uncertainty(before, after) if before is not None and after is not None else np.nan
     known = np.isfinite(u)
     centre_x, centre_y, wander = _centre(seen, move)
@@ -419,7 +453,13 @@ def _turn(
 
 
 def _flags(
-    seen: Seen, motion: Motion, move: Stretch, before: RestHeading | None, after: RestHeading | None
+    seen: Seen,
+    motion: Motion,
+    move: Stretch,
+    before: RestHeading | None,
+    after: RestHeading | None,
+    *,
+    rocked: bool,
 ) -> tuple[str, ...]:
     flags: list[str] = []
     if before is None or after is None:
@@ -428,6 +468,8 @@ def _flags(
         flags.append("gap")
     if _pushes(seen, motion, move) > 1:
         flags.append("two_pushes")
+    if rocked:
+        flags.append("rocked")
     return tuple(flags)
 
 

@@ -82,3 +82,11 @@ def test_a_view_that_is_lost_altogether_does_not_compare():
     path = watched([view(texture(1), rng=rng) for _ in range(4)] + [view(texture(2), rng=rng) for _ in range(9)])
     assert path.moved_px(0.0, 3.0) == np.inf
     assert [round(still[0], 2) for still in path.stills()] == [0.0, 2.0]
+
+
+def test_a_damaged_clip_may_change_its_size():
+    rng, floor = np.random.default_rng(8), texture()
+    whole = [view(floor, rng=rng) for _ in range(3)]
+    path = watched([*whole, *(picture[:128, :200] for picture in whole), *whole, whole[0][:5, :7]])
+    assert len(path.time_s) == 10
+    assert path.moved_px(0.0, 1.0) == np.inf

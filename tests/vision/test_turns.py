@@ -127,3 +127,47 @@ def test_overshoot_and_settling():
     result = split(time_s, heading + ringing)
     assert result.turns[0].overshoot_deg > 1.0
     assert_allclose(changes(result), [90.0], atol=0.02)
+
+
+def test_a_body_that_rocks_in_its_turn_is_not_lifted():
+    time_s, heading = profile([90.0, 90.0])
+    moving = np.abs(np.gradient(heading)) > 1e-6
+    result = split(time_s, heading, scale=1.0 + 0.012 * np.sin(20.0 * time_s) * moving)
+    assert_allclose(changes(result), [90.0, 90.0], atol=0.01)
+    assert [turn.flags for turn in result.turns] == [("rocked",)] * 2
+
+
+def test_a_lift_is_no_turn_however_it_turns():
+    time_s, heading = profile([90.0, 90.0])
+    second = (np.abs(np.gradient(heading)) > 1e-6) & (heading > 91.0)
+    result = split(time_s, heading, scale=1.0 + 0.06 * second)
+    assert_allclose(changes(result), [90.0], atol=0.01)
+    assert [event.kind for event in result.events] == ["handled"]
+
+
+def test_a_turn_that_strays_out_of_sight_was_helped():
+    time_s, heading = profile([90.0, 90.0])
+    inside = (heading > 120.0) & (heading < 150.0)
+    away = np.where(heading > 135.0, 90.0, 0.0)
+    result = split(time_s, heading, keep=~inside, x_mm=away)
+    assert_allclose(changes(result), [90.0], atol=0.01)
+    assert "handled" in [event.kind for event in result.events]
+
+
+def test_a_turn_and_back_without_a_rest_says_so():
+    time_s, heading = profile([60.0, -60.0], rest_s=0.8)
+    pause = (heading > 59.9) & (np.abs(np.gradient(heading)) < 1e-6)
+    keep = ~pause
+    time_s = np.arange(keep.sum()) / 30.0
+    result = split(time_s, heading[keep])
+    assert result.turns == ()
+    assert [event.kind for event in result.events] == ["nudge"]
+    assert "went 60.0 deg away and came back" in result.events[0].detail
+
+
+def test_what_moves_while_the_view_moves_is_not_the_robot():
+    time_s, heading = profile([90.0, 1.5, 90.0])
+    small = time_s[(heading > 90.001) & (heading < 91.499)]
+    result = split_turns(seen_from(time_s, heading), NO_COV, knocks=[(float(small[0]), float(small[-1]))])
+    assert_allclose(changes(result), [90.0, 90.0], atol=0.01)
+    assert result.events == ()
