@@ -18,8 +18,10 @@ from calib.intervals import Estimate, t_quantile
 from calib.mixture import Part, mixed_t
 from calib.tolerance import HalfBand, tolerance_half_width
 
-GRID = 240
-"""Points to a side of the grid of equal probability that stands for what is not known of mean and scatter."""
+SCATTER_NODES, SCATTER_WEIGHTS = (np.asarray(one) for one in np.polynomial.legendre.leggauss(256))
+MEAN_NODES, MEAN_WEIGHTS = (np.asarray(one) for one in np.polynomial.legendre.leggauss(48))
+"""Gauss-Legendre nodes of the probabilities that stand for what is not known of scatter and mean; they lie closer
+towards the tails."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -49,9 +51,7 @@ def tolerance_band(command: Command, coverage: float = 0.95, confidence: float =
     coverage, confidence : float
     """
     laws = [
-        HalfBand(
-            weight=one.weight, u_centre=math.hypot(one.u_mean_deg, one.bias_deg), sd=one.scatter_deg
-        )
+        HalfBand(weight=one.weight, u_centre=math.hypot(one.u_mean_deg, one.bias_deg), sd=one.scatter_deg)
         for one in command.laws
     ]
     if command.scatter_deg == 0.0:
@@ -88,9 +88,8 @@ def hit_rate(command: Command, tolerance_deg: float, confidence: float = 0.95) -
         return Estimate(value=1.0, u=0.0, low=1.0, high=1.0, confidence=confidence)
     shares, weights = [], []
     for law in command.laws:
-        one = _shares(law, command.dof, tolerance_deg).ravel()
-        shares.append(one)
-        weights.append(np.full(len(one), law.weight / len(one)))
+        shares.append(_shares(law, command.dof, tolerance_deg).ravel())
+        weights.append(law.weight * 0.25 * np.outer(SCATTER_WEIGHTS, MEAN_WEIGHTS).ravel())
     value, weight = np.concatenate(shares), np.concatenate(weights)
     mean = float(weight @ value)
     tail = 0.5 - 0.5 * confidence
@@ -113,10 +112,10 @@ def _share(law: Landing, tolerance_deg: float) -> float:
 
 
 def _shares(law: Landing, dof: float, tolerance_deg: float) -> NDArray[np.float64]:
-    """Return the shares under equally likely pairs of scatter and mean."""
-    middle = (np.arange(GRID) + 0.5) / GRID
-    scatter = law.scatter_deg * np.sqrt(dof / special.chdtri(dof, 1.0 - middle))[:, None]
-    bias = law.bias_deg + law.u_mean_deg / law.scatter_deg * scatter * special.ndtri(middle)[None, :]
+    """Return the shares under pairs of scatter and mean, shape (J, K), as likely as their weights say."""
+    scatter_at, mean_at = 0.5 * (SCATTER_NODES + 1.0), 0.5 * (MEAN_NODES + 1.0)
+    scatter = law.scatter_deg * np.sqrt(dof / special.chdtri(dof, 1.0 - scatter_at))[:, None]
+    bias = law.bias_deg + law.u_mean_deg / law.scatter_deg * scatter * special.ndtri(mean_at)[None, :]
     within: NDArray[np.float64] = special.ndtr((tolerance_deg - bias) / scatter) - special.ndtr(
         (-tolerance_deg - bias) / scatter
     )

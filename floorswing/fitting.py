@@ -284,6 +284,8 @@ def read_fit(path: str | Path) -> Fit:
     path = Path(path)
     if path.is_dir():
         path = path / FIT_FILE
+    if not path.exists():
+        raise FileError(f"{path}: no such file; give the fit.json that `floorswing fit` wrote")
     document = read_json(path, KIND, "floorswing fit")
     try:
         return _fit_of(document)
