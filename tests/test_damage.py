@@ -8,8 +8,11 @@ from __future__ import annotations
 import os
 import struct
 import zlib
+from fractions import Fraction
 from pathlib import Path
 
+import av
+import numpy as np
 import pytest
 
 from bench.fuzz import base_clips, damaged_clip, damaged_trial, try_clip, try_trial
@@ -95,3 +98,22 @@ def test_a_folder_of_stills_is_no_clip(tmp_path: Path):
         Clip(tmp_path / "stills")
     with pytest.raises(ClipError, match="is a still picture, not a clip"):
         Clip(tmp_path / "stills" / "1.png")
+
+
+def test_pictures_of_another_size_within_a_clip_are_passed_over(tmp_path: Path):
+    path = tmp_path / "clip.avi"
+    with av.open(str(path), "w") as container:
+        stream = container.add_stream("mjpeg", rate=10)
+        stream.width, stream.height, stream.pix_fmt = 64, 48, "yuvj420p"
+        other = av.CodecContext.create("mjpeg", "w")
+        other.width, other.height, other.pix_fmt, other.time_base = 32, 16, "yuvj420p", Fraction(1, 10)
+        for number, coder in enumerate([stream, stream, other, other, stream]):
+            black = np.zeros((coder.height, coder.width), np.uint8)
+            frame = av.VideoFrame.from_ndarray(black, "gray").reformat(format="yuvj420p")
+            frame.pts = number
+            for packet in coder.encode(frame):
+                packet.stream, packet.pts, packet.dts = stream, number, number
+                container.mux(packet)
+    with Clip(path) as clip:
+        assert {frame.luma.shape for frame in clip.frames()} == {(48, 64)}
+        assert "2 pictures of another size or format than the first were passed over" in clip.problems[0]

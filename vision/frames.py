@@ -115,6 +115,8 @@ class Clip:
         self.passed_over: list[tuple[float, float]] = []
         """Stretches (start_s, end_s) that a sparse reading left undecoded; complete once `frames` is exhausted."""
         self._n_bad = 0
+        self._n_unlike = 0
+        self._kind: tuple[int, int, str] | None = None
         self._broken = False
         self._stop = threading.Event()
         self._worker: threading.Thread | None = None
@@ -244,10 +246,17 @@ class Clip:
 
     def _decoded(self, packet: Any) -> list[Any]:
         try:
-            return list(packet.decode())
+            return [picture for picture in packet.decode() if self._is_alike(picture)]
         except (av.error.FFmpegError, EOFError):
             self._n_bad += 1
             return []
+
+    def _is_alike(self, picture: Any) -> bool:
+        """Return whether a picture is like the first: only damage changes size or format within a clip."""
+        kind = (picture.width, picture.height, picture.format.name)
+        self._kind = self._kind or kind
+        self._n_unlike += kind != self._kind
+        return kind == self._kind
 
     def _pictures_sparsely(self, clock: _Clock) -> Iterator[Any]:
         """Yield decoded pictures of what moves, and of still stretches little more than the key frames."""
@@ -259,6 +268,8 @@ class Clip:
         """Say what could not be decoded, and if the file ends before it should by its own account."""
         if self._n_bad:
             self._note(f"{self._n_bad} damaged packets could not be decoded")
+        if self._n_unlike:
+            self._note(f"{self._n_unlike} pictures of another size or format than the first were passed over: damage")
         if self._broken:
             return
         promised_s = self.info.duration_s or 0.0
