@@ -33,8 +33,22 @@ from calib.models import (
     sides_of,
 )
 from calib.robust import RobustFit, robust_fit
-from calib.scatter import LawShare, ScatterFit, average_over_laws, fit_with_scatter, scatter_variance_deg2
-from calib.strays import FEWEST_DOF, STRAGGLER_LEVEL, STRAY_LEVEL, extreme_residuals, most_strays
+from calib.scatter import (
+    LawShare,
+    ScatterFit,
+    average_over_laws,
+    average_over_sets,
+    fit_with_scatter,
+    scatter_variance_deg2,
+)
+from calib.strays import (
+    FEWEST_DOF,
+    STRAGGLER_LEVEL,
+    extreme_residuals,
+    most_strays,
+    stray_level,
+    which_strays,
+)
 from calib.turns import Turns
 
 FloatArray = NDArray[np.float64]
@@ -43,6 +57,8 @@ CONFIDENCE = 0.95
 FEWEST_TURNS = 3
 STRONG = 10.0
 """Difference of the criterion that leaves a model no support (Burnham and Anderson 2002, 2.6)."""
+RIVAL = 0.005
+"""How likely it must be that another turn is the stray for the intervals to allow for it."""
 MOST_ROUNDS = 4
 """Rounds of leaving out strays and fitting the others."""
 UNKNOWN_SLACK = "the slack of the wheels before it is not known, and a dead band is fitted"
@@ -247,14 +263,53 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = Fal
     choice, place = _choose(turns, np.ones(len(turns), dtype=bool), drop_terms)
     for _ in range(0 if keep_strays else MOST_ROUNDS):
         # Strays blow up the scatter and bend its law, so they are judged again by what the others say.
-        found = tuple(sorted(_far_out(turns, choice, STRAY_LEVEL)))
+        found = tuple(sorted(_far_out(turns, choice)))
         if found == strays:
             break
         strays = found
         kept = np.ones(len(turns), dtype=bool)
         kept[list(strays)] = False
         choice, place = _choose(turns, kept, drop_terms)
-    return _concluded(turns, choice, place, strays)
+    doubts: tuple[str, ...] = ()
+    if len(strays) == 1:
+        choice, doubts = _with_rivals(turns, choice, strays[0], drop_terms)
+    return _concluded(turns, choice, place, strays, doubts)
+
+
+def _with_rivals(turns: Turns, choice: _Choice, stray: int, drop_terms: bool) -> tuple[_Choice, tuple[str, ...]]:
+    """Let the intervals rest on each turn that may be the stray in its stead, as far as it is likely to be."""
+    places, design, along, weight = _weighed(turns, choice)
+    likely = which_strays(design, along, weight)
+    rivals = [n for n in np.argsort(-likely) if likely[n] > 0.0 and places[n] != stray]
+    chances = [float(likely[list(places).index(stray)])]
+    choices = [choice]
+    for n in rivals:
+        kept = np.ones(len(turns), dtype=bool)
+        kept[places[n]] = False
+        try:
+            other, _ = _choose(turns, kept, drop_terms)
+        except CalibError:
+            continue
+        if _same_terms(other, choice):
+            choices.append(other)
+            chances.append(float(likely[n]))
+    believed = np.array(chances) / sum(chances)
+    if len(choices) < 2 or believed[0] > 1.0 - RIVAL:
+        return choice, ()
+    best = average_over_sets([one.best[1] for one in choices], believed)
+    full = average_over_sets([one.full[1] for one in choices], believed)
+    doubt = (
+        f"one turn strays, and the turns cannot tell which of {len(choices)}; the most likely one is left out, and the "
+        "intervals hold for each"
+    )
+    return replace(choice, best=(choice.best[0], best), full=(choice.full[0], full)), (doubt,)
+
+
+def _same_terms(one: _Choice, other: _Choice) -> bool:
+    return all(
+        replace(a[0], law=b[0].law) == b[0] and sides_of(one.turns) == sides_of(other.turns)
+        for a, b in ((one.best, other.best), (one.full, other.full))
+    )
 
 
 def _check_direction(turns: Turns) -> None:
@@ -319,24 +374,30 @@ def _fit_model(turns: Turns, model: Model) -> ScatterFit | None:
         return None
 
 
-def _far_out(turns: Turns, choice: _Choice, level: float) -> tuple[int, ...]:
-    """Return which of all turns lie too far from the chosen model."""
-    model, found = choice.best
-    usable = np.isfinite(turns.reversed_) if model.dead_band else np.ones(len(turns), dtype=bool)
-    rows = turns.take(usable)
-    design = design_of(rows, model)
-    if len(rows) - design.shape[1] < FEWEST_DOF:
+def _far_out(turns: Turns, choice: _Choice, level: float | None = None) -> tuple[int, ...]:
+    """Return which of all turns lie too far from the chosen model; without a level, at that of strays."""
+    places, design, along, weight = _weighed(turns, choice)
+    dof = len(places) - design.shape[1]
+    if dof < FEWEST_DOF:
         return ()
-    scatter2 = scatter_variance_deg2(found.shares, nominal_size_deg(rows), found.size_deg)
-    variance = np.maximum(rows.u_deg**2 + scatter2, TINY)
-    far = extreme_residuals(
-        design, rows.heading_deg * rows.side, variance.min() / variance, most=most_strays(len(rows)), level=level
-    )
-    places = np.flatnonzero(usable)
+    level = stray_level(dof) if level is None else level
+    far = extreme_residuals(design, along, weight, most=most_strays(len(places)), level=level)
     return tuple(int(places[index]) for index in far.strays)
 
 
-def _concluded(turns: Turns, choice: _Choice, place: NDArray[np.intp], strays: tuple[int, ...]) -> Fit:
+def _weighed(turns: Turns, choice: _Choice) -> tuple[NDArray[np.intp], FloatArray, FloatArray, FloatArray]:
+    """Return all turns that the chosen model can say something of: places, design, heading, relative weight."""
+    model, found = choice.best
+    usable = np.isfinite(turns.reversed_) if model.dead_band else np.ones(len(turns), dtype=bool)
+    rows = turns.take(usable)
+    scatter2 = scatter_variance_deg2(found.shares, nominal_size_deg(rows), found.size_deg)
+    variance = np.maximum(rows.u_deg**2 + scatter2, TINY)
+    return np.flatnonzero(usable), design_of(rows, model), rows.heading_deg * rows.side, variance.min() / variance
+
+
+def _concluded(
+    turns: Turns, choice: _Choice, place: NDArray[np.intp], strays: tuple[int, ...], doubts: tuple[str, ...]
+) -> Fit:
     model, scatter = choice.best
     if scatter.linear.coefficients[0] <= 0.0:
         raise CalibError("the robot turned against its commands, or not at all; check the signs of the commands")
@@ -359,7 +420,7 @@ def _concluded(turns: Turns, choice: _Choice, place: NDArray[np.intp], strays: t
         n_turns=len(choice.turns),
         tried_wheel_deg=(float(size.min()), float(size.max())),
         candidates=tuple(candidate for candidate, _ in choice.ranked),
-        notes=_notes(choice.turns),
+        notes=(*_notes(choice.turns), *doubts),
         residuals_deg=scatter.linear.residuals,
         standardised=scatter.linear.residuals / np.sqrt(scatter.variance_deg2),
         u_typical_deg=float(np.sqrt(np.mean(choice.turns.u_deg**2))),

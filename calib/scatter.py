@@ -188,6 +188,30 @@ def average_over_laws(fits: Sequence[ScatterFit]) -> ScatterFit:
     )
 
 
+def average_over_sets(fits: Sequence[ScatterFit], weight: FloatArray) -> ScatterFit:
+    """Return the first fit with the shares of fits of the same terms to other sets of turns, weighted by belief."""
+    first = fits[0]
+    shares = tuple(
+        replace(
+            share,
+            weight=float(w) * share.weight,
+            scatter_deg=share.scatter_at_deg(first.size_deg, one.size_deg),
+        )
+        for w, one in zip(weight, fits, strict=True)
+        for share in one.shares
+    )
+    each, believed = np.array([one.coefficients for one in shares]), np.array([one.weight for one in shares])
+    mean = believed @ each
+    cov = np.einsum("k,kij->ij", believed, np.array([one.cov for one in shares]))
+    cov = cov + np.einsum("k,ki,kj->ij", believed, each - mean, each - mean)
+    return replace(
+        first,
+        linear=replace(first.linear, coefficients=mean, unscaled_cov=cov),
+        scatter_deg=float(np.sqrt(believed @ np.array([one.scatter_deg**2 for one in shares]))),
+        shares=shares,
+    )
+
+
 def scatter_variance_deg2(shares: Sequence[LawShare], size: FloatArray, typical: float) -> FloatArray:
     """Return the variance of single turns of these sizes, the laws weighted as they are believed."""
     parts = [one.weight * one.scatter_deg**2 * shape_of(size, typical, one.law) for one in shares]

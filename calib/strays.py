@@ -15,6 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 from calib.errors import CalibError
 from calib.intervals import t_quantile
 from calib.linear import TINY, least_squares
+from calib.mixture import worth
 
 FloatArray = NDArray[np.float64]
 
@@ -23,6 +24,8 @@ STRAY_LEVEL = 0.01
 `STRAGGLER_LEVEL` that at which it is only pointed out (ISO 5725-2:1994, 7.3.2.1)."""
 STRAGGLER_LEVEL = 0.05
 FEWEST_DOF = 3
+"""Below that nothing can be called a stray. Just there, one is judged at `STRAGGLER_LEVEL`: at 1 % it would have to lie
+some 25 standard deviations out, and one of half that would stay and spoil every interval."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -53,6 +56,11 @@ class Extremes:
 def most_strays(n: int) -> int:
     """Return how many strays are looked for among `n` turns."""
     return max(1, min(10, n // 5))
+
+
+def stray_level(dof: int) -> float:
+    """Return the level at which a turn is left out, with these degrees of freedom before."""
+    return STRAY_LEVEL if dof > FEWEST_DOF else STRAGGLER_LEVEL
 
 
 def extremes(values: ArrayLike, *, most: int, level: float = STRAGGLER_LEVEL) -> Extremes:
@@ -119,6 +127,27 @@ def extreme_residuals(
         critical=np.array(critical),
         n_strays=int(beyond[-1]) + 1 if len(beyond) else 0,
     )
+
+
+def which_strays(design: ArrayLike, data: ArrayLike, weight: ArrayLike) -> FloatArray:
+    """Return for each value how likely it is to be the stray, given that just one is, shape (N,).
+
+    Few turns often cannot tell: two that alone stand for their kind fit equally well without either. By the residual
+    likelihood of the others.
+
+    Parameters
+    ----------
+    design : array_like, shape (N, P)
+    data, weight : array_like, shape (N,)
+    """
+    matrix, weights = np.asarray(design, dtype=float), np.asarray(weight, dtype=float)
+    fit = least_squares(matrix, data, weights)
+    free = 1.0 - weights * np.einsum("ij,jk,ik->i", matrix, fit.unscaled_cov, matrix)
+    told = free > 1e-9
+    share = np.where(told, weights * fit.residuals**2 / np.where(told, free, 1.0), 0.0)
+    left = np.maximum(1.0 - share / max(fit.dof * fit.residual_sd**2, TINY), 1e-24)
+    log_likelihood = np.where(told, -0.5 * (fit.dof - 1) * np.log(left) - 0.5 * np.log(np.where(told, free, 1.0)), -700)
+    return worth(np.exp(log_likelihood - log_likelihood.max()))
 
 
 def _farthest(

@@ -3,7 +3,8 @@ import pytest
 from numpy.testing import assert_allclose
 
 from calib.fit import fit_turns
-from calib.strays import extreme_residuals, extremes
+from calib.strays import extreme_residuals, extremes, which_strays
+from calib.turns import Turns, reversals
 from tests.calib.test_fit import simulated, turns
 
 ROSNER = """-0.25 0.68 0.94 1.15 1.20 1.26 1.26 1.34 1.38 1.43 1.49 1.49 1.55 1.56 1.58 1.65 1.69 1.70
@@ -56,3 +57,20 @@ def test_strays_are_left_out_and_named():
 def test_an_exact_line_has_no_strays(n):
     x = np.arange(1.0, n + 1)
     assert extreme_residuals(x[:, None], 0.5 * x, most=2).n_strays == 0
+
+
+def test_two_turns_that_alone_stand_for_their_kind_cannot_be_told_apart():
+    # Gain each way and loss at a reversal, from 2, 1, 2 and 1 turns: leaving out either single turn fits as well.
+    wheel = np.array([190.0, 190.0, -190.0, -190.0, 190.0, 190.0, -190.0])
+    state = reversals(wheel, slack_known=np.arange(7) > 0)
+    along = 0.48 * (np.abs(wheel) - 7.0 * np.nan_to_num(state)) + np.array([0.0, 0.1, -0.1, 0.05, 0.0, -0.1, -0.05])
+    heading = np.sign(wheel) * along
+    for far in (3, 4):  # the only clockwise start along, the only counter-clockwise one against
+        strayed = heading.copy()
+        strayed[far] -= 18.0 * np.sign(wheel[far])
+        fit = fit_turns(Turns(wheel_deg=wheel, heading_deg=strayed, u_deg=np.full(7, 0.02), reversed_=state))
+        band = fit.dead_band_wheel_deg()
+        assert any("cannot tell which of 2" in note for note in fit.notes)
+        assert band.low < 7.0 < band.high
+        assert fit.repeatability_deg().value < 1.0
+    assert sum(which_strays(np.ones((5, 1)), [0.0, 0.1, -0.1, 0.0, 9.0], np.ones(5)) > 0.01) == 1
