@@ -66,7 +66,8 @@ def test_every_command_and_option_named_in_a_page_exists(page: Path):
             continue
         command = cli.get_command(context, name)
         assert command is not None
-        known = {option for parameter in command.params for option in parameter.opts}
+        parts = [command, *(command.commands.values() if isinstance(command, click.Group) else ())]
+        known = {option for part in parts for parameter in part.params for option in parameter.opts}
         for option in re.findall(r"(?<![\w-])--[a-z-]+", rest):
             assert option in known | {"--help", "--version"}, (name, option)
 
