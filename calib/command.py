@@ -102,6 +102,11 @@ def command_for(
         raise NotIdentified(
             f"no turn of the fit is {SIDE_NAMES[side]}, so nothing is known for {wanted_deg:g} deg; drive some"
         )
+    if after_reversal and not any(one.model.dead_band for one in fit.candidates):
+        raise NotIdentified(
+            "what is lost after a reversal cannot be told from these turns; drive at least two that start against, and "
+            "two that start along, the direction of the turn before"
+        )
     size = abs(wanted_deg)
     gain = fit.gain_row(side)
     lost = fit.lost_row() * float(after_reversal) - fit.offset_row(side)

@@ -250,7 +250,7 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = Fal
     NotEnoughTurns
         With fewer than three turns.
     CalibError
-        If the robot turned against its commands, or did not turn.
+        If the robot turned against its commands, or did not turn, or an uncertainty is no number.
     """
     if len(turns) < FEWEST_TURNS:
         raise NotEnoughTurns(
@@ -258,6 +258,7 @@ def fit_turns(turns: Turns, *, keep_strays: bool = False, drop_terms: bool = Fal
             n_seen=len(turns),
             n_needed=FEWEST_TURNS,
         )
+    _check_uncertainty(turns)
     _check_direction(turns)
     strays: tuple[int, ...] = ()
     choice, place = _choose(turns, np.ones(len(turns), dtype=bool), drop_terms)
@@ -310,6 +311,14 @@ def _same_terms(one: _Choice, other: _Choice) -> bool:
         replace(a[0], law=b[0].law) == b[0] and sides_of(one.turns) == sides_of(other.turns)
         for a, b in ((one.best, other.best), (one.full, other.full))
     )
+
+
+def _check_uncertainty(turns: Turns) -> None:
+    bad = np.flatnonzero(~(np.isfinite(turns.u_deg) & (turns.u_deg >= 0.0)))
+    if len(bad):
+        raise CalibError(
+            f"turn {bad[0] + 1} has the standard uncertainty {turns.u_deg[bad[0]]:g} deg; accepted: finite, 0 or more"
+        )
 
 
 def _check_direction(turns: Turns) -> None:

@@ -85,7 +85,8 @@ def hit_rate(command: Command, tolerance_deg: float, confidence: float = 0.95) -
     if not tolerance_deg > 0.0 or not math.isfinite(tolerance_deg):
         raise ValueError(f"tolerance {tolerance_deg}; accepted: an angle above 0")
     if command.scatter_deg == 0.0:
-        return Estimate(value=1.0, u=0.0, low=1.0, high=1.0, confidence=confidence)
+        sure = tolerance_deg >= t_quantile(confidence, command.dof) * command.u_mean_deg
+        return Estimate(value=1.0, u=0.0, low=float(sure), high=1.0, confidence=confidence)
     shares, weights = [], []
     for law in command.laws:
         shares.append(_shares(law, command.dof, tolerance_deg).ravel())

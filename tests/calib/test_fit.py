@@ -138,6 +138,18 @@ def test_too_few_and_wrong_way():
         fit_turns(turns(np.full(5, 190.0), np.full(5, -90.0) + np.arange(5)))
 
 
+@pytest.mark.parametrize("u_deg", [np.nan, -0.1, np.inf])
+def test_an_uncertainty_that_is_none_is_refused(u_deg):
+    with pytest.raises(CalibError, match="turn 1 has the standard uncertainty"):
+        fit_turns(turns(np.full(4, 190.0), np.array([90.0, 91.0, 90.5, 90.0]), u_deg))
+
+
+def test_a_start_against_the_turn_before_needs_a_dead_band_that_can_be_told():
+    fit = fit_turns(turns(np.full(6, 190.0), 90.0 + np.arange(6) * 0.1))
+    with pytest.raises(NotIdentified, match="after a reversal"):
+        command_for(fit, 90.0, after_reversal=True)
+
+
 def test_zero_scatter_is_no_trouble():
     fit = fit_turns(turns(np.array([100.0, -100.0, 200.0, -200.0]), np.array([50.0, -50.0, 100.0, -100.0])))
     assert_allclose(fit.gain().value, 0.5)

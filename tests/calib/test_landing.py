@@ -88,5 +88,8 @@ def test_what_cannot_be_asked_is_refused():
         closure(landing(), 0)
 
 
-def test_a_robot_without_scatter_always_hits():
+def test_a_robot_without_scatter_hits_as_surely_as_its_mean_is_known():
     assert hit_rate(landing(scatter_deg=0.0, u_mean_deg=0.0), 0.1).low == 1.0
+    known = hit_rate(landing(scatter_deg=0.0, u_mean_deg=0.1, dof=11), 0.25)
+    assert known.low == 1.0  # t of 11 degrees of freedom: 2.201
+    assert hit_rate(landing(scatter_deg=0.0, u_mean_deg=0.1, dof=11), 0.2).low == 0.0
