@@ -11,9 +11,11 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterable, Iterator
 from contextlib import contextmanager
+from typing import Any
 
 import cv2
 import numpy as np
+from numpy.typing import NDArray
 from scipy.linalg.lapack import dposv
 
 from vision.align import CornerFit, Held, fit_corners
@@ -648,18 +650,45 @@ def _track(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
     seeker = _Seeker(setup)
     times: list[float] = []
     keys: list[bool] = []
-    sights: list[Sight] = []
+    sights = _Sights()
     for frame in frames:
         tracker = seeker.tracker
         times.append(frame.time_s)
         keys.append(frame.is_key)
         if tracker is None:
             tracker = seeker.seek(frame)
-        sights.append(tracker.see(frame) if tracker is not None else nothing_seen())
+        sights.add(tracker.see(frame) if tracker is not None else nothing_seen())
         seeker.cards.look(frame)
     if seeker.tracker is None:
         raise MarkersNotFound(seeker.complaint())
     return _stack(times, keys, sights, seeker)
+
+
+class _Sights:
+    """Sights of many frames, put into arrays a thousand at a time: a long clip must not fill the memory."""
+
+    NAMES = ("corners_px", "information", "noise_var", "explained", "smear_px", "repeat")
+    AT_ONCE = 1024
+
+    def __init__(self) -> None:
+        self._fresh: list[Sight] = []
+        self._stacked: dict[str, list[NDArray[Any]]] = {name: [] for name in self.NAMES}
+
+    def add(self, sight: Sight) -> None:
+        self._fresh.append(sight)
+        if len(self._fresh) >= self.AT_ONCE:
+            self._stack()
+
+    def _stack(self) -> None:
+        for name, parts in self._stacked.items():
+            parts.append(np.array([getattr(sight, name) for sight in self._fresh]))
+        self._fresh.clear()
+
+    def columns(self) -> dict[str, NDArray[Any]]:
+        """Return the arrays over all frames, each under its name, and forget the parts."""
+        if self._fresh:
+            self._stack()
+        return {name: np.concatenate(self._stacked.pop(name)) for name in self.NAMES}
 
 
 class _Seeker:
@@ -735,18 +764,13 @@ class _Seeker:
         return strangers(self._shown[1], self._setup, lacking) if self._shown is not None else None
 
 
-def _stack(times: list[float], keys: list[bool], sights: list[Sight], seeker: _Seeker) -> CornerTrack:
+def _stack(times: list[float], keys: list[bool], sights: _Sights, seeker: _Seeker) -> CornerTrack:
     tracker = seeker.tracker
     assert tracker is not None
     return CornerTrack(
         time_s=np.array(times),
         is_key=np.array(keys, dtype=bool),
-        corners_px=np.stack([s.corners_px for s in sights]),
-        information=np.stack([s.information for s in sights]),
-        noise_var=np.stack([s.noise_var for s in sights]),
-        explained=np.stack([s.explained for s in sights]),
-        smear_px=np.array([s.smear_px for s in sights]),
-        repeat=np.array([s.repeat for s in sights], dtype=bool),
+        **sights.columns(),
         body=tracker.body,
         optics=tracker.optics,
         exposure_s=tracker.exposure_s,
