@@ -2,7 +2,8 @@
 
 Printed side by side from one run: time to decode the clip's luma alone with PyAV, time of the whole measurement, time
 of the script that anybody would write (OpenCV capture, detection on every full frame, sub-pixel corners), ratios as
-medians of paired runs, and the peak memory on the clip and on a long one made of copies of it.
+medians of paired runs, and the peak memory on the clip and on a long one made of copies of it. Then what following
+the markers alone costs on frames that are decoded already, at rest and in motion, and one comparison of both patterns.
 """
 
 from __future__ import annotations
@@ -24,7 +25,11 @@ import numpy as np
 
 from floorswing.pipeline import measure_clip
 from floorswing.trial import read_trial
+from vision.align import fit_corners
+from vision.frames import Clip
+from vision.pair import build_pattern, mean_side_px, pair_modules
 from vision.records import MarkerSetup
+from vision.track import PairTracker, find_pair, one_thread
 
 HERE = Path(__file__).resolve().parent.parent / "demo_videos"
 
@@ -104,6 +109,46 @@ def peak_mb(clip: Path, trial: Path) -> tuple[float, float]:
     return float(memory), float(seconds)
 
 
+def following_ms(clip: Path, setup: MarkerSetup) -> tuple[float, float, float, float]:
+    """Return the time (ms a frame, medians) of resting and moving frames, of one comparison, and the side (px)."""
+    tracker: PairTracker | None = None
+    rest, moving, compared, side_px = [], [], [], np.nan
+    with Clip(clip) as opened, one_thread():
+        for frame in opened.frames():
+            if tracker is None:
+                corners_px, _ = find_pair(frame.luma, setup)
+                if corners_px is not None:
+                    tracker, last_px = PairTracker(setup, frame.luma, corners_px), corners_px
+                continue
+            start = time.perf_counter()
+            sight = tracker.see(frame)
+            spent_ms = 1e3 * (time.perf_counter() - start)
+            if not np.all(np.isfinite(sight.corners_px)):
+                continue
+            if frame.index % 10 == 0:
+                side_px = float(np.mean([mean_side_px(corners) for corners in sight.corners_px]))
+                compared.append(comparison_ms(frame.luma, sight.corners_px, setup, tracker))
+            (moving if moved_px(sight.corners_px, last_px) > 0.5 else rest).append(spent_ms)
+            last_px = sight.corners_px
+    return statistics.median(rest), statistics.median(moving or [np.nan]), statistics.median(compared), side_px
+
+
+def moved_px(corners_px: np.ndarray, before_px: np.ndarray) -> float:
+    return float(np.abs(corners_px - before_px).max())
+
+
+def comparison_ms(luma: np.ndarray, corners_px: np.ndarray, setup: MarkerSetup, tracker: PairTracker) -> float:
+    """Return the time of one Gauss-Newton comparison of both patterns with a frame."""
+    patterns = [
+        build_pattern(black, mean_side_px(corners), tracker.optics)
+        for black, corners in zip(pair_modules(setup), corners_px, strict=True)
+    ]
+    start = time.perf_counter()
+    for corners, pattern in zip(corners_px, patterns, strict=True):
+        fit_corners(luma, corners, pattern.sharp)
+    return 1e3 * (time.perf_counter() - start)
+
+
 def timed(work: object) -> float:
     start = time.perf_counter()
     work()  # type: ignore[operator]
@@ -135,6 +180,11 @@ def main() -> None:
     print(f"plain script              {plainly:7.2f} s  {1e3 * plainly / n_frames:6.2f} ms a frame")
     print(f"measure / decode          {statistics.median(m / d for d, m, _ in rows):7.2f}    (paired median)")
     print(f"plain script / measure    {statistics.median(p / m for _, m, p in rows):7.2f}    (paired median)")
+    still_ms, moving_ms, once_ms, side_px = following_ms(clip, setup)
+    decode_ms = 1e3 * decoding / n_frames
+    print(f"following, at rest        {still_ms:7.2f} ms a frame, {still_ms / decode_ms:4.2f} of decoding")
+    print(f"following, in motion      {moving_ms:7.2f} ms a frame, {moving_ms / decode_ms:4.2f} of decoding")
+    print(f"one comparison of both    {once_ms:7.2f} ms, markers {side_px:.0f} px (asked: at most 1.0 ms at 45 px)")
     memory, _ = peak_mb(clip, trial)
     print(f"peak memory               {memory:7.0f} MB")
     if options.minutes > 0:
