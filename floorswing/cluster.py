@@ -23,7 +23,7 @@ def run_on_cluster(
     """Yield the number of each job and its outcome, in the order in which they are finished.
 
     The same as `floorswing.workers.run_in_workers`, by the workers of the scheduler at `address`. A worker that dies
-    fails the job after the cluster's own number of attempts.
+    takes the jobs waiting on it along; so those that the cluster gives up are tried once more at the end, each alone.
 
     Raises
     ------
@@ -44,11 +44,21 @@ def run_on_cluster(
     with client:
         _listen(client, tell)
         numbers = {client.submit(_do, task, n, job, pure=False): n for n, job in enumerate(jobs)}
+        given_up: list[int] = []
         try:
             for future in as_completed(list(numbers), loop=client.loop):
-                outcome = _outcome(future)
+                outcome, number = _outcome(future), numbers.pop(future)
                 future.release()
-                yield numbers.pop(future), outcome
+                if isinstance(outcome, WorkerDied) and len(jobs) > 1:
+                    given_up.append(number)
+                else:
+                    yield number, outcome
+            for number in given_up:
+                future = client.submit(_do, task, number, jobs[number], pure=False)
+                numbers[future] = number
+                next(iter(as_completed([future], loop=client.loop)))
+                yield number, _outcome(future)
+                del numbers[future]
         finally:
             with contextlib.suppress(Exception):  # the scheduler may be gone
                 client.cancel(list(numbers), force=True)

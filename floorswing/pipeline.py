@@ -45,7 +45,7 @@ def measure_clip(
     """
     ground = GroundWatcher()
     with Clip(path, threads=threads) as clip:
-        corners = track_pair(ground.passing(_reported(clip, progress, sparse=sparse)), setup)
+        corners = track_pair(_reported(clip, progress, sparse=sparse), setup, ground)
         info, problems, passed_over = clip.info, tuple(clip.problems), tuple(clip.passed_over)
     path_seen = camera_path(corners, ground.path())
     corners, calibration = calibrate_steadied(corners, path_seen)

@@ -12,6 +12,7 @@ import contextlib
 import itertools
 import math
 import queue
+import sys
 import threading
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
@@ -34,6 +35,9 @@ LumaImage = NDArray[np.uint8] | NDArray[np.uint16]
 
 FRAMES_AHEAD = 6
 """Decoded frames that may wait for the tracker: enough to overlap, little memory even in 4K."""
+
+SWITCH_S = 3e-4
+"""How soon the interpreter gives the decoder its turn while the tracker computes; by default (5 ms) it starves."""
 
 MAX_PIXELS = 64_000_000
 """A larger picture is refused: no phone makes it, and a forged header could exhaust the memory."""
@@ -153,6 +157,8 @@ class Clip:
         self._worker = threading.Thread(target=self._decode_into, args=(waiting, sparse), name="decode", daemon=True)
         self._worker.start()
         n_frames = 0
+        patience_s = sys.getswitchinterval()
+        sys.setswitchinterval(min(patience_s, SWITCH_S))
         try:
             while (item := waiting.get()) is not None:
                 if isinstance(item, BaseException):
@@ -160,6 +166,7 @@ class Clip:
                 n_frames += 1
                 yield item
         finally:
+            sys.setswitchinterval(patience_s)
             self._stop.set()
         if n_frames == 0:
             raise ClipError(f"{self.path.name}: no picture in it can be decoded; is the file complete?")

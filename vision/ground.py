@@ -153,10 +153,14 @@ class GroundWatcher:
     def passing(self, frames: Iterable[Frame]) -> Iterator[Frame]:
         """Yield the frames unchanged, looking at some of them."""
         for frame in frames:
-            if frame.time_s >= self._next_s:
-                self._next_s = frame.time_s + LOOK_EVERY_S
-                self._look(frame.time_s, frame.luma)
+            self.see(frame)
             yield frame
+
+    def see(self, frame: Frame) -> None:
+        """Look at the floor if it is time."""
+        if frame.time_s >= self._next_s:
+            self._next_s = frame.time_s + LOOK_EVERY_S
+            self._look(frame.time_s, frame.luma)
 
     def path(self) -> GroundPath:
         """Return what was seen so far."""

@@ -22,6 +22,7 @@ from vision.align import CornerFit, Held, fit_corners
 from vision.cards import CardWatcher
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
+from vision.ground import GroundWatcher
 from vision.markers import Detection, detect
 from vision.observations import CornerTrack, Sight, nothing_seen
 from vision.pair import (
@@ -623,8 +624,15 @@ def find_pair(image: LumaImage, setup: MarkerSetup) -> tuple[FloatArray | None, 
     return np.stack([same[0].corners_px for same in pair]), found
 
 
-def track_pair(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
+def track_pair(frames: Iterable[Frame], setup: MarkerSetup, ground: GroundWatcher | None = None) -> CornerTrack:
     """Follow the robot's markers through a clip.
+
+    Parameters
+    ----------
+    frames : iterable of Frame
+    setup : MarkerSetup
+    ground : GroundWatcher, optional
+        Is shown the frames as long as no floor card is in view: cards tell more, and cost less.
 
     Raises
     ------
@@ -632,7 +640,7 @@ def track_pair(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
         If no frame shows both.
     """
     with one_thread():
-        return _track(frames, setup)
+        return _track(frames, setup, ground)
 
 
 @contextmanager
@@ -646,7 +654,7 @@ def one_thread() -> Iterator[None]:
         cv2.setNumThreads(before)
 
 
-def _track(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
+def _track(frames: Iterable[Frame], setup: MarkerSetup, ground: GroundWatcher | None) -> CornerTrack:
     seeker = _Seeker(setup)
     times: list[float] = []
     keys: list[bool] = []
@@ -659,6 +667,8 @@ def _track(frames: Iterable[Frame], setup: MarkerSetup) -> CornerTrack:
             tracker = seeker.seek(frame)
         sights.add(tracker.see(frame) if tracker is not None else nothing_seen())
         seeker.cards.look(frame)
+        if ground is not None and not seeker.cards.looks:
+            ground.see(frame)
     if seeker.tracker is None:
         raise MarkersNotFound(seeker.complaint())
     return _stack(times, keys, sights, seeker)

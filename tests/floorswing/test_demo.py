@@ -14,6 +14,7 @@ import av
 import pytest
 from click.testing import CliRunner
 
+from bench.clips import lengthen
 from floorswing.cli import cli
 from floorswing.demo import new_folder, truth_sentence
 from floorswing.demo_clips import demo_clips
@@ -137,17 +138,19 @@ def test_wrong_ids_and_half_wrong_ids_on_a_real_clip(short_clip: Path, tmp_path:
 
 def test_an_interrupted_measurement_leaves_nothing(tmp_path: Path):
     clip = CLIPS["cork_calm"]
-    command = [sys.executable, "-m", "floorswing", "measure", str(clip.clip), "--trial", str(clip.trial)]
+    long_clip = tmp_path / "long.mp4"
+    lengthen(clip.clip, 600.0, long_clip)
+    command = [sys.executable, "-m", "floorswing", "measure", str(long_clip), "--trial", str(clip.trial)]
     with subprocess.Popen(
         [*command, "--out", "out"], cwd=tmp_path, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     ) as process:
-        time.sleep(2.5)  # in the middle of the frames: the whole takes longer on any machine of today
+        time.sleep(4.0)  # in the middle of ten minutes, which take longer on any machine of today
         os.kill(process.pid, signal.SIGINT)
         stdout, stderr = process.communicate(timeout=60)
     assert process.returncode == 130
     assert stdout == ""
     assert stderr == "Interrupted: nothing was left half-written.\n"
-    assert list(tmp_path.iterdir()) == []
+    assert list(tmp_path.iterdir()) == [long_clip]
 
 
 def test_an_unknown_clip_and_a_used_folder_are_refused(tmp_path: Path):
