@@ -16,13 +16,13 @@ import subprocess
 import sys
 import tempfile
 import time
-from fractions import Fraction
 from pathlib import Path
 
 import av
 import cv2
 import numpy as np
 
+from bench.clips import lengthen
 from floorswing.pipeline import measure_clip
 from floorswing.trial import read_trial
 from vision.align import fit_corners
@@ -71,24 +71,6 @@ def plain_script(clip: Path, dictionary: str) -> int:
             return n_frames
         detector.detectMarkers(cv2.cvtColor(picture, cv2.COLOR_BGR2GRAY))
         n_frames += 1
-
-
-def lengthen(clip: Path, seconds: float, target: Path) -> None:
-    """Write copies of a clip's packets one after the other, without coding anything again."""
-    with av.open(str(target), "w") as out:
-        stream, base_s, shift_s = None, 0.0, 0.0
-        while shift_s < seconds:
-            with av.open(str(clip)) as source:
-                video = source.streams.video[0]
-                stream = stream or out.add_stream_from_template(video)
-                for packet in source.demux(video):
-                    if packet.dts is None:
-                        continue
-                    shift = round(shift_s / video.time_base)
-                    base_s = max(base_s, float((packet.pts + packet.duration) * video.time_base) + shift_s)
-                    packet.pts, packet.dts, packet.stream = packet.pts + shift, packet.dts + shift, stream
-                    out.mux(packet)
-                shift_s = float(Fraction(base_s).limit_denominator(90000))
 
 
 def peak_mb(clip: Path, trial: Path) -> tuple[float, float]:
