@@ -136,13 +136,23 @@ def test_wrong_ids_and_half_wrong_ids_on_a_real_clip(short_clip: Path, tmp_path:
     assert not (tmp_path / "out").exists()
 
 
+def heed_interrupts() -> None:
+    """Undo what shells do to programs in the background: they are made to ignore Ctrl-C, and hand that on."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
+
+
 def test_an_interrupted_measurement_leaves_nothing(tmp_path: Path):
     clip = CLIPS["cork_calm"]
     long_clip = tmp_path / "long.mp4"
     lengthen(clip.clip, 600.0, long_clip)
     command = [sys.executable, "-m", "floorswing", "measure", str(long_clip), "--trial", str(clip.trial)]
     with subprocess.Popen(
-        [*command, "--out", "out"], cwd=tmp_path, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+        [*command, "--out", "out"],
+        cwd=tmp_path,
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        preexec_fn=heed_interrupts,
     ) as process:
         time.sleep(4.0)  # in the middle of ten minutes, which take longer on any machine of today
         os.kill(process.pid, signal.SIGINT)
