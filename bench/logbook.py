@@ -95,7 +95,7 @@ def main() -> None:
     given = parser.parse_args()
     with tempfile.TemporaryDirectory() as place:
         folder, path = Path(place), Path(place) / "book.sqlite"
-        blocks = max(given.turns // 4, 1)
+        blocks = max(given.turns // 8, 1)
         clips = [measured(folder, f"clip{n}", seed=n, blocks=blocks) for n in range(8)]
         filled(path, clips[0], given.trials)
         with opened(path) as connection:

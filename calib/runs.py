@@ -115,6 +115,49 @@ def run_parts(
     )
 
 
+def run_parts_of_sums(
+    count: ArrayLike, total: ArrayLike, squares: ArrayLike, *, n_fitted: int = 1, confidence: float = 0.95
+) -> RunParts:
+    """Split the scatter within and between many runs, from the sums of each: what `run_parts` says of a common mean.
+
+    Parameters
+    ----------
+    count, total, squares : array_like, shape (R,)
+        Values of each run, their sum, and the sum of their squares.
+    n_fitted : int
+        Means that were fitted to the values and taken off before.
+    confidence : float
+
+    Raises
+    ------
+    NotIdentified
+        If there is one run only.
+    NotEnoughTurns
+        If nothing is left to tell the scatter within runs.
+    """
+    n, sums, squared = (np.asarray(one, dtype=float) for one in (count, total, squares))
+    if len(n) < 2:
+        raise NotIdentified("there is one run only")
+    n_all, dof_between = float(n.sum()), len(n) - 1
+    dof_within = int(n_all) - len(n) - (n_fitted - 1)
+    if dof_within < 1:
+        raise NotEnoughTurns(
+            f"{int(n_all)} turns in {len(n)} runs leave nothing to tell the scatter within runs; repeat some turns",
+            n_seen=int(n_all),
+            n_needed=int(n_all) + 1 - dof_within,
+        )
+    between = float(np.sum(sums**2 / n) - sums.sum() ** 2 / n_all)
+    within = float(squared.sum() - np.sum(sums**2 / n))
+    return _parts(
+        max(between, 0.0) / dof_between,
+        max(within, 0.0) / dof_within,
+        dof_between,
+        dof_within,
+        (n_all - float(np.sum(n**2)) / n_all) / dof_between,
+        confidence,
+    )
+
+
 def _clean(squares: float, data: FloatArray) -> float:
     """Return a sum of squares, 0 where it is nothing but rounding."""
     return squares if squares > len(data) * (1e-14 * float(np.abs(data).max())) ** 2 else 0.0

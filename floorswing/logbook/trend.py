@@ -11,7 +11,7 @@ import numpy as np
 
 from calib.control_chart import Chart, individuals_chart
 from calib.errors import CalibError, NotEnoughTurns
-from calib.runs import RunParts, run_parts
+from calib.runs import RunParts, run_parts_of_sums
 from floorswing.logbook.selection import LoggedTrial, Selection, some_trials
 from floorswing.logbook.store import LogbookError
 
@@ -100,21 +100,26 @@ def _days(connection: sqlite3.Connection, kept: Sequence[LoggedTrial]) -> RunPar
     rows = [
         row
         for row in connection.execute(
-            "SELECT trial, commanded_wheel_deg, heading_change_deg FROM turn "
-            "WHERE counts AND commanded_wheel_deg IS NOT NULL AND heading_change_deg IS NOT NULL"
+            "SELECT trial, commanded_wheel_deg > 0, count(*), sum(heading_change_deg / commanded_wheel_deg), "
+            "sum((heading_change_deg / commanded_wheel_deg) * (heading_change_deg / commanded_wheel_deg)), "
+            "avg(abs(commanded_wheel_deg)) FROM turn WHERE counts AND commanded_wheel_deg IS NOT NULL "
+            "AND heading_change_deg IS NOT NULL GROUP BY 1, 2"
         )
         if row[0] in day
     ]
     if not rows:
         return None
-    wheel, heading = np.array([row[1] for row in rows]), np.array([row[2] for row in rows])
-    typical = float(np.median(np.abs(wheel)))
+    side, n, total, squares, size = (np.array(column, dtype=float) for column in list(zip(*rows, strict=True))[1:])
+    for one in np.unique(side):  # each direction has a gain of its own
+        this = side == one
+        mean = total[this].sum() / n[this].sum()
+        squares[this] += n[this] * mean**2 - 2.0 * mean * total[this]
+        total[this] -= n[this] * mean
+    typical = float(np.average(size, weights=n))
+    names, which = np.unique([day[row[0]] for row in rows], return_inverse=True)
+    by_day = [np.bincount(which, weights=one, minlength=len(names)) for one in (n, total, squares)]
     try:
-        return run_parts(
-            heading / wheel * typical,
-            [day[row[0]] for row in rows],
-            np.column_stack([np.ones(len(wheel)), np.sign(wheel)]) if np.ptp(np.sign(wheel)) else None,
-        )
+        return run_parts_of_sums(by_day[0], by_day[1] * typical, by_day[2] * typical**2, n_fitted=len(np.unique(side)))
     except CalibError:
         return None
 

@@ -4,7 +4,7 @@ from numpy.testing import assert_allclose
 from scipy import stats
 
 from calib.errors import NotEnoughTurns, NotIdentified
-from calib.runs import run_parts
+from calib.runs import run_parts, run_parts_of_sums
 from tests.reference import columns
 
 
@@ -135,3 +135,14 @@ def test_runs_without_scatter():
     assert (found.repeatability.value, found.p_value) == (0.0, 0.0)
     assert_allclose(found.between.value, np.sqrt(0.5))
     assert run_parts([3.0] * 4, [1, 1, 2, 2]).p_value == 1.0
+
+
+def test_sums_of_runs_say_the_same_as_their_values():
+    rng = np.random.default_rng(11)
+    run = np.repeat(np.arange(6), [4, 7, 5, 9, 3, 6])
+    values = rng.normal(size=len(run)) + 0.7 * rng.normal(size=6)[run]
+    sums = [np.bincount(run, weights=one) for one in (np.ones(len(run)), values, values**2)]
+    whole, from_sums = run_parts(values, run), run_parts_of_sums(*sums)
+    for name in ("repeatability", "between", "reproducibility"):
+        one, other = getattr(whole, name), getattr(from_sums, name)
+        assert_allclose([other.value, other.low, other.high], [one.value, one.low, one.high], rtol=1e-9, atol=1e-12)
