@@ -52,7 +52,7 @@ class ClipJob:
     sparse : bool
         Whether still stretches need not be decoded in full.
     threads : int or None
-        Threads that decode it; None for as many as there are cores.
+        Threads that decode it; None for a few more than there are cores.
     asked : str
         Digest of the trial and the settings.
     known : str

@@ -34,7 +34,7 @@ def measure_clip(
     setup : MarkerSetup
     progress : callable, optional
     threads : int or None
-        Threads that decode the clip; None for as many as there are cores.
+        Threads that decode the clip; None for a few more than there are cores.
     sparse : bool
         Whether still stretches need not be decoded in full.
 

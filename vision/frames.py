@@ -11,6 +11,7 @@ import collections
 import contextlib
 import itertools
 import math
+import os
 import queue
 import sys
 import threading
@@ -32,6 +33,12 @@ from vision.records import ClipInfo
 from vision.sparse import LOOK_BACK_S, Group, dearest, grouped, is_dear, may_be_passed_over, n_kept, picture_moved
 
 LumaImage = NDArray[np.uint8] | NDArray[np.uint16]
+
+MORE_THREADS = 4
+"""Threads that decode beyond one per core: frames wait for each other's lines, and the cores must not wait too."""
+
+MOST_CORES = 12
+"""More cores than this are left alone: FFmpeg decodes with at most 16 threads."""
 
 FRAMES_AHEAD = 6
 """Decoded frames that may wait for the tracker: enough to overlap, little memory even in 4K."""
@@ -95,7 +102,7 @@ class Clip:
     path : path-like
         Any container and codec that FFmpeg reads.
     threads : int or None
-        Threads that decode; None for as many as there are cores.
+        Threads that decode; None for `MORE_THREADS` beyond one per core.
 
     Raises
     ------
@@ -108,7 +115,7 @@ class Clip:
         self._container = _open_container(self.path)
         try:
             self._stream = _video_stream(self._container, self.path)
-            self._stream.codec_context.thread_count = threads or 0
+            self._stream.codec_context.thread_count = threads or _n_cores() + MORE_THREADS
             self._upright = _upright_of(self.path)
         except BaseException:
             self._container.close()
@@ -457,6 +464,11 @@ class _Clock:
             now_s = stamp_s - self._first_s
         self.last_s = max(self.last_s, now_s)
         return self.last_s
+
+
+def _n_cores() -> int:
+    n_cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+    return min(n_cores, MOST_CORES)
 
 
 def _open_container(path: Path) -> Any:
