@@ -33,6 +33,12 @@ then move by one small distance, which would make a foreshortened square look le
 WHOLLY = 0.999
 """A pixel is compared only if the template covers its interpolation wholly; beyond the rim it knows nothing."""
 
+ALL = (1, 1)
+"""Every row and every column of pixels is compared."""
+
+ROOM = 1.1
+"""The template's surround reaches so far beyond the corners, in its own widths; perspective adds little."""
+
 FEWEST_PIXELS = 60
 """A marker with fewer pixels in the picture is not measured."""
 
@@ -144,9 +150,9 @@ class Held:
 
 
 @lru_cache(maxsize=1024)
-def _grid(height: int, width: int, thin: int) -> NDArray[np.float32]:
+def _grid(height: int, width: int, thin: tuple[int, int]) -> NDArray[np.float32]:
     """Return the pixels' places about the crop's centre in units of half its longer side, shape (2, n)."""
-    y, x = np.mgrid[0:height:thin, 0:width:thin]
+    y, x = np.mgrid[0 : height : thin[0], 0 : width : thin[1]]
     half = 0.5 * max(height, width)
     grid = np.stack([(x - 0.5 * (width - 1)) / half, (y - 0.5 * (height - 1)) / half])
     flat: NDArray[np.float32] = grid.reshape(2, -1).astype(np.float32)
@@ -185,7 +191,7 @@ def fit_corners(
     *,
     smear: tuple[FloatArray, ...] = (),
     soften_px: float = 0.0,
-    thin: int = 1,
+    thin: tuple[int, int] = ALL,
     robust: bool = False,
 ) -> CornerFit | None:
     """Compare a marker's pattern with the picture and return the corner model.
@@ -200,8 +206,8 @@ def fit_corners(
         Picture-to-picture motions over the exposure; the pattern is averaged over them.
     soften_px : float
         Extra blur given to the picture; the template should have been built with it too.
-    thin : int
-        Compare only every so many-th pixel along both axes: quicker, and less sharp by as much.
+    thin : (int, int)
+        Compare only every so many-th row and column: quicker, and less sharp by as much.
     robust : bool
         Give little weight to pixels that the pattern cannot explain (glint, shadow edge, finger).
 
@@ -214,8 +220,8 @@ def fit_corners(
     if box is None:
         return None
     x0, y0, x1, y1 = box
-    window = (slice(y0, y1, thin), slice(x0, x1, thin))
-    crop = _softened(image[y0:y1, x0:x1], soften_px)[::thin, ::thin] if soften_px > 0.0 else image[window]
+    window = (slice(y0, y1, thin[0]), slice(x0, x1, thin[1]))
+    crop = _softened(image[y0:y1, x0:x1], soften_px)[:: thin[0], :: thin[1]] if soften_px > 0.0 else image[window]
     local_px = corners_px - (x0, y0)
     to_crop = homography_from_corners(local_px)
     channels = _render(template, to_crop, crop.shape, smear, (x0, y0), thin)
@@ -242,7 +248,7 @@ def _box(corners_px: FloatArray, template: Template, shape: tuple[int, ...]) -> 
     size = max(right - left, bottom - top)
     if not 4.0 < size < 4.0 * max(shape):  # written so that NaN also lands here
         return None
-    pad = template.margin * 1.5 * size
+    pad = template.margin * ROOM * size
     x0, y0 = max(math.floor(left - pad), 0), max(math.floor(top - pad), 0)
     x1, y1 = min(math.ceil(right + pad) + 1, shape[1]), min(math.ceil(bottom + pad) + 1, shape[0])
     return (x0, y0, x1, y1) if x1 - x0 >= 6 and y1 - y0 >= 6 else None
@@ -254,17 +260,20 @@ def _render(
     shape: tuple[int, ...],
     smear: tuple[FloatArray, ...],
     origin_px: tuple[int, int],
-    thin: int,
+    thin: tuple[int, int],
 ) -> NDArray[np.float32]:
     """Return the template's channels at the crop's pixels, shape (4, n)."""
     size = (shape[1], shape[0])
     still = to_crop @ template.unit_from_sample
-    still[:2] /= thin
+    down, across = thin
+    still[0] /= across
+    still[1] /= down
     if not smear:
         seen = cv2.warpPerspective(template.channels, still, size, flags=cv2.INTER_LINEAR)
         return np.ascontiguousarray(seen.reshape(-1, 4).T)
-    there = np.array([[thin, 0.0, origin_px[0]], [0.0, thin, origin_px[1]], [0.0, 0.0, 1.0]])
-    back = np.array([[1.0 / thin, 0.0, -origin_px[0] / thin], [0.0, 1.0 / thin, -origin_px[1] / thin], [0.0, 0.0, 1.0]])
+    x0, y0 = origin_px
+    there = np.array([[across, 0.0, x0], [0.0, down, y0], [0.0, 0.0, 1.0]])
+    back = np.array([[1.0 / across, 0.0, -x0 / across], [0.0, 1.0 / down, -y0 / down], [0.0, 0.0, 1.0]])
     in_picture = there @ still
     total = np.zeros((*shape, 4), dtype=np.float32)
     for motion in smear:

@@ -37,6 +37,12 @@ BEST_PX, WORST_PX = 0.1, 2.0
 
 FEWEST_PATCHES = 6
 
+KNOWN_SHARE = 0.25
+"""Where less than this share of the patches is known again, they were noise, or the view is another."""
+
+ROBOT_REACH = 1.5
+"""Patches nearer to the robot's middle than so many times its farthest marker corner are not the floor's."""
+
 AGREE_PX = 1.5
 """Patches this near to the common motion share it: a tilt of the camera moves them unequally."""
 
@@ -127,6 +133,16 @@ class GroundPath:
         return [still for still in stretches if still[1] - still[0] >= SHORTEST_STILL_S]
 
 
+def _robot_disc(corners_px: FloatArray | None) -> tuple[FloatArray, float] | None:
+    """Return middle and radius (px) of what the robot covers; None if it is not seen."""
+    points = corners_px.reshape(-1, 2) if corners_px is not None else np.empty((0, 2))
+    points = points[np.isfinite(points).all(axis=1)]
+    if len(points) < 4:
+        return None
+    middle_px = points.mean(axis=0)
+    return middle_px, ROBOT_REACH * float(np.hypot(*(points - middle_px).T).max())
+
+
 def _size_px(shift_px: FloatArray) -> float:
     """Return how far a view is away: a turn of the picture is a turn of the robot, a shift hardly touches it."""
     return float(np.sqrt(np.sum((shift_px * SHIFT_WEIGHT) ** 2)))
@@ -145,6 +161,7 @@ class GroundWatcher:
         self._number = -1
         self._start_px = np.zeros(4)
         self._shape: tuple[int, ...] = ()
+        self._robot: tuple[FloatArray, float] | None = None
         self._times: list[float] = []
         self._shifts: list[FloatArray] = []
         self._us: list[float] = []
@@ -156,10 +173,18 @@ class GroundWatcher:
             self.see(frame)
             yield frame
 
-    def see(self, frame: Frame) -> None:
-        """Look at the floor if it is time."""
+    def see(self, frame: Frame, robot_px: FloatArray | None = None) -> None:
+        """Look at the floor if it is time.
+
+        Parameters
+        ----------
+        frame : Frame
+        robot_px : ndarray, shape (..., 2), optional
+            Corners of the robot's markers, NaN where unseen: what lies about them is not the floor.
+        """
         if frame.time_s >= self._next_s:
             self._next_s = frame.time_s + LOOK_EVERY_S
+            self._robot = _robot_disc(robot_px) or self._robot
             self._look(frame.time_s, frame.luma)
 
     def path(self) -> GroundPath:
@@ -189,7 +214,7 @@ class GroundWatcher:
     def _refer(self, image: LumaImage, start_px: FloatArray) -> None:
         self._start_px = start_px
         self._shape = image.shape
-        self._patches = _patches_of(image)
+        self._patches = tuple(patch for patch in _patches_of(image) if not self._on_robot(patch))
         self._glance = _Glance(image, self._patches) if self._patches else None
         size = np.array(image.shape[::-1], dtype=float)
         self._middle_px, self._reach_px = 0.5 * (size - 1.0), 0.25 * float(np.hypot(*size))
@@ -197,8 +222,8 @@ class GroundWatcher:
 
     def _common(self, image: LumaImage) -> tuple[FloatArray, float]:
         """Return the motion that most patches share, as in `GroundPath.shift_px`, and its u; NaN if they share none."""
-        found = self._found(image)
-        if len(found) < FEWEST_PATCHES:
+        found = [(patch, shift) for patch, shift in self._found(image) if not self._on_robot(patch)]
+        if len(found) < max(FEWEST_PATCHES, KNOWN_SHARE * len(self._patches)):
             return np.full(4, np.nan), np.nan
         places = (np.array([patch.centre_px for patch, _ in found]) - self._middle_px) / self._reach_px
         shifts = np.array([shift for _, shift in found])
@@ -215,6 +240,12 @@ class GroundWatcher:
             return np.full(4, np.nan), np.nan
         u_px = np.array([patch.u_px for patch, _ in found])
         return _similarity(places[share], shifts[share], u_px[share])
+
+    def _on_robot(self, patch: _Patch) -> bool:
+        if self._robot is None:
+            return False
+        middle_px, radius_px = self._robot
+        return float(np.hypot(*(patch.centre_px - middle_px))) < radius_px + HALF_PX
 
     def _found(self, image: LumaImage) -> list[tuple[_Patch, FloatArray]]:
         """Return the patches that are known again with their shifts: all at once while nothing has moved far."""

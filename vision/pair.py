@@ -28,8 +28,11 @@ WORTH = 0.98
 """A rendering with tone curve and halo is kept if it leaves less than this share of what plain blur leaves."""
 
 
-ENOUGH_PX = 20.0
-"""So many compared pixels along a side are enough while the pair moves: rests are what counts."""
+ENOUGH_PX = 300.0
+"""So many compared pixels on a marker are enough while the pair moves: rests are what counts."""
+
+THINNED = ((1, 1), (2, 1), (2, 2), (3, 2), (3, 3), (4, 3), (4, 4), (5, 4), (5, 5))
+"""Every so many-th row and column that may be compared, from all to ever fewer."""
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -122,9 +125,10 @@ class Pattern:
     soften_px: float
 
     @property
-    def thin(self) -> int:
-        """Which pixels are compared while the pair moves: every so many-th along both axes."""
-        return min(max(int(self.side_px / ENOUGH_PX), 1), 5)
+    def thin(self) -> tuple[int, int]:
+        """Every so many-th row and column is compared while the pair moves."""
+        most = max(self.side_px**2 / ENOUGH_PX, 1.0)
+        return max((down, across) for down, across in THINNED if down * across <= most)
 
 
 def build_pattern(black: NDArray[np.bool_], side_px: float, optics: Optics) -> Pattern:

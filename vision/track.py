@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg.lapack import dposv
 
-from vision.align import CornerFit, Held, fit_corners
+from vision.align import ALL, CornerFit, Held, fit_corners
 from vision.cards import CardWatcher
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
@@ -302,7 +302,7 @@ class PairTracker:
                 pattern.soft if soft else pattern.sharp,
                 smear=smear,
                 soften_px=pattern.soften_px if soft else 0.0,
-                thin=pattern.thin if smear or soft or self._in_motion else 1,
+                thin=pattern.thin if smear or soft or self._in_motion else ALL,
             )
             if np.all(np.isfinite(corners))
             else None
@@ -364,7 +364,7 @@ class PairTracker:
                 fit.corners_px + move,
                 self._patterns[m].sharp,
                 smear=smear,
-                thin=self._patterns[m].thin if smear or self._in_motion else 1,
+                thin=self._patterns[m].thin if smear or self._in_motion else ALL,
             )
             if again is None or again.explained < HOLD:
                 return None
@@ -665,10 +665,11 @@ def _track(frames: Iterable[Frame], setup: MarkerSetup, ground: GroundWatcher | 
         keys.append(frame.is_key)
         if tracker is None:
             tracker = seeker.seek(frame)
-        sights.add(tracker.see(frame) if tracker is not None else nothing_seen())
+        sight = tracker.see(frame) if tracker is not None else nothing_seen()
+        sights.add(sight)
         seeker.cards.look(frame)
         if ground is not None and not seeker.cards.looks:
-            ground.see(frame)
+            ground.see(frame, sight.corners_px)
     if seeker.tracker is None:
         raise MarkersNotFound(seeker.complaint())
     return _stack(times, keys, sights, seeker)

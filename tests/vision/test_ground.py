@@ -77,6 +77,26 @@ def test_a_bare_floor_says_nothing():
     assert np.isnan(path.moved_px(0.0, 1.0))
 
 
+def test_a_robot_that_turns_on_a_bare_floor_is_not_taken_for_the_floor():
+    rng = np.random.default_rng(8)
+    bare, marks = np.full((SIZE[1] + 200, SIZE[0] + 200), 120.0), texture(9, contrast=60.0)
+    deck = np.hypot(*(np.indices((SIZE[1], SIZE[0]))[::-1] - MIDDLE[:, None, None])) < 110.0
+
+    def picture(turn_deg):
+        return np.where(deck, view(marks, turn_deg=turn_deg), view(bare, rng=rng)).astype(np.uint8)
+
+    corners = MIDDLE + 90.0 * np.array([[1.0, 0.0], [0.0, 1.0], [-1.0, 0.0], [0.0, -1.0]])
+
+    def path(robot_px):
+        watcher = GroundWatcher()
+        for k, turn_deg in enumerate((0.0, 0.0, 0.0, 1.0, 2.0, 3.0, 3.0, 3.0)):
+            watcher.see(Frame(k, 0.25 * k, picture(turn_deg), False), robot_px)
+        return watcher.path()
+
+    assert path(None).moved_px(0.0, 1.75) > 1.0  # px: without that knowledge the deck is all that can be compared
+    assert not path(corners).known
+
+
 def test_a_view_that_is_lost_altogether_does_not_compare():
     rng = np.random.default_rng(7)
     path = watched([view(texture(1), rng=rng) for _ in range(4)] + [view(texture(2), rng=rng) for _ in range(9)])
