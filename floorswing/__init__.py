@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from floorswing.comparing import compare as compare
     from floorswing.fitting import fit as fit
     from floorswing.measuring import measure as measure
+    from floorswing.previewing import preview as preview
     from floorswing.report.making import write_report as write_report
 
 __version__ = "0.1.0"
@@ -26,11 +27,12 @@ _HOMES = {
     "compare": "floorswing.comparing",
     "fit": "floorswing.fitting",
     "measure": "floorswing.measuring",
+    "preview": "floorswing.previewing",
     "write_report": "floorswing.report.making",
 }
 """Where each public function lives; loaded when first asked for, since some need a second to load."""
 
-__all__ = ["__version__", "compare", "fit", "measure", "write_report"]
+__all__ = ["__version__", "compare", "fit", "measure", "preview", "write_report"]
 
 
 def __getattr__(name: str) -> Any:

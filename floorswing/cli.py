@@ -21,6 +21,7 @@ COMMANDS: dict[str, str] = {
     "demo": "Run the main job on the bundled clips and compare with the truth.",
     "sheets": "Make the sheets to print: robot markers and floor cards in true scale.",
     "new": "Write a trial file, asking for what it needs.",
+    "preview": "Say whether a set-up will do, from a few seconds or a photo.",
     "measure": "Measure the turns in clips filmed from above.",
     "fit": "Fit heading change against commanded wheel degrees.",
     "command": "Say what to command for wanted angles.",

@@ -429,6 +429,11 @@ class _KeyFrames:
         self._first = min((stamp for stamp, _ in stamps), default=0)
         self._times_s = sorted(self.time_s(stamp) for stamp, is_key in stamps if is_key)
 
+    @property
+    def all_s(self) -> list[float]:
+        """Times of the key frames, in order."""
+        return self._times_s
+
     def time_s(self, stamp: int) -> float:
         """Return the time of a stamp from the first picture on."""
         return float((stamp - self._first) * self._base)
@@ -442,6 +447,12 @@ class _KeyFrames:
         inside = [time_s for time_s in self._times_s if start_s <= time_s <= end_s]
         before = [time_s for time_s in self._times_s if time_s < start_s]
         return inside[0] if inside else before[-1] if before else -math.inf
+
+
+def key_interval_s(path: Path) -> float:
+    """Return the usual time between two key frames of a clip, from its packets; infinite if it has only one."""
+    times_s = _KeyFrames(path).all_s
+    return float(np.median(np.diff(times_s))) if len(times_s) > 1 else math.inf
 
 
 class _Clock:

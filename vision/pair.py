@@ -127,8 +127,13 @@ class Pattern:
     @property
     def thin(self) -> tuple[int, int]:
         """Every so many-th row and column is compared while the pair moves."""
-        most = max(self.side_px**2 / ENOUGH_PX, 1.0)
-        return max((down, across) for down, across in THINNED if down * across <= most)
+        return thin_for(self.side_px)
+
+
+def thin_for(side_px: float) -> tuple[int, int]:
+    """Return which rows and columns of a marker of that size are compared while it moves."""
+    most = max(side_px**2 / ENOUGH_PX, 1.0)
+    return max((down, across) for down, across in THINNED if down * across <= most)
 
 
 def build_pattern(black: NDArray[np.bool_], side_px: float, optics: Optics) -> Pattern:
