@@ -366,7 +366,8 @@ class _Patch:
             if not _inside(image, self.centre_px + shift_px, HALF_PX):
                 return None
             seen = _cut(image, self.centre_px + shift_px, HALF_PX).ravel()
-            gain = float(seen @ self._basis[1]) / float(self._pattern.ravel() @ self._basis[1])
+            shown = float(self._pattern.ravel() @ self._basis[1])
+            gain = float(seen @ self._basis[1]) / shown if shown > 0.0 else 0.0
             if gain <= 0.05:
                 return None
             left = self._free(seen)

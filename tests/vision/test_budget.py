@@ -63,7 +63,7 @@ def test_lag_from_the_jumps_at_key_frames():
     keys[31] = True
     seen = replace(seen_from(time_s, heading, noise_deg=1e-6), is_key=keys, u_heading_deg=np.full(90, 0.01))
     found = coding_lag(seen, [np.arange(15, 60)], 0.4)
-    usual = np.degrees(0.015 / seen.reach_px)
+    usual = np.degrees(0.0075 / seen.reach_px)
     assert found.n_jumps == 1
     # One jump of 0.02, and the usual lag counted once; frozen headings make the usual lag count in full.
     assert_allclose(found.u_deg, np.sqrt((0.02**2 + usual**2) / 2), rtol=0.01)
