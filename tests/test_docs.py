@@ -36,6 +36,11 @@ def test_every_flag_is_explained_and_every_explained_flag_exists():
     assert set(table_after("### Flags in `turns.csv`")) == used
 
 
+def test_every_kind_of_advice_is_explained_and_exists():
+    used = set(re.findall(r'kind="([a-z ]+)"', (ROOT / "floorswing" / "advice.py").read_text(encoding="utf-8")))
+    assert set(table_after("### What `floorswing preview` advises")) == used
+
+
 def test_whether_a_flagged_turn_counts_is_said_as_it_is():
     part = FILMING.split("### Flags in `turns.csv`", 1)[1].split("\n##", 1)[0]
     counts = dict(re.findall(r"^\| `(\w+)` \| (yes|no) \|", part, flags=re.MULTILINE))

@@ -48,7 +48,7 @@ import click
 def command(
     path: Path, trial: Path | None, want: float | None, seconds: float, rate: float, rest: float, as_json: bool
 ) -> None:
-    """Look at the first seconds of a CLIP, or at a PHOTO, of the robot where it will be filmed.
+    """Look at CLIP_OR_PHOTO, the robot where it will be filmed: the first seconds of a clip, or one photo.
 
     Printed are the markers in figures, the light and the camera, the uncertainty that measuring turns will state, and
     what to change first. A photo cannot show what changes from frame to frame: noise, flicker, coding, a moving camera.
