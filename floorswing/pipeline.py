@@ -10,9 +10,10 @@ from vision.ground import GroundWatcher
 from vision.poses import solve_poses
 from vision.records import ClipResult, MarkerSetup
 from vision.result import assemble
+from vision.shutter import at_one_moment, line_delay, scan_axis
 from vision.steady import calibrate_steadied, camera_path
 from vision.track import track_pair
-from vision.turns import split_turns, usable_frames
+from vision.turns import moving_frames, split_turns, usable_frames, with_moving_part
 
 Progress = Callable[[float, float | None], None]
 """Called now and then with the time reached in the clip and the clip's length, both in s."""
@@ -53,7 +54,14 @@ def measure_clip(
     seen = usable_frames(corners, poses, passed_over)
     knocks = path_seen.spans if path_seen.loose else ()
     split = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
-    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems)
+    moving, axis = moving_frames(split, seen, len(corners.time_s)), scan_axis(info.rotation_deg)
+    delay = line_delay(corners, calibration, poses, moving, axis, setup.line_delay_s)
+    if delay.delay_s:
+        corners = at_one_moment(corners, calibration, poses, moving, axis, delay.delay_s)
+        seen = usable_frames(corners, solve_poses(corners, calibration), passed_over)
+        again = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
+        split = with_moving_part(split, again)
+    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems, delay)
 
 
 def _reported(clip: Clip, progress: Progress | None, *, sparse: bool) -> Iterator[Frame]:

@@ -27,6 +27,9 @@ DEFAULT_CARDS = (10, 29)
 MOST_MM = 5_000.0
 """Nothing on a small robot or its floor is larger; a slip of the decimal point is."""
 
+MOST_DELAY_US = 200.0
+"""No camera takes longer from row to row; 0 is a global shutter, and less one that takes its rows upwards."""
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Robot:
@@ -58,6 +61,13 @@ class Floor:
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
+class Camera:
+    """The camera: the time from one row of its picture to the next (None to estimate it, 0 for a global shutter)."""
+
+    line_delay_us: float | None = None
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
 class Trial:
     """One filmed run of commands with one robot set-up on one surface.
 
@@ -65,8 +75,8 @@ class Trial:
     ----------
     path : Path
         The trial file.
-    robot, markers, floor, commands
-        Its four tables.
+    robot, markers, floor, commands, camera
+        Its tables.
     """
 
     path: Path
@@ -74,6 +84,7 @@ class Trial:
     markers: Markers
     floor: Floor
     commands: Commands
+    camera: Camera = Camera()
 
     def marker_setup(self) -> MarkerSetup:
         """Return what has to be looked for in the pictures."""
@@ -85,6 +96,7 @@ class Trial:
             card_ids=tuple(range(first_last[0], first_last[1] + 1)) if first_last else (),
             marker_side_mm=self.robot.marker_side_mm,
             card_side_mm=self.floor.card_side_mm,
+            line_delay_s=None if self.camera.line_delay_us is None else 1e-6 * self.camera.line_delay_us,
         )
 
     def as_dict(self) -> dict[str, Any]:
@@ -115,6 +127,7 @@ def trial_from_dict(plain: dict[str, Any]) -> Trial:
             factors=tuple((name, tuple(values)) for name, values in commands["factors"].items()),
             file=commands["file"],
         ),
+        camera=Camera(**plain.get("camera", {})),
     )
 
 
@@ -151,11 +164,12 @@ def trial_from_text(text: str, path: Path) -> Trial:
         The same as `read_trial`.
     """
     top = Keys(path, "", _tables_of(text, path))
-    robot, markers, floor, commands = (
+    robot, markers, floor, commands, camera = (
         top.table("robot"),
         top.table("markers", optional=True),
         top.table("floor"),
         top.table("commands"),
+        top.table("camera", optional=True),
     )
     top.finish()
     read_floor = _floor(floor)
@@ -165,6 +179,7 @@ def trial_from_text(text: str, path: Path) -> Trial:
         markers=_markers(markers, with_cards=read_floor.card_side_mm is not None),
         floor=read_floor,
         commands=_commands(commands, path),
+        camera=_camera(camera),
     )
 
 
@@ -207,6 +222,16 @@ def _floor(keys: Keys) -> Floor:
     )
     keys.finish()
     return floor
+
+
+def _camera(keys: Keys) -> Camera:
+    camera = Camera(
+        line_delay_us=keys.optional_number(
+            "line_delay_us", above=-MOST_DELAY_US, most=MOST_DELAY_US, unit="microseconds"
+        )
+    )
+    keys.finish()
+    return camera
 
 
 def _markers(keys: Keys, *, with_cards: bool) -> Markers:

@@ -42,6 +42,8 @@ class MarkerSetup:
         Outer edge of the black square of the robot's markers.
     card_side_mm : float or None
         The same for the floor cards; None when there are none.
+    line_delay_s : float or None
+        Time from one row of the camera's picture to the next, where it is known; None to estimate it.
     """
 
     dictionary: str = "APRILTAG_36h11"
@@ -50,6 +52,7 @@ class MarkerSetup:
     card_ids: tuple[int, ...] = tuple(range(10, 30))
     marker_side_mm: float
     card_side_mm: float | None = None
+    line_delay_s: float | None = None
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

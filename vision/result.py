@@ -13,6 +13,7 @@ from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
 from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
 from vision.redraw import FloorFrame, redraw_record
+from vision.shutter import LineDelay
 from vision.steady import CameraPath, warp_px
 from vision.turns import Seen, Split
 
@@ -38,6 +39,7 @@ def assemble(
     split: Split,
     path: CameraPath,
     problems: tuple[str, ...],
+    delay: LineDelay,
 ) -> ClipResult:
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
@@ -52,6 +54,7 @@ def assemble(
         events=tuple(sorted(events, key=lambda event: event.start_s)),
         plane={
             **_plane_record(corners, calibration, cards, setup),
+            "line_delay": _delay_record(delay, corners),
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
         budget=budget_of(seen, split, calibration, camera_still=not path.held),
@@ -177,6 +180,18 @@ def _plane_record(
                     "halo_px": corners.optics.halo_px, "exposure_s": corners.exposure_s},
         "cards": [_card_record(card, setup) for card in cards],
     }  # fmt: skip
+
+
+def _delay_record(delay: LineDelay, corners: CornerTrack) -> dict[str, object]:
+    """Return what is known of the rolling shutter; it touches the moving frames alone."""
+    known = delay.n_motions > 0 and np.isfinite(delay.u_s)
+    return {
+        "us": 1e6 * delay.delay_s,
+        "u_us": 1e6 * delay.u_s if known else None,
+        "how": delay.how,
+        "motions": delay.n_motions,
+        "frame_read_ms": 1e3 * abs(delay.delay_s) * corners.image_px[1],
+    }
 
 
 def _card_record(card: CardCheck, setup: MarkerSetup) -> dict[str, object]:

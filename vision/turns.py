@@ -270,6 +270,29 @@ def split_turns(
     )
 
 
+def moving_frames(split: Split, seen: Seen, n_frames: int) -> NDArray[np.bool_]:
+    """Return which frames of the clip show the robot in motion, shape (n_frames,)."""
+    moving = np.zeros(n_frames, dtype=bool)
+    moving[seen.index] = split.motion.moving
+    return moving
+
+
+def with_moving_part(split: Split, again: Split) -> Split:
+    """Return a split whose turns take from another, of the same clip, what happened between their rests.
+
+    Angles from rest to rest, their uncertainty, times and flags stay; the peak rate, overshoot, settling, and the
+    centre and wander of the rotation come from the other.
+    """
+    turns = []
+    for turn in split.turns:
+        same = [other for other in again.turns if other.start_s < turn.end_s and other.end_s > turn.start_s]
+        if len(same) == 1:
+            names = ("peak_rate_deg_s", "overshoot_deg", "settle_s", "centre_x_mm", "centre_y_mm", "wander_mm")
+            turn = replace(turn, **{name: getattr(same[0], name) for name in names})
+        turns.append(turn)
+    return replace(split, turns=tuple(turns))
+
+
 def _knocked(seen: Seen, move: Stretch, knocks: Sequence[tuple[float, float]]) -> bool:
     """Return whether a motion is no more than the picture's own."""
     first_s, last_s = float(seen.time_s[move.first]), float(seen.time_s[move.last])

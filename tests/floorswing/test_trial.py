@@ -21,6 +21,23 @@ def written(tmp_path: Path, text: str) -> Path:
     return path
 
 
+@pytest.mark.parametrize(("text", "value_s"), [("28.0", 28e-6), ("0", 0.0), ("-5", -5e-6)])
+def test_a_line_delay_is_read(tmp_path: Path, text: str, value_s: float):
+    trial = read_trial(written(tmp_path, f"{TRIAL}[camera]\nline_delay_us = {text}\n"))
+    assert trial.marker_setup().line_delay_s == pytest.approx(value_s)
+    assert trial_from_dict(trial.as_dict()) == trial
+
+
+def test_without_a_line_delay_it_is_to_be_estimated(trial_file: Path):
+    assert read_trial(trial_file).marker_setup().line_delay_s is None
+
+
+@pytest.mark.parametrize("text", ['"fast"', "300", "-200", "nan", "true"])
+def test_an_impossible_line_delay_is_refused(tmp_path: Path, text: str):
+    with pytest.raises(TrialError, match="line_delay_us"):
+        read_trial(written(tmp_path, f"{TRIAL}[camera]\nline_delay_us = {text}\n"))
+
+
 def test_reads_every_key(trial_file: Path):
     trial = read_trial(trial_file)
     assert trial.robot.name == "shuttle 2"
