@@ -7,13 +7,13 @@ from pathlib import Path
 
 from vision.frames import Clip, Frame
 from vision.ground import GroundWatcher
-from vision.poses import solve_poses
 from vision.records import ClipResult, MarkerSetup
 from vision.result import assemble
 from vision.shutter import at_one_moment, line_delay, scan_axis
 from vision.steady import calibrate_steadied, camera_path
 from vision.track import track_pair
 from vision.turns import moving_frames, split_turns, usable_frames, with_moving_part
+from vision.views import further_views, in_first_view, solve_views
 
 Progress = Callable[[float, float | None], None]
 """Called now and then with the time reached in the clip and the clip's length, both in s."""
@@ -50,18 +50,20 @@ def measure_clip(
         info, problems, passed_over = clip.info, tuple(clip.problems), tuple(clip.passed_over)
     path_seen = camera_path(corners, ground.path())
     corners, calibration = calibrate_steadied(corners, path_seen)
-    poses = solve_poses(corners, calibration)
+    views = further_views(corners, path_seen)
+    poses, cov = solve_views(corners, calibration, views)
     seen = usable_frames(corners, poses, passed_over)
     knocks = path_seen.spans if path_seen.loose else ()
-    split = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
-    moving, axis = moving_frames(split, seen, len(corners.time_s)), scan_axis(info.rotation_deg)
+    split = split_turns(seen, cov, camera_still=not path_seen.held, knocks=knocks)
+    moving = moving_frames(split, seen, len(corners.time_s)) & in_first_view(corners.time_s, views)
+    axis = scan_axis(info.rotation_deg)
     delay = line_delay(corners, calibration, poses, moving, axis, setup.line_delay_s)
     if delay.delay_s:
         corners = at_one_moment(corners, calibration, poses, moving, axis, delay.delay_s)
-        seen = usable_frames(corners, solve_poses(corners, calibration), passed_over)
-        again = split_turns(seen, calibration.cov, camera_still=not path_seen.held, knocks=knocks)
+        seen = usable_frames(corners, solve_views(corners, calibration, views)[0], passed_over)
+        again = split_turns(seen, cov, camera_still=not path_seen.held, knocks=knocks)
         split = with_moving_part(split, again)
-    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems, delay)
+    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems, delay, views)
 
 
 def _reported(clip: Clip, progress: Progress | None, *, sparse: bool) -> Iterator[Frame]:

@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from vision.bundle import Calibration
 from vision.lag import Lag
-from vision.plane import AFT_SIZE, BASE, LENS, LIFT, PRINT, SHAPE
+from vision.plane import AFT_SIZE, BASE, LENS, LIFT, N_GLOBAL, PRINT, SHAPE
 from vision.records import Contribution, FloatArray
 from vision.rests import Stretch
 
@@ -132,6 +132,7 @@ def budget_of(seen: Seen, split: Split, calibration: Calibration, *, camera_stil
             for before, after in itertools.pairwise(rests)
         ]
     )
+    levers = levers.reshape(len(levers), -1, N_GLOBAL).sum(axis=1)  # each turn lies in one view
     parts = [
         Contribution(
             name="what averaging over the two rests leaves",

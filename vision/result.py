@@ -16,6 +16,7 @@ from vision.redraw import FloorFrame, redraw_record
 from vision.shutter import LineDelay
 from vision.steady import CameraPath, warp_px
 from vision.turns import Seen, Split
+from vision.views import View
 
 OUT_OF_SQUARE = 0.02
 """A card whose corners miss a square by more than this share of its side is curled or lies uneven."""
@@ -40,13 +41,14 @@ def assemble(
     path: CameraPath,
     problems: tuple[str, ...],
     delay: LineDelay,
+    views: tuple[View, ...] = (),
 ) -> ClipResult:
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
     frame = _floor_frame(cards)
     warp = warp_px(corners, path, calibration.p[LENS])
     events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
-    turns = tuple(_placed(_touched(turn, path, warp), frame) for turn in split.turns)
+    turns = tuple(_placed(_touched(turn, path, warp, views), frame) for turn in split.turns)
     return ClipResult(
         clip=info,
         track=_pose_track(corners, seen, split, frame),
@@ -58,7 +60,7 @@ def assemble(
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
         budget=budget_of(seen, split, calibration, camera_still=not path.held),
-        warnings=(*problems, *_warnings(calibration, cards, path, warp)),
+        warnings=(*problems, *_warnings(calibration, cards, path, warp, views)),
     )
 
 
@@ -87,13 +89,14 @@ def _placed(turn: Turn, frame: FloorFrame) -> Turn:
     )
 
 
-def _touched(turn: Turn, path: CameraPath, warp: float) -> Turn:
+def _touched(turn: Turn, path: CameraPath, warp: float, views: tuple[View, ...]) -> Turn:
     """Flag a turn in a warped picture, or one during which a camera that otherwise stands was knocked."""
     if warp > WARPED_PX:
         return replace(turn, flags=(*turn.flags, "warped"))
     if path.still or (path.held and _held_by_hand(path)):
         return turn
-    if path.loose and not _within(turn, path.best):
+    own = [path.best, *((view.start_s, view.end_s) for view in views)]
+    if path.loose and not any(_within(turn, still) for still in own):
         return replace(turn, flags=(*turn.flags, "camera_moved"))
     hit = any(start_s <= turn.end_s and end_s >= turn.start_s for start_s, end_s in path.spans)
     return replace(turn, flags=(*turn.flags, "camera_moved")) if hit else turn
@@ -206,7 +209,9 @@ def _card_record(card: CardCheck, setup: MarkerSetup) -> dict[str, object]:
     return record
 
 
-def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath, warp: float) -> list[str]:
+def _warnings(
+    calibration: Calibration, cards: list[CardCheck], path: CameraPath, warp: float, views: tuple[View, ...]
+) -> list[str]:
     said: list[str] = []
     turned_deg = float(np.degrees(calibration.turned_rad))
     if turned_deg < LITTLE_TURNED_DEG:
@@ -229,7 +234,7 @@ def _warnings(calibration: Calibration, cards: list[CardCheck], path: CameraPath
             f"the picture is warped from frame to frame, as digital stabilisation does: the floor cards miss a common "
             f"view by {warp:.2f} px; turns are as uncertain as u_heading_change_deg says; film with stabilisation off"
         )
-    said.extend(_loose(path))
+    said.extend(_loose(path, views))
     if path.held and path.n_cards < 2:
         said.append("the camera moved and only one floor card holds the view; lay out three or more")
     if path.held and _held_by_hand(path):
@@ -258,7 +263,7 @@ def _uneven(cards: list[CardCheck]) -> list[str]:
     ]
 
 
-def _loose(path: CameraPath) -> list[str]:
+def _loose(path: CameraPath, views: tuple[View, ...]) -> list[str]:
     """Return what is to be said about a camera without floor cards."""
     if not path.checked:
         return [
@@ -269,10 +274,12 @@ def _loose(path: CameraPath) -> list[str]:
     cure = "fix the phone, or lay out three floor cards or more"
     if path.best is None:
         return [f"the camera never stood still and no floor card holds the view, so that no turn counts; {cure}"]
-    start_s, end_s = path.best
+    own = sorted([path.best, *((view.start_s, view.end_s) for view in views)])
+    when = " or ".join(f"between {start_s:.1f} s and {end_s:.1f} s" for start_s, end_s in own)
+    maps = "each stretch has a map of its own, and " if views else ""
     return [
-        f"the camera moved ({_listed_spans(path)}) and no floor card holds the view: only turns between "
-        f"{start_s:.1f} s and {end_s:.1f} s count; {cure}"
+        f"the camera moved ({_listed_spans(path)}) and no floor card holds the view: {maps}only turns {when} count; "
+        f"{cure}"
     ]
 
 

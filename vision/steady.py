@@ -58,6 +58,8 @@ class CameraPath:
         Whether cards or floor showed enough to tell.
     best : (start_s, end_s) or None
         The longest stretch in which the camera stood still, where no card holds the view steady.
+    stills : tuple of (start_s, end_s)
+        All such stretches.
     """
 
     still: bool
@@ -67,6 +69,7 @@ class CameraPath:
     n_cards: int
     checked: bool = True
     best: tuple[float, float] | None = None
+    stills: tuple[tuple[float, float], ...] = ()
 
     @property
     def held(self) -> bool:
@@ -120,6 +123,7 @@ def _by_ground(ground: GroundPath | None, strays: tuple[int, ...]) -> CameraPath
         strays=strays,
         n_cards=0,
         best=max(stills, key=lambda still: still[1] - still[0], default=None) if gaps else None,
+        stills=tuple(stills) if gaps else (),
     )
 
 
@@ -288,7 +292,7 @@ def _calibrate_best(corners: CornerTrack, path: CameraPath) -> Calibration:
     if path.best is not None:
         outside = (corners.time_s < path.best[0]) | (corners.time_s > path.best[1])
         try:
-            found = calibrate(_blanked(corners, outside))
+            found = calibrate(blanked(corners, outside))
             if found.turned_rad > ENOUGH_RAD:
                 return found
         except PlaneError:
@@ -296,7 +300,7 @@ def _calibrate_best(corners: CornerTrack, path: CameraPath) -> Calibration:
     return calibrate(corners)
 
 
-def _blanked(corners: CornerTrack, frames: NDArray[np.bool_]) -> CornerTrack:
+def blanked(corners: CornerTrack, frames: NDArray[np.bool_]) -> CornerTrack:
     """Return the track without what was seen in some frames."""
     hidden = frames[:, None, None, None]
     return replace(
