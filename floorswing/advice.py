@@ -131,7 +131,7 @@ def _camera(sight: Sight, u_deg: float) -> Iterator[Advice]:
         )
     smear_px = np.deg2rad(sight.plan.rate_deg_s) * _reach_px(prospect) * prospect.exposure_s
     if smear_px > SMEARED_SIDES * prospect.side_px:
-        known = "" if glimpse.track.exposure_s else " (exposure taken as half the frame interval; nothing moved)"
+        known = "" if glimpse.track.exposure_s else " (exposure taken as a quarter of the frame interval)"
         yield Advice(
             kind="shutter",
             text=f"at {sight.plan.rate_deg_s:.0f} deg/s the markers smear by {smear_px:.0f} px{known}: more light, a "

@@ -31,6 +31,12 @@ from vision.turns import split_turns, usable_frames
 STANDS_PX = 0.25
 """A pair whose markers move by less than this from frame to frame stands."""
 
+UNSEEN_EXPOSURE = 0.25
+"""Exposure time, as a share of the frame interval, that is supposed while nothing moved fast (about 1/120 s)."""
+
+FEWEST_MOVING = 5
+"""So many moving frames tell how well corners are known while the pair turns."""
+
 VIEW_S = 0.3
 """A view held steady by cards errs in one direction for about so long."""
 
@@ -79,6 +85,10 @@ class Prospect:
     fresh, frozen : float
         Variances of the corners' errors against that information: the part that is drawn anew in every frame, and the
         part that stays over a rest.
+    moving : float
+        Variance of the corners' errors against their own, lesser information while the pair turns.
+    moving_kept : float or None
+        Share of the information that is left while the pair turns; None where no turn was seen.
     view_deg : float
         Scatter of the heading from a moving camera that cards hold steady; 0 for one that stands.
     frame_s, key_s : float
@@ -92,6 +102,8 @@ class Prospect:
     information: FloatArray
     fresh: float
     frozen: float
+    moving: float
+    moving_kept: float | None
     view_deg: float
     frame_s: float
     key_s: float
@@ -149,6 +161,8 @@ def prospect_of(track: CornerTrack, ground: GroundPath | None = None, *, key_s: 
     n_views = n_sectors(calibration.headings_rad)
     fresh, frozen = _shares(poses.left[still], n_views)
     frozen = max(frozen, _whole_misfit(calibration.misfit, n_views) - fresh)
+    moving = _moving(corners)
+    turned = len(moving) >= FEWEST_MOVING
     middle = still[len(still) // 2]
     pose = np.array([
         -poses.heading_rad[middle],
@@ -163,10 +177,12 @@ def prospect_of(track: CornerTrack, ground: GroundPath | None = None, *, key_s: 
         information=information,
         fresh=fresh,
         frozen=frozen,
+        moving=_moving_share(poses.left[moving], n_views) if turned else fresh + frozen,
+        moving_kept=_kept(corners, moving, still) if turned else None,
         view_deg=_view_scatter_deg(poses.heading_rad[still], path),
         frame_s=frame_s,
         key_s=key_s if key_s is not None else _key_s(corners),
-        exposure_s=corners.exposure_s or 0.5 * frame_s,
+        exposure_s=corners.exposure_s or UNSEEN_EXPOSURE * frame_s,
         side_px=_side_px(corners.corners_px[still]),
         explained=float(np.median(corners.explained[still])),
         body=corners.body,
@@ -222,6 +238,30 @@ def _standing(track: CornerTrack) -> NDArray[np.intp]:
         return standing
     weight = np.where(both, np.trace(track.information[:, 0], axis1=1, axis2=2), -1.0)
     return np.array([int(np.argmax(weight))], dtype=np.intp)
+
+
+def _moving(track: CornerTrack) -> NDArray[np.intp]:
+    """Return the frames in which the pair is seen to move."""
+    both = np.all(np.isfinite(track.corners_px), axis=(1, 2, 3))
+    steps = np.abs(np.diff(track.corners_px.mean(axis=2), axis=0)).max(axis=(1, 2))
+    far = np.concatenate([[False], np.nan_to_num(steps) > IN_MOTION_PX])
+    moving: NDArray[np.intp] = np.flatnonzero(both & far)
+    return moving
+
+
+def _kept(track: CornerTrack, moving: NDArray[np.intp], still: NDArray[np.intp]) -> float:
+    """Return the information of moving frames against that of still ones."""
+    size = np.trace(track.information.astype(np.float64), axis1=2, axis2=3).sum(axis=1)
+    return float(min(np.median(size[moving]) / np.median(size[still]), 1.0))
+
+
+def _moving_share(left: FloatArray, n_views: int) -> float:
+    """Return the variance of corner errors of moving frames against their information, from residuals (N, 16)."""
+    known = left[np.all(np.isfinite(left), axis=1)]
+    if len(known) == 0:
+        return USUAL_MISFIT
+    freedom = REDUNDANCY - _settled(n_views) / n_views
+    return float(np.median(np.sum(known**2, axis=1))) / freedom
 
 
 def _shares(left: FloatArray, n_views: int) -> tuple[float, float]:
@@ -308,8 +348,9 @@ def imagined(prospect: Prospect, plan: Plan, rng: np.random.Generator) -> Corner
     step_px = np.abs(np.diff(corners_px, axis=0, prepend=corners_px[:1])).max(axis=1)
     smear_px = step_px * prospect.exposure_s / prospect.frame_s
     information = _turned_information(prospect, corners_px.reshape(n_frames, 2, 4, 2))
-    information *= _sharpness_left(prospect, step_px, smear_px)[:, None, None, None]
-    errors = _errors(prospect, information, _frozen_groups(rest, is_key), rng)
+    moving = step_px > IN_MOTION_PX
+    information *= _sharpness_left(prospect, moving, smear_px)[:, None, None, None]
+    errors = _errors(prospect, information, moving, _frozen_groups(rest, is_key), rng)
     return CornerTrack(
         time_s=time_s,
         is_key=is_key,
@@ -385,23 +426,28 @@ def _turned_information(prospect: Prospect, corners_px: FloatArray) -> FloatArra
     return out
 
 
-def _sharpness_left(prospect: Prospect, step_px: FloatArray, smear_px: FloatArray) -> FloatArray:
-    """Return the share of the information that is left while the pair moves: fewer pixels, and smeared."""
+def _sharpness_left(prospect: Prospect, moving: NDArray[np.bool_], smear_px: FloatArray) -> FloatArray:
+    """Return the share of the information left while the pair moves: as seen, or for fewer and smeared pixels."""
+    if prospect.moving_kept is not None:
+        return np.where(moving, prospect.moving_kept, 1.0)
     down, across = thin_for(prospect.side_px)
-    thinned = np.where(step_px > IN_MOTION_PX, 1.0 / (down * across), 1.0)
     smeared = 1.0 / (1.0 + smear_px**2 / (12.0 * prospect.optics.blur_px**2))
-    left: FloatArray = thinned * smeared
-    return left
+    return np.where(moving, 1.0 / (down * across), 1.0) * smeared
 
 
 def _errors(
-    prospect: Prospect, information: FloatArray, groups: NDArray[np.intp], rng: np.random.Generator
+    prospect: Prospect,
+    information: FloatArray,
+    moving: NDArray[np.bool_],
+    groups: NDArray[np.intp],
+    rng: np.random.Generator,
 ) -> FloatArray:
     """Return drawn errors of the corners, shape (N, 2, 4, 2)."""
     n_frames = len(information)
     lower = np.linalg.cholesky(np.linalg.inv(information))
     drawn = np.sqrt(prospect.fresh) * rng.normal(size=(n_frames, 2, 8))
     drawn += np.sqrt(prospect.frozen) * rng.normal(size=(int(groups.max()) + 1, 2, 8))[groups]
+    drawn[moving] = np.sqrt(prospect.moving) * rng.normal(size=(int(moving.sum()), 2, 8))
     errors: FloatArray = np.einsum("nmij,nmj->nmi", lower, drawn).reshape(n_frames, 2, 4, 2)
     return errors
 
@@ -413,5 +459,7 @@ def with_sharper_corners(prospect: Prospect, factor: float) -> Prospect:
 
 def free_of_coding(prospect: Prospect) -> Prospect:
     """Return the prospect without what a coder freezes: errors are then drawn anew in every frame."""
-    return replace(prospect, fresh=max(prospect.fresh, 1.0), frozen=min(prospect.frozen, 0.5))
+    return replace(
+        prospect, fresh=max(prospect.fresh, 1.0), frozen=min(prospect.frozen, 0.5), moving=min(prospect.moving, 1.5)
+    )
 
