@@ -9,6 +9,7 @@ from vision.frames import Clip, Frame
 from vision.ground import GroundWatcher
 from vision.records import ClipResult, MarkerSetup
 from vision.result import assemble
+from vision.self_check import check_rotation
 from vision.shutter import at_one_moment, line_delay, scan_axis
 from vision.steady import calibrate_steadied, camera_path
 from vision.track import track_pair
@@ -63,7 +64,11 @@ def measure_clip(
         seen = usable_frames(corners, solve_views(corners, calibration, views)[0], passed_over)
         again = split_turns(seen, cov, camera_still=not path_seen.held, knocks=knocks)
         split = with_moving_part(split, again)
-    return assemble(info, setup, corners, calibration, seen, split, path_seen, problems, delay, views)
+    first = in_first_view(corners.time_s, views)
+    check = check_rotation(corners, calibration, poses) if first.all() else None
+    return assemble(
+        info, setup, corners, calibration, seen, split, path_seen, problems, delay, views, cov, check
+    )
 
 
 def _reported(clip: Clip, progress: Progress | None, *, sparse: bool) -> Iterator[Frame]:

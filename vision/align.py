@@ -306,7 +306,9 @@ def _rows(
     np.multiply(grid, rows[0] + rows[4], out=rows[6:8])
     np.multiply(grid, mask, out=rows[9:11])
     np.multiply(grid, grey, out=rows[12:14])
-    cv2.magnitude(grey_x, grey_y, rows[14])
+    np.multiply(grey_x, grey_x, out=rows[14])  # not by OpenCV, whose last bit depends on where the memory lies
+    rows[14] += grey_y * grey_y
+    np.sqrt(rows[14], out=rows[14])
     data = rows[15]
     np.multiply(crop.ravel(), mask, out=data, dtype=np.float32)
     mean = float(data.sum()) / n_pixels

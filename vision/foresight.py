@@ -332,7 +332,7 @@ def foresee(prospect: Prospect, plan: Plan | None = None, *, seed: int = 0) -> F
     return Foresight(
         u_deg=float(np.sqrt(np.mean(np.square(us)))) if len(us) >= 0.5 * len(plan.turns_deg) else np.inf,
         n_turns=len(us),
-        budget=budget_of(seen, split, calibration, camera_still=still),
+        budget=budget_of(seen, split, calibration, calibration.cov, camera_still=still),
     )
 
 

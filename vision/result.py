@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import asdict, replace
 
 import numpy as np
 
-from vision.budget import budget_of
+from vision.budget import budget_of, combined_of
 from vision.bundle import Calibration
 from vision.card_check import CardCheck, check_cards
 from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
-from vision.records import ClipInfo, ClipResult, Event, FloatArray, MarkerSetup, PoseTrack, Turn
+from vision.records import ClipInfo, ClipResult, Contribution, Event, FloatArray, MarkerSetup, PoseTrack, Turn
 from vision.redraw import FloorFrame, redraw_record
+from vision.self_check import SelfCheck
 from vision.shutter import LineDelay
 from vision.steady import CameraPath, warp_px
 from vision.turns import Seen, Split
@@ -41,7 +42,9 @@ def assemble(
     path: CameraPath,
     problems: tuple[str, ...],
     delay: LineDelay,
-    views: tuple[View, ...] = (),
+    views: tuple[View, ...],
+    cov: FloatArray,
+    check: SelfCheck | None,
 ) -> ClipResult:
     """Return the result of one clip in the floor frame."""
     cards = check_cards(list(corners.looks), calibration)
@@ -49,6 +52,7 @@ def assemble(
     warp = warp_px(corners, path, calibration.p[LENS])
     events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
     turns = tuple(_placed(_touched(turn, path, warp, views), frame) for turn in split.turns)
+    budget = budget_of(seen, split, calibration, cov, camera_still=not path.held)
     return ClipResult(
         clip=info,
         track=_pose_track(corners, seen, split, frame),
@@ -57,10 +61,12 @@ def assemble(
         plane={
             **_plane_record(corners, calibration, cards, setup),
             "line_delay": _delay_record(delay, corners),
+            "self_check": asdict(check) if check is not None else None,
+            "typical_turn": asdict(combined_of(budget)) if budget else None,
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
-        budget=budget_of(seen, split, calibration, camera_still=not path.held),
-        warnings=(*problems, *_warnings(calibration, cards, path, warp, views)),
+        budget=budget,
+        warnings=(*problems, *_warnings(calibration, cards, path, warp, views), *_unlike(check, budget)),
     )
 
 
@@ -245,6 +251,20 @@ def _warnings(
             for start_s, end_s in path.spans
         )
     return said
+
+
+def _unlike(check: SelfCheck | None, budget: tuple[Contribution, ...]) -> list[str]:
+    """Return what is to be said where the pair changes with the heading by more than the budget allows."""
+    if check is None or not check.beyond_chance or not budget:
+        return []
+    expanded_deg = combined_of(budget).expanded
+    if check.bound_deg <= expanded_deg:
+        return []
+    return [
+        f"the markers' distance goes up and down with the heading: a heading change may be off by up to "
+        f"{check.bound_deg:.3f} deg, more than the +/- {expanded_deg:.3f} deg of the uncertainty budget; are both "
+        "markers flat and firm, and does the deck stay level?"
+    ]
 
 
 def _uneven(cards: list[CardCheck]) -> list[str]:
