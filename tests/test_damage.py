@@ -5,6 +5,7 @@ The whole run: ``python -m bench.fuzz``.
 
 from __future__ import annotations
 
+import itertools
 import os
 import struct
 import zlib
@@ -14,10 +15,13 @@ from pathlib import Path
 import av
 import numpy as np
 import pytest
+from numpy.testing import assert_array_equal
 
 from bench.fuzz import base_clips, damaged_clip, damaged_trial, try_clip, try_trial
 from vision.errors import ClipError
 from vision.frames import Clip
+from vision.records import MarkerSetup
+from vision.track import track_pair
 
 SEED = 11
 
@@ -32,6 +36,19 @@ def test_the_clips_that_are_damaged_can_be_measured_whole(bases: dict[str, bytes
         outcome = try_clip(f"clip.{ending}", data, "", 0, tmp_path / ending)
         assert outcome.ending == "measured", outcome.detail
         assert (tmp_path / ending / "out" / "clip" / "turns.csv").read_text().count("\n") == 3  # header and two turns
+
+
+def test_the_same_clip_gives_the_same_corners_to_the_last_bit(bases: dict[str, bytes], tmp_path: Path):
+    """Wherever memory happens to lie: what is allocated in between moves it."""
+    path = tmp_path / "clip.mkv"
+    path.write_bytes(bases["mkv"])
+    with Clip(path) as clip:
+        frames = list(itertools.islice(clip.frames(), 12))
+    setup, kept = MarkerSetup(marker_side_mm=40.0, card_side_mm=60.0), []
+    first = track_pair(frames, setup).corners_px
+    for number in range(4):
+        kept.append([np.ones(7 * k + number) for k in range(300)])
+        assert_array_equal(track_pair(frames, setup).corners_px, first)
 
 
 @pytest.mark.parametrize("number", range(24))
