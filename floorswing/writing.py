@@ -55,7 +55,8 @@ def write_whole(path: Path | str, content: str | bytes) -> Path:
 
 
 def _write_flushed(path: Path, content: str | bytes) -> None:
-    with path.open("wb") as file:
+    path.unlink(missing_ok=True)  # what lies there under our hidden name is not ours to write through
+    with path.open("xb") as file:
         file.write(content.encode("utf-8", "replace") if isinstance(content, str) else content)
         file.flush()
         os.fsync(file.fileno())
@@ -141,7 +142,7 @@ def write_folder(out: Path, name: str, contents: Mapping[str, str], *, mark: str
     try:
         out.mkdir(parents=True, exist_ok=True)
         target = _replaceable(out / name, out, mark)
-        shutil.rmtree(hidden, ignore_errors=True)
+        _clear(hidden)
         hidden.mkdir()
         for file, content in contents.items():
             _write_flushed(hidden / file, content)
@@ -151,6 +152,13 @@ def write_folder(out: Path, name: str, contents: Mapping[str, str], *, mark: str
     finally:
         shutil.rmtree(hidden, ignore_errors=True)
     return out / name
+
+
+def _clear(hidden: Path) -> None:
+    """Remove what lies under a hidden name: a folder with what is in it, of a link the link alone."""
+    if hidden.is_symlink():
+        hidden.unlink()
+    shutil.rmtree(hidden, ignore_errors=True)
 
 
 def clear_leftovers(out: Path, *, alive: Callable[[int], bool] | None = None) -> None:
@@ -183,6 +191,8 @@ _LEFTOVER = re.compile(r"\.(?P<name>.+)\.(?P<process>[0-9]{1,9})(?P<old>\.old)?"
 def _put_back(old: Path, target: Path) -> None:
     """Restore a folder that was to be replaced; if it has been, keep only what the new one does not hold."""
     with contextlib.suppress(OSError):
+        if target.is_symlink():  # which may lead elsewhere
+            return
         if not target.exists():
             os.rename(old, target)
             return

@@ -43,7 +43,8 @@ class Recorder(AbstractContextManager["Recorder"]):
         self._hidden = path.with_name(f".{path.name}.{os.getpid()}")
         self._last = -1
         try:
-            self._hidden.open("wb").close()
+            self._hidden.unlink(missing_ok=True)  # it might be a link
+            self._hidden.open("xb").close()
             self._container: Any = av.open(
                 str(self._hidden), mode="w", format="mp4", options={"movflags": "+faststart"}
             )

@@ -164,6 +164,60 @@ def test_a_clip_whose_name_is_no_text_is_measured(fake_pipeline: Fake, tmp_path:
     assert read_measurement(out / "b_d").name == "b_d"
 
 
+def test_a_link_in_place_of_the_results_is_refused_in_one_line(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path, tmp_path: Path
+):
+    fake_pipeline(a=clip_result(GOOD))
+    outside = tmp_path / "outside"
+    for place in (out, outside):
+        place.mkdir()
+    (out / "a").symlink_to(outside)
+    result = measure(clip("a.mp4"), "--trial", trial_file, "--out", out)
+    assert result.exit_code != 0
+    (said,) = failures(result)
+    assert said.endswith(f"is a link to {outside}, outside its folder; remove it or choose another")
+    assert list(outside.iterdir()) == []
+    assert (out / "a").is_symlink()
+
+
+def test_a_table_that_is_a_link_is_replaced_and_where_it_led_is_left_alone(
+    fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path, tmp_path: Path
+):
+    fake_pipeline(a=clip_result(GOOD))
+    path, precious = clip("a.mp4"), tmp_path / "precious.txt"
+    assert measure(path, "--trial", trial_file, "--out", out).exit_code == 0
+    asked = (out / "a" / "turns.csv").read_text()
+    precious.write_text("precious")
+    for name in ("turns.csv", "measurement.json"):
+        (out / "a" / name).unlink()
+        (out / "a" / name).symlink_to(precious)
+    result = measure(path, "--trial", trial_file, "--out", out, "--again")
+    assert result.exit_code == 0, result.output
+    assert precious.read_text() == "precious"
+    assert not any(file.is_symlink() for file in (out / "a").iterdir())
+    assert (out / "a" / "turns.csv").read_text() == asked
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="there these names are no file names")
+@pytest.mark.parametrize("stem", ["..", "...", "-rf", "..\\..\\up", "~", "con", " ", "a\nb", "x" * 240])
+def test_a_hostile_file_name_stays_in_the_output_folder(
+    fake_pipeline: Fake, tmp_path: Path, trial_file: Path, stem: str
+):
+    path, out = tmp_path / "in" / f"{stem}.mp4", tmp_path / "deep" / "out"
+    path.parent.mkdir()
+    path.write_bytes(b"clip")
+    fake_pipeline(**{path.stem: clip_result(GOOD)})
+    before = {*tmp_path.rglob("*")}
+    result = measure(path, "--trial", trial_file, "--out", out)
+    assert result.exit_code == 0, result.output
+    new = {*tmp_path.rglob("*")} - before
+    (folder,) = out.iterdir()
+    assert new == {out.parent, out, folder, *folder.iterdir()}
+    assert len(list(folder.iterdir())) == 4
+    assert folder.name.isprintable()
+    assert not folder.name.startswith((".", "-"))
+
+
 def test_what_the_pictures_do_not_show_can_be_said(fake_pipeline: Fake, clip: MakeClip, trial_file: Path, out: Path):
     a = clip("a.mp4")
     fake_pipeline(a=clip_result([*GOOD[1:2], 33.0, *GOOD[2:3]]))

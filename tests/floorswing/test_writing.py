@@ -158,6 +158,32 @@ def test_a_link_inside_an_older_result_is_not_written_through(tmp_path: Path):
     assert not (tmp_path / "out" / "clip" / "turns.csv").is_symlink()
 
 
+def test_hidden_names_that_are_links_already_are_not_written_through(tmp_path: Path):
+    out, outside = tmp_path / "out", tmp_path / "outside"
+    out.mkdir()
+    outside.mkdir()
+    (outside / "turns.csv").write_text("precious")
+    (out / f".clip.{os.getpid()}").symlink_to(outside)
+    (out / f".fit.json.{os.getpid()}").symlink_to(outside / "turns.csv")
+    write_folder(out, "clip", NEW, mark=MARK)
+    write_whole(out / "fit.json", "new")
+    assert everything_in(out) == ["clip", f"clip/{MARK}", "clip/turns.csv", "fit.json"]
+    assert not (out / "clip").is_symlink()
+    assert (out / "fit.json").read_text() == "new"
+    assert (outside / "turns.csv").read_text() == "precious"
+    assert everything_in(outside) == ["turns.csv"]
+
+
+def test_leftovers_are_not_put_back_through_a_link(tmp_path: Path):
+    out, outside = tmp_path / "out", tmp_path / "outside"
+    (out / ".clip.77.old").mkdir(parents=True)
+    (out / ".clip.77.old" / "planted.txt").write_text("planted")
+    outside.mkdir()
+    (out / "clip").symlink_to(outside)
+    clear_leftovers(out, alive=lambda process: False)
+    assert everything_in(outside) == []
+
+
 def test_check_output_folder(tmp_path: Path):
     check_output_folder(tmp_path)
     check_output_folder(tmp_path / "new" / "deeper")
