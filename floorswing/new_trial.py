@@ -150,7 +150,15 @@ MARKERS = (
     (f"# aft = {DEFAULT_AFT}", "id of the marker towards the rear"),
     (f"# cards = [{DEFAULT_CARDS[0]}, {DEFAULT_CARDS[1]}]", "first and last id of the floor cards"),
 )
-"""The table that can be left out: what is in it by default, and what that is."""
+"""A table that can be left out: what is in it by default, and what that is."""
+
+CAMERA = (("# line_delay_us = 28.0", "microseconds from one row of a picture to the next; 0 for a global shutter"),)
+"""Another one: an example, and what it is."""
+
+SPARE_TABLES = {
+    "markers": ("# Only needed for prints other than those of `floorswing sheets`.", MARKERS),
+    "camera": ("# Only needed where the camera's rolling shutter is known; else it is found from the clip.", CAMERA),
+}
 
 
 def trial_text(answers: Mapping[tuple[str, str], Answer | None]) -> str:
@@ -162,12 +170,11 @@ def trial_text(answers: Mapping[tuple[str, str], Answer | None]) -> str:
         None, or no entry, for a key left out; it is then there as a comment with an example.
     """
     blocks = ["# A trial for Floorswing: lengths in mm, angles in degrees. Edit it as you like.\n"]
-    for table in ("robot", "markers", "floor", "commands"):
-        if table == "markers":
-            head = "[markers]\n# Only needed for prints other than those of `floorswing sheets`."
-            blocks.append(
-                "\n".join([head, *(f"{setting:<32}# {words}" for setting, words in MARKERS)]) + "\n"
-            )
+    for table in ("robot", "markers", "floor", "camera", "commands"):
+        if table in SPARE_TABLES:
+            when, settings = SPARE_TABLES[table]
+            lines = [f"[{table}]", when, *(f"{setting:<32}# {words}" for setting, words in settings)]
+            blocks.append("\n".join(lines) + "\n")
             continue
         lines = [_line(question, answers) for question in QUESTIONS if question.table == table]
         blocks.append("\n".join([f"[{table}]", *lines]) + "\n")
@@ -183,7 +190,7 @@ def _line(question: Question, answers: Mapping[tuple[str, str], Answer | None]) 
     optional = " (optional)" if question.optional else ""
     if len(setting) > 40:
         return f"# {question.explain}{optional}\n{setting}"
-    return f"{setting:<32}# {question.explain}{optional}"
+    return f"{setting:<31} # {question.explain}{optional}"
 
 
 def as_toml(answer: Answer) -> str:

@@ -8,7 +8,7 @@ jump, the robot is taken to have stood still in between.
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,18 +28,33 @@ EDGE_FRAMES = 5
 
 @dataclass(frozen=True, eq=False, slots=True)
 class View:
-    """A stretch of a clip, in s, and its own calibration."""
+    """A stretch of a clip and its own calibration.
+
+    Parameters
+    ----------
+    start_s, end_s : float
+        When the camera stood still.
+    calibration : Calibration
+    from_s, until_s : float
+        When no other stretch with a calibration is nearer; infinite at the ends of the clip.
+    """
 
     start_s: float
     end_s: float
     calibration: Calibration
+    from_s: float = -np.inf
+    until_s: float = np.inf
+
+    def holds(self, time_s: FloatArray) -> NDArray[np.bool_]:
+        """Return which moments are worked out by this view, shape (N,)."""
+        return (time_s >= self.from_s) & (time_s < self.until_s)
 
 
 def further_views(corners: CornerTrack, path: CameraPath) -> tuple[View, ...]:
     """Return the still stretches, besides the longest, that calibrate themselves; none if anything holds the view."""
-    if not path.loose:
+    if not path.loose or path.best is None:
         return ()
-    found = []
+    found: list[View] = []
     for start_s, end_s in path.stills:
         if (start_s, end_s) == path.best:
             continue
@@ -50,14 +65,25 @@ def further_views(corners: CornerTrack, path: CameraPath) -> tuple[View, ...]:
             continue
         if calibration.turned_rad > ENOUGH_RAD:
             found.append(View(start_s, end_s, calibration))
-    return tuple(found)
+    return _bordered(found, path.best)
+
+
+def _bordered(views: list[View], best: tuple[float, float]) -> tuple[View, ...]:
+    """Give every moment outside all still stretches to the nearest of them."""
+    stills = sorted([best, *((view.start_s, view.end_s) for view in views)])
+    borders = [-np.inf, *(0.5 * (a[1] + b[0]) for a, b in itertools.pairwise(stills)), np.inf]
+    reach = {still: (borders[k], borders[k + 1]) for k, still in enumerate(stills)}
+    return tuple(
+        replace(view, from_s=reach[view.start_s, view.end_s][0], until_s=reach[view.start_s, view.end_s][1])
+        for view in views
+    )
 
 
 def in_first_view(time_s: FloatArray, views: tuple[View, ...]) -> NDArray[np.bool_]:
     """Return which moments belong to no further view, shape (N,)."""
     first = np.ones(len(time_s), dtype=bool)
     for view in views:
-        first &= (time_s < view.start_s) | (time_s > view.end_s)
+        first &= ~view.holds(time_s)
     return first
 
 
@@ -80,7 +106,7 @@ def solve_views(corners: CornerTrack, calibration: Calibration, views: tuple[Vie
     spans = [in_first_view(corners.time_s, views)]
     for number, view in enumerate(views, 1):
         own = solve_poses(corners, view.calibration)
-        inside = (corners.time_s >= view.start_s) & (corners.time_s <= view.end_s)
+        inside = view.holds(corners.time_s)
         spans.append(inside)
         for name, array in values.items():
             array[inside] = getattr(own, name)[inside]

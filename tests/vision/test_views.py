@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from numpy.testing import assert_allclose
+from numpy.testing import assert_allclose, assert_array_equal
 
 from demo_videos.render import render_frames, spin_motion
 from demo_videos.render.scenes import plain_scene
@@ -83,6 +83,17 @@ def test_the_track_does_not_jump_between_views(prospect):
     assert np.ptp(np.unwrap(poses.heading_rad[around])) < np.deg2rad(0.1)
     assert np.ptp(poses.x_mm[around]) < 0.2
     assert np.ptp(poses.y_mm[around]) < 0.2
+
+
+def test_moments_outside_all_still_stretches_go_to_the_nearest(prospect):
+    track, path = knocked(prospect)
+    (_, middle_s), (_, end_s) = path.stills
+    short = ((0.2, middle_s - 0.2), (middle_s + 0.1, end_s - 0.3))
+    (view,) = further_views(track, replace(path, best=short[0], stills=short))
+    assert_allclose((view.from_s, view.until_s), (middle_s - 0.05, np.inf))
+    first = in_first_view(track.time_s, (view,))
+    assert_array_equal(first, track.time_s < middle_s - 0.05)
+    assert_array_equal(view.holds(track.time_s), ~first)
 
 
 def test_a_part_that_turns_too_little_gets_no_map(prospect):
