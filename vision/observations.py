@@ -32,6 +32,27 @@ class CardLook:
 
 
 @dataclass(frozen=True, eq=False, slots=True)
+class EdgeLook:
+    """What the edges of the pair's squares say at one moment, beside the alignment or in its place.
+
+    Parameters
+    ----------
+    time_s : float
+    apart_px : ndarray, shape (2, 4, 2)
+        Corners from the edges less those from the alignment; zero where there is no alignment.
+    information : ndarray, shape (2, 8, 8), float32
+        Of the corners from the edges.
+    alone : bool
+        Whether the alignment found no hold, so that the edges stand in its place.
+    """
+
+    time_s: float
+    apart_px: FloatArray
+    information: NDArray[np.float32]
+    alone: bool
+
+
+@dataclass(frozen=True, eq=False, slots=True)
 class Sight:
     """What one frame said about the pair.
 
@@ -46,6 +67,8 @@ class Sight:
         How far the pair moved during the exposure.
     repeat : bool
         Whether the picture of the pair is bit by bit that of the frame before.
+    by_edges : bool
+        Whether the corners come from the edges of the squares, since the alignment found no hold.
     """
 
     corners_px: FloatArray
@@ -55,6 +78,7 @@ class Sight:
     contrast: FloatArray
     smear_px: float
     repeat: bool
+    by_edges: bool = False
 
 
 def nothing_seen() -> Sight:
@@ -76,6 +100,8 @@ class CornerTrack:
         Exposure time estimated from the smear of fast frames; 0 if none was fast.
     image_px : tuple of int
         Width and height.
+    looks : tuple of CardLook
+    edge_looks : tuple of EdgeLook
     """
 
     time_s: FloatArray
@@ -91,3 +117,4 @@ class CornerTrack:
     exposure_s: float
     image_px: tuple[int, int]
     looks: tuple[CardLook, ...] = ()
+    edge_looks: tuple[EdgeLook, ...] = ()

@@ -9,6 +9,7 @@ import numpy as np
 from vision.budget import budget_of, combined_of
 from vision.bundle import Calibration
 from vision.card_check import CardCheck, check_cards
+from vision.cross_check import CrossCheck, cross_check
 from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
 from vision.records import ClipInfo, ClipResult, Contribution, Event, FloatArray, MarkerSetup, PoseTrack, Turn
@@ -16,7 +17,7 @@ from vision.redraw import FloorFrame, redraw_record
 from vision.self_check import SelfCheck
 from vision.shutter import LineDelay
 from vision.steady import CameraPath, warp_px
-from vision.turns import Seen, Split
+from vision.turns import LONGEST_REST_S, Seen, Split
 from vision.views import View
 
 OUT_OF_SQUARE = 0.02
@@ -52,6 +53,8 @@ def assemble(
     warp = warp_px(corners, path, calibration.p[LENS])
     events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
     turns = tuple(_placed(_touched(turn, path, warp, views), frame) for turn in split.turns)
+    crossed = cross_check(corners, calibration, seen, split.rests) if not views else None
+    turns = tuple(_flag_edges(turn, corners) for turn in turns)
     budget = budget_of(seen, split, calibration, cov, camera_still=not path.held)
     return ClipResult(
         clip=info,
@@ -61,12 +64,18 @@ def assemble(
         plane={
             **_plane_record(corners, calibration, cards, setup),
             "line_delay": _delay_record(delay, corners),
+            "cross_check": asdict(crossed) if crossed is not None else None,
             "self_check": asdict(check) if check is not None else None,
             "typical_turn": asdict(combined_of(budget)) if budget else None,
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
         budget=budget,
-        warnings=(*problems, *_warnings(calibration, cards, path, warp, views), *_unlike(check, budget)),
+        warnings=(
+            *problems,
+            *_warnings(calibration, cards, path, warp, views),
+            *_unlike(check, budget),
+            *_crossed(crossed),
+        ),
     )
 
 
@@ -251,6 +260,24 @@ def _warnings(
             for start_s, end_s in path.spans
         )
     return said
+
+
+def _flag_edges(turn: Turn, corners: CornerTrack) -> Turn:
+    """Flag a turn at whose rests the edges had to stand in for the alignment."""
+    first_s, last_s = turn.start_s - LONGEST_REST_S, turn.end_s + LONGEST_REST_S
+    if any(look.alone and first_s <= look.time_s <= last_s for look in corners.edge_looks):
+        return replace(turn, flags=(*turn.flags, "edges"))
+    return turn
+
+
+def _crossed(check: CrossCheck | None) -> list[str]:
+    if check is None or check.agree:
+        return []
+    return [
+        f"heading changes from the markers' edges differ from those from their patterns by {check.mean_deg:+.3f} deg "
+        f"on the mean and by {1e3 * check.gain_share:+.2f} parts in a thousand of their size (largest "
+        f"{check.largest_deg:.3f} deg): something lies on a marker, or its print is not flat"
+    ]
 
 
 def _unlike(check: SelfCheck | None, budget: tuple[Contribution, ...]) -> list[str]:

@@ -20,11 +20,12 @@ from scipy.linalg.lapack import dposv
 
 from vision.align import ALL, CornerFit, Held, fit_corners
 from vision.cards import CardWatcher
+from vision.edges import edge_corners, information_of
 from vision.errors import MarkersNotFound
 from vision.frames import Frame, LumaImage
 from vision.ground import GroundWatcher
 from vision.markers import Detection, detect
-from vision.observations import CornerTrack, Sight, nothing_seen
+from vision.observations import CornerTrack, EdgeLook, Sight, nothing_seen
 from vision.pair import (
     Pattern,
     body_from_corners,
@@ -89,6 +90,9 @@ HELD_PX = 0.12
 STRANGE_NOISE = 2.5
 """More than so many times the usual noise shows a glint, a shadow's edge or a finger on a marker."""
 
+EDGES_EVERY_S = 0.5
+"""How often the corners of a standing robot are held against the edges of its squares."""
+
 HELD_NOISE = 1.6
 """Nor while the noise is not more than so many times what it was then."""
 
@@ -137,6 +141,8 @@ class PairTracker:
         self._held_noise: tuple[float, ...] = ()
         self._last: tuple[tuple[slice, slice], LumaImage, Sight] | None = None
         self._exposure = _ExposureVote()
+        self._next_edges_s = -np.inf
+        self.edge_looks: list[EdgeLook] = []
 
     @property
     def exposure_s(self) -> float:
@@ -150,6 +156,7 @@ class PairTracker:
             return repeated
         held = self._hold(frame)
         if held is not None:
+            self._look_at_edges(frame, held)
             return held
         step_s = frame.time_s - self._last_s if self._last_s is not None else 0.0
         if step_s <= 0.0:
@@ -164,8 +171,31 @@ class PairTracker:
             return nothing_seen()
         self._lost = False
         self._last_s = frame.time_s
+        if sight.by_edges:
+            self.edge_looks.append(EdgeLook(frame.time_s, np.zeros((2, 4, 2)), sight.information, alone=True))
         self._remember(frame.luma, sight)
         return sight
+
+    def _look_at_edges(self, frame: Frame, sight: Sight) -> None:
+        """Hold the corners of a standing robot against the edges of its squares now and then."""
+        if frame.time_s < self._next_edges_s:
+            return
+        self._next_edges_s = frame.time_s + EDGES_EVERY_S
+        edges = self._edges(frame.luma, sight.corners_px)
+        if edges is not None:
+            corners_px, information = edges
+            self.edge_looks.append(EdgeLook(frame.time_s, corners_px - sight.corners_px, information, alone=False))
+
+    def _edges(self, image: LumaImage, corners_px: FloatArray) -> tuple[FloatArray, NDArray[np.float32]] | None:
+        """Return corners and their information from the edges of both squares; None unless both have clear ones."""
+        found = [
+            edge_corners(image, corners, pattern.black.shape[0])
+            for corners, pattern in zip(corners_px, self._patterns, strict=True)
+        ]
+        known = [edges for edges in found if edges is not None]
+        if len(known) < len(found):
+            return None
+        return np.stack([edges.corners_px for edges in known]), np.stack([information_of(edges) for edges in known])
 
     def _repeated(self, image: LumaImage) -> Sight | None:
         if self._last is None or self._lost:
@@ -545,11 +575,22 @@ class PairTracker:
             self._corners_px[m] = corners
         self._stop()
         sight = self._settle(image, np.zeros(3), step_s) if np.all(np.isfinite(self._corners_px)) else None
+        if sight is None and len(found) == 2:
+            sight = self._by_edges(image, np.stack([found[0], found[1]]))
         if sight is None:
             self._plane_px, self._corners_px, self._rate = held
         else:
             self._stop()
         return sight
+
+    def _by_edges(self, image: LumaImage, corners_px: FloatArray) -> Sight | None:
+        """Return what the edges of detected markers say where their patterns find no hold."""
+        edges = self._edges(image, corners_px)
+        if edges is None:
+            return None
+        self._corners_px, information = edges
+        nothing = np.full(2, np.nan)
+        return Sight(self._corners_px, information, nothing, np.zeros(2), nothing, 0.0, repeat=False, by_edges=True)
 
 
 class _ExposureVote:
@@ -787,4 +828,5 @@ def _stack(times: list[float], keys: list[bool], sights: _Sights, seeker: _Seeke
         exposure_s=tracker.exposure_s,
         image_px=seeker.image_px,
         looks=tuple(seeker.cards.looks),
+        edge_looks=tuple(tracker.edge_looks),
     )

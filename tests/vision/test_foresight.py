@@ -72,7 +72,8 @@ def test_the_uncertainty_of_an_imagined_clip_is_true(prospect):
 
 
 def test_cures_lower_the_uncertainty_as_they_should(prospect):
-    bad = replace(prospect, fresh=0.2, frozen=9.0, moving=9.0, key_s=0.01)  # no coder lags where every frame is a key frame
+    # No coder lags where every frame is a key frame.
+    bad = replace(prospect, fresh=0.2, frozen=9.0, moving=9.0, key_s=0.01)
     now = foresee(bad).u_deg
     assert foresee(with_sharper_corners(bad, 2.0)).u_deg < 0.7 * now
     assert foresee(free_of_coding(bad)).u_deg < 0.6 * now
