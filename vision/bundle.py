@@ -48,6 +48,12 @@ EVIDENCE_FLOOR = 0.5
 SECTOR_RAD = float(np.deg2rad(6.0))
 """Frames whose headings differ by less repeat each other's errors."""
 
+ALIKE_RAD = float(np.deg2rad(30.0))
+"""Over such a sector residuals that the model leaves, rather than noise or coding, resemble each other."""
+
+OUTLYING = 6.0
+"""A frame's squared residuals count for no more than so many times the usual."""
+
 N_HEADING_BINS = 72
 PER_BIN = 3
 MAX_STEPS = 40
@@ -148,9 +154,10 @@ def calibrate(track: CornerTrack) -> Calibration:
     repeats = len(chosen) / n_sectors(poses[:, 0])
     prior = learned_prior(p, cov * repeats, units)
     p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior)
+    left = _whiten(whiten, (corners_px - corners_at(p, poses, units))[..., None])[..., 0]
     return Calibration(
         p=p,
-        cov=cov * repeats,
+        cov=cov * design_effect(left, poses[:, 0]),
         units=units,
         misfit=misfit,
         n_frames=len(chosen),
@@ -347,13 +354,41 @@ def _solve(system: _Normal, damping: float) -> tuple[FloatArray, FloatArray]:
     return step, pose_steps
 
 
-def n_sectors(headings_rad: FloatArray) -> int:
-    """Return how many sectors of `SECTOR_RAD` the headings (N,) fall into.
+def design_effect(left: FloatArray, headings_rad: FloatArray) -> float:
+    """Return by how much frames that resemble their neighbours in heading widen the covariance; at least 1.
+
+    Kish's design effect (Survey Sampling, 1965) of the residuals' correlation within sectors of `ALIKE_RAD`: 1 if every
+    frame errs in its own way, the frames in a sector if all of them err alike, as where the model does not hold.
+
+    Parameters
+    ----------
+    left : ndarray, shape (N, 16)
+        Whitened corner residuals.
+    headings_rad : ndarray, shape (N,)
+    """
+    square = np.sum(left**2, axis=1)
+    most = OUTLYING * float(np.median(square))
+    tamed = left * np.sqrt(np.minimum(1.0, most / np.maximum(square, 1e-300)))[:, None]
+    sector = np.floor(np.mod(headings_rad, 2.0 * np.pi) / ALIKE_RAD).astype(int)
+    counts = np.bincount(sector)
+    sums = np.zeros((len(counts), left.shape[1]))
+    np.add.at(sums, sector, tamed)
+    own = float(np.sum(tamed**2))
+    n_pairs = float(np.sum(counts * (counts - 1)))
+    if own == 0.0 or n_pairs == 0.0:
+        return 1.0
+    alike = (float(np.sum(sums**2)) - own) / n_pairs / (own / len(left))
+    size = float(np.sum(counts**2)) / len(left)
+    return max(1.0 + (size - 1.0) * alike, 1.0)
+
+
+def n_sectors(headings_rad: FloatArray, width_rad: float = SECTOR_RAD) -> int:
+    """Return how many sectors of a width the headings (N,) fall into.
 
     What coding and rendering do to the corners is much the same in neighbouring frames and headings, so a sector
     counts as one observation, however many frames it holds.
     """
-    return len(np.unique(np.floor(np.mod(headings_rad, 2.0 * np.pi) / SECTOR_RAD)))
+    return len(np.unique(np.floor(np.mod(headings_rad, 2.0 * np.pi) / width_rad)))
 
 
 def covered_rad(headings_rad: FloatArray) -> float:

@@ -7,6 +7,7 @@ standard uncertainty (k = 1). Radians stay in kernels; records that leave `visio
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -121,6 +122,10 @@ class Turn:
     centre_y_mm: float
     wander_mm: float
     flags: tuple[str, ...] = ()
+    degrees_of_freedom: float = math.inf
+    """Effective ones of `u_heading_change_deg` (JCGM 100, G.4)."""
+    expanded_deg: float = math.nan
+    """Expanded uncertainty of the heading change at 95 %."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

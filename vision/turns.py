@@ -9,8 +9,17 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from vision.budget import RestHeading, change_uncertainty, pooled_share
-from vision.lag import Lag, coding_lag, key_place
+from vision.budget import (
+    RestHeading,
+    change_uncertainty,
+    errors_of,
+    heading_after,
+    heading_before,
+    pooled_share,
+    rest_variance_deg2,
+)
+from vision.combining import Combined
+from vision.lag import Lag, catching_up_deg, coding_lag, key_place, settled
 from vision.observations import CornerTrack
 from vision.poses import Poses
 from vision.records import Event, FloatArray, Turn
@@ -28,9 +37,10 @@ from vision.sparse import time_unread
 LONGEST_REST_S = 2.0
 """Only this much of a rest, next to the turn, is averaged: the camera may sink over longer times."""
 
-CODING_LAG_S = 0.4
-LAG_SHARE = 0.5
-"""A coded picture settles only some time after the motion has stopped; that much of a rest is passed over."""
+JITTERS = 2.0
+"""A heading at rest that jumps by this much more than the noise of a frame comes from a view that is not steady."""
+
+UNKNOWN = Combined(u=np.nan, degrees_of_freedom=1.0, coverage_factor=np.nan, expanded=np.nan, confidence=0.95)
 
 DRIVEN_MM = 25.0
 """A motion whose centre strays by more than this, and by more than it turns, was driven or handled."""
@@ -235,12 +245,12 @@ def split_turns(
     moving = bridge_pauses(motion.moving | _jumped(seen, motion), seen.time_s)
     moves = stretches(moving)
     swell = _swell(seen, motion)
-    rests = _rests_around(seen, moves)
-    share = pooled_share(seen.left, [rest for rest in rests if rest is not None])
+    rests = _rests_around(seen, moves, jitters=not camera_still and _jitters(seen, moving))
     lag = lag_of(seen, [rest for rest in rests[1:] if rest is not None])
+    errors = errors_of(seen, [rest for rest in rests if rest is not None], cov, lag, camera_still=camera_still)
 
-    def uncertainty(before: RestHeading, after: RestHeading) -> float:
-        return change_uncertainty(seen, before, after, cov, share, lag, camera_still=camera_still)
+    def uncertainty(before: RestHeading, after: RestHeading) -> Combined:
+        return change_uncertainty(seen, before, after, errors)
 
     turns: list[Turn] = []
     events: list[Event] = []
@@ -302,7 +312,9 @@ def _knocked(seen: Seen, move: Stretch, knocks: Sequence[tuple[float, float]]) -
 def lag_of(seen: Seen, rests: list[RestHeading]) -> Lag:
     """Return the coding lag of a clip from its rests that follow a motion."""
     stills = [np.arange(rest.still.first, rest.still.last + 1) for rest in rests]
-    return coding_lag(seen, stills, CODING_LAG_S)
+    share = pooled_share(seen.left, rests)
+    residue = [rest_variance_deg2(seen, frames, share) for frames in stills]
+    return coding_lag(seen, stills, 2.0 * float(np.mean(residue)) if np.isfinite(share) and residue else 0.0)
 
 
 def _jumped(seen: Seen, motion: Motion) -> NDArray[np.bool_]:
@@ -316,15 +328,28 @@ def _jumped(seen: Seen, motion: Motion) -> NDArray[np.bool_]:
     return jumped
 
 
-def _rests_around(seen: Seen, moves: list[Stretch]) -> list[RestHeading | None]:
+def _jitters(seen: Seen, moving: NDArray[np.bool_]) -> bool:
+    """Return whether the heading at rest jumps from frame to frame by more than the pictures' own noise."""
+    still = ~(moving[1:] | moving[:-1])
+    if not still.any():
+        return False
+    step_deg = float(np.sqrt(0.5 * np.mean(np.diff(seen.heading_deg)[still] ** 2)))
+    return step_deg > JITTERS * float(np.median(seen.u_heading_deg))
+
+
+def _rests_around(seen: Seen, moves: list[Stretch], *, jitters: bool) -> list[RestHeading | None]:
     """Return the rest before each move and the one after the last; None where there is none."""
     n_frames = len(seen.time_s)
     borders = [-1, *(x for move in moves for x in (move.first, move.last)), n_frames]
     gaps = [(borders[2 * k] + 1, borders[2 * k + 1] - 1) for k in range(len(moves) + 1)]
-    return [_rest(seen, first, last, from_start=k == 0, to_end=k == len(moves)) for k, (first, last) in enumerate(gaps)]
+    last_gap = len(moves)
+    return [
+        _rest(seen, first, last, from_start=k == 0, to_end=k == last_gap, jitters=jitters)
+        for k, (first, last) in enumerate(gaps)
+    ]
 
 
-def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) -> RestHeading | None:
+def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool, jitters: bool) -> RestHeading | None:
     # The frames next to a motion belong to it: smoothing has a reach, and coding lags behind.
     if not from_start:
         first += 1
@@ -336,36 +361,29 @@ def _rest(seen: Seen, first: int, last: int, *, from_start: bool, to_end: bool) 
     if seen.time_s[last] - seen.time_s[first] < 0.5 * SHORTEST_REST_S:
         return None
     frames = np.arange(first, last + 1)
+    lags = not from_start and key_place(seen, frames) is None
     return RestHeading(
         still=still,
-        lags=not from_start and key_place(seen, frames) is None,
-        before=_side(seen, still, late=False, from_start=from_start),
-        after=_side(seen, still, late=True, from_start=from_start),
+        lags=lags,
+        before=_side(seen, still, late=False, whole=from_start or jitters),
+        after=_side(seen, still, late=True, whole=from_start or jitters),
+        behind_deg=catching_up_deg(seen, frames) if lags and not jitters else 0.0,
     )
 
 
-def _side(seen: Seen, still: Stretch, *, late: bool, from_start: bool) -> NDArray[np.intp]:
-    """Return the frames of a rest to average for the turn before it (early) or after it (late)."""
+def _side(seen: Seen, still: Stretch, *, late: bool, whole: bool) -> NDArray[np.intp]:
+    """Return the frames of a rest to average for the turn before it (early) or after it (late).
+
+    A picture that jitters more than it lags is averaged over the `whole` rest.
+    """
     frames = np.arange(still.first, still.last + 1)
-    if not from_start:
-        frames = _settled(seen, frames)
+    if not whole:
+        place = key_place(seen, frames)
+        frames = settled(seen, frames) if place is None else frames[place:]
     times = seen.time_s[frames]
     near = times >= times[-1] - LONGEST_REST_S if late else times <= times[0] + LONGEST_REST_S
     chosen: NDArray[np.intp] = frames[near]
     return chosen
-
-
-def _settled(seen: Seen, frames: NDArray[np.intp]) -> NDArray[np.intp]:
-    """Return the frames of a rest from which the lag of the coded picture is gone, or nearly so.
-
-    A coder refines a picture that has come to rest only slowly; the next key frame is coded afresh.
-    """
-    place = key_place(seen, frames)
-    if place is not None:
-        return frames[place:]
-    since_s = seen.time_s[frames] - seen.time_s[frames[0]]
-    settled: NDArray[np.intp] = frames[since_s >= min(CODING_LAG_S, LAG_SHARE * since_s[-1])]
-    return settled
 
 
 def _judge(
@@ -434,9 +452,14 @@ def _hidden_s(seen: Seen, move: Stretch) -> float:
 
 
 def _change_deg(seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None) -> float:
-    start = seen.heading_deg[before.after].mean() if before else seen.heading_deg[move.first]
-    end = seen.heading_deg[after.before].mean() if after else seen.heading_deg[move.last]
-    return float(end - start)
+    start, end = _ends_deg(seen, move, before, after)
+    return end - start
+
+
+def _ends_deg(seen: Seen, move: Stretch, before: RestHeading | None, after: RestHeading | None) -> tuple[float, float]:
+    start = heading_before(seen, before) if before else float(seen.heading_deg[move.first])
+    end = heading_after(seen, after) if after else float(seen.heading_deg[move.last])
+    return start, end
 
 
 def _turn(
@@ -445,24 +468,23 @@ def _turn(
     move: Stretch,
     before: RestHeading | None,
     after: RestHeading | None,
-    uncertainty: Callable[[RestHeading, RestHeading], float],
+    uncertainty: Callable[[RestHeading, RestHeading], Combined],
     *,
     rocked: bool,
 ) -> Turn:
     part = slice(move.first, move.last + 1)
-    start = float(seen.heading_deg[before.after].mean()) if before else float(seen.heading_deg[move.first])
-    end = float(seen.heading_deg[after.before].mean()) if after else float(seen.heading_deg[move.last])
+    start, end = _ends_deg(seen, move, before, after)
     change = end - start
     flags = _flags(seen, motion, move, before, after, rocked=rocked)
-    u = uncertainty(before, after) if before is not None and after is not None else np.nan
-    known = np.isfinite(u)
+    doubt = uncertainty(before, after) if before is not None and after is not None else UNKNOWN
+    known = np.isfinite(doubt.u)
     centre_x, centre_y, wander = _centre(seen, move)
     overshoot, settle = _settling(seen, motion, part, end, np.sign(change))
     return Turn(
         start_s=float(seen.time_s[max(move.first - 1, 0)]),
         end_s=float(seen.time_s[min(move.last + 1, len(seen.time_s) - 1)]),
         heading_change_deg=change if known else np.nan,
-        u_heading_change_deg=float(u),
+        u_heading_change_deg=doubt.u,
         start_heading_deg=start if before is not None else np.nan,
         end_heading_deg=end if after is not None else np.nan,
         peak_rate_deg_s=float(np.abs(motion.rate_deg_s[part]).max()) * float(np.sign(change)),
@@ -472,6 +494,8 @@ def _turn(
         centre_y_mm=centre_y,
         wander_mm=wander,
         flags=flags,
+        degrees_of_freedom=doubt.degrees_of_freedom,
+        expanded_deg=doubt.expanded,
     )
 
 

@@ -9,8 +9,17 @@ import pytest
 from numpy.testing import assert_allclose
 
 from tests.vision.synthetic import seen_from
-from vision import bundle, lag, rests
-from vision.budget import HAND_S, REDUNDANCY, RestHeading, change_uncertainty, frozen_share, pooled_share
+from vision import budget, bundle, lag, rests
+from vision.budget import (
+    STEADY,
+    ClipErrors,
+    RestHeading,
+    change_uncertainty,
+    freedoms,
+    frozen_share,
+    parts_of_change,
+    pooled_share,
+)
 from vision.lag import Lag
 from vision.plane import N_GLOBAL
 from vision.rests import Stretch
@@ -27,10 +36,15 @@ def given(pattern):
     return float(found[0])
 
 
-def variances_1e6():
-    """Return the right-hand column of the example's table, by the first word of the row."""
-    rows = re.findall(r"^\| (\w+).*\| ([\d.]+) \|$", EXAMPLE, flags=re.MULTILINE)
-    return {word: float(value) for word, value in rows}
+def table():
+    """Return variance (1e-6 deg^2) and degrees of freedom of the example's rows, by their first word."""
+    rows = re.findall(r"^\| (\w+).*\| ([\d.]+) \| (\d+) \|$", EXAMPLE, flags=re.MULTILINE)
+    return {word: (float(variance), float(freedom)) for word, variance, freedom in rows}
+
+
+def rest(frames, *, lags=False, behind_deg=0.0):
+    still = Stretch(int(frames[0]), int(frames[-1]))
+    return RestHeading(still=still, lags=lags, before=frames, after=frames, behind_deg=behind_deg)
 
 
 @pytest.fixture(scope="module")
@@ -39,56 +53,64 @@ def example():
     u_frame = given(r"single frame's heading has `u = ([\d.]+)` degrees")
     shares = given(r"leaves ([\d.]+) of that variance"), given(r"the one rest, ([\d.]+) at the other")
     u_lag, u_plane = given(r"lag is ([\d.]+) degrees"), given(r"plane's part is ([\d.]+) degrees")
-    seen = seen_from(np.arange(50) / 30.0, np.zeros(50), noise_deg=u_frame)
+    behind_deg, n_jumps = given(r"for which ([\d.]+) degrees were added"), int(given(r"from (\d+) jumps"))
+    plain = seen_from(np.arange(50) / 30.0, np.zeros(50), noise_deg=u_frame)
+    heading_deg = np.where(np.arange(50) < 25, 0.0, -behind_deg)
     left, by_global = np.zeros((50, 16)), np.zeros((50, N_GLOBAL))
     for frames, share in zip((FIRST, SECOND), shares, strict=True):
-        left[frames] = np.sqrt(REDUNDANCY * share / 16.0)
+        left[frames] = np.sqrt(budget.REDUNDANCY * share / 16.0)
     by_global[SECOND, 0] = u_plane
     cov = np.zeros((N_GLOBAL, N_GLOBAL))
     cov[0, 0] = 1.0
-    return replace(seen, left=left, by_global=by_global), shares, Lag(u_lag, 5), cov
-
-
-def rest(frames, *, lags=False):
-    return RestHeading(still=Stretch(int(frames[0]), int(frames[-1])), lags=lags, before=frames, after=frames)
+    seen = replace(plain, heading_deg=heading_deg, left=left, by_global=by_global)
+    pair = rest(FIRST), rest(SECOND, lags=True, behind_deg=behind_deg)
+    errors = ClipErrors(
+        cov=cov,
+        share=pooled_share(left, pair),
+        lag=Lag(u_lag, n_jumps),
+        view=STEADY,
+        n_rests=2,
+        plane_freedom=given(r"with (\d+) degrees of freedom"),
+    )
+    return seen, shares, pair, errors
 
 
 def test_the_page_computes_what_the_code_computes(example):
-    seen, shares, coding, cov = example
-    clip_share = pooled_share(seen.left, [rest(FIRST), rest(SECOND)])
-    assert_allclose(clip_share, given(r"([\d.]+) on the mean of the clip"), rtol=1e-12)
+    seen, shares, pair, errors = example
+    assert_allclose(errors.share, given(r"([\d.]+) on the mean of the clip"), rtol=1e-12)
     for frames, share in zip((FIRST, SECOND), shares, strict=True):
         assert_allclose(frozen_share(seen.left, frames), share, rtol=1e-12)
-    u = change_uncertainty(seen, rest(FIRST), rest(SECOND, lags=True), cov, clip_share, coding, camera_still=True)
-    print(f"u = {u:.4f} deg, expanded uncertainty {2.0 * u:.3f} deg")
-    assert f"{u:.4f}" == f"{given(r'so `u = ([0-9.]+)` degrees'):.4f}"
-    assert f"{2.0 * u:.3f}" == f"{given(r'expanded uncertainty is ([0-9.]+) degrees'):.3f}"
-    assert_allclose(1e6 * u**2, variances_1e6()["sum"], rtol=1e-9)
+    found = change_uncertainty(seen, *pair, errors)
+    print(f"u = {found.u:.4f} deg, k = {found.coverage_factor:.2f}, expanded uncertainty {found.expanded:.3f} deg")
+    assert f"{found.u:.4f}" == f"{given(r'so `u = ([0-9.]+)` degrees'):.4f}"
+    assert f"{found.coverage_factor:.2f}" == f"{given(r'factor for 95 % is ([0-9.]+),'):.2f}"
+    assert f"{found.expanded:.3f}" == f"{given(r'expanded uncertainty is ([0-9.]+) degrees'):.3f}"
+    assert_allclose(1e6 * found.u**2, table()["sum"][0], rtol=1e-9)
+    assert np.floor(found.degrees_of_freedom) == table()["sum"][1]
 
 
 def test_each_row_of_the_table_is_its_own_contribution(example):
-    seen, _, coding, cov = example
-    rows, none = variances_1e6(), np.zeros((N_GLOBAL, N_GLOBAL))
-    share, silent = pooled_share(seen.left, [rest(FIRST), rest(SECOND)]), Lag(0.0, 0)
-    zero = replace(seen, left=np.zeros((50, 16)))
-
-    def variance(data, cov, lag_, share, *, lags):
-        pair = rest(FIRST), rest(SECOND, lags=lags)
-        return 1e6 * change_uncertainty(data, *pair, cov, share, lag_, camera_still=True) ** 2
-
-    assert_allclose(variance(seen, none, silent, share, lags=False), rows["first"] + rows["second"], rtol=1e-9)
-    assert_allclose(variance(zero, none, coding, 0.0, lags=True), rows["lag"], rtol=1e-9)
-    assert_allclose(variance(zero, cov, silent, 0.0, lags=False), rows["plane"], rtol=1e-9)
-    assert_allclose(sum(rows[k] for k in ("first", "second", "lag", "plane")), rows["sum"], rtol=1e-9)
+    seen, _, pair, errors = example
+    parts, freedom, rows = parts_of_change(seen, *pair, errors), freedoms(errors), table()
+    named = {"rests": "rests", "lag": "lag", "catching": "behind", "plane": "plane"}
+    for row, name in named.items():
+        assert_allclose(1e6 * getattr(parts, name), rows[row][0], rtol=1e-9)
+        assert np.floor(freedom[name]) == rows[row][1]
+    assert_allclose(sum(rows[row][0] for row in named), rows["sum"][0], rtol=1e-9)
+    assert parts.view == 0.0
+    assert parts.edges < 1e-20
 
 
 @pytest.mark.parametrize(
     ("words", "value"),
     [
-        (r"The ([\d.]+) others show", REDUNDANCY),
-        (r"one usual one of ([\d.]+) px", lag.USUAL_LAG_PX),
-        (r"within ([\d.]+) degrees of heading count as one", np.degrees(bundle.SECTOR_RAD)),
-        (r"only stretches of ([\d.]+) s count as independent", HAND_S),
+        (r"The ([\d.]+) others show", budget.REDUNDANCY),
+        (r"([\d.]+) of that variance counts for the heading", budget.HEADING_SHARE),
+        (r"with two usual ones of ([\d.]+) px", lag.USUAL_LAG_PX),
+        (r"displace a marker by ([\d.]+) px", budget.EDGES_PX),
+        (r"frames within ([\d.]+) degrees of heading err alike", np.degrees(bundle.ALIKE_RAD)),
+        (r"as many as sectors of ([\d.]+) degrees", np.degrees(budget.PLANE_SECTOR_RAD)),
+        (r"only stretches of ([\d.]+) s count as independent", budget.HAND_S),
         (r"by less than ([\d.]+) degrees", rests.SMALLEST_NUDGE_DEG),
     ],
 )
