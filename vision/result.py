@@ -67,6 +67,7 @@ def assemble(
             "cross_check": asdict(crossed) if crossed is not None else None,
             "self_check": asdict(check) if check is not None else None,
             "typical_turn": asdict(combined_of(budget)) if budget else None,
+            "heading_changes": [_expanded_record(turn) for turn in turns],
             "redraw": redraw_record(calibration.p, calibration.units, frame),
         },
         budget=budget,
@@ -198,6 +199,18 @@ def _plane_record(
                     "halo_px": corners.optics.halo_px, "exposure_s": corners.exposure_s},
         "cards": [_card_record(card, setup) for card in cards],
     }  # fmt: skip
+
+
+def _expanded_record(turn: Turn) -> dict[str, object]:
+    """Return the expanded uncertainty of one turn, in the order of ``turns.csv``."""
+    known = np.isfinite(turn.expanded_deg) and turn.u_heading_change_deg > 0.0
+    return {
+        "start_s": turn.start_s,
+        "u_deg": turn.u_heading_change_deg,
+        "effective_degrees_of_freedom": turn.degrees_of_freedom if known else None,
+        "coverage_factor": turn.expanded_deg / turn.u_heading_change_deg if known else None,
+        "expanded_95_deg": turn.expanded_deg if known else None,
+    }
 
 
 def _delay_record(delay: LineDelay, corners: CornerTrack) -> dict[str, object]:
