@@ -13,6 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from vision.card_squares import CardSquares, card_normal, heavier
 from vision.errors import PlaneError
 from vision.observations import CornerTrack
 from vision.plane import (
@@ -69,7 +70,8 @@ class Calibration:
     p : ndarray, shape (21,)
         Global parameters in the order of `vision.plane.NAMES`.
     cov : ndarray, shape (21, 21)
-        Their covariance, scaled by the misfit actually found and by how far frames repeat each other.
+        Their covariance, scaled by the misfit actually found and by how far frames err alike: by `design_effect`, but
+        at least half way, as a ratio, to all frames of a sector of `SECTOR_RAD` being one.
     units : Units
     misfit : float
         Chi-square per degree of freedom against the corners' own information: 1 for pure sensor noise, more where
@@ -81,6 +83,10 @@ class Calibration:
         Extent of headings covered, at most 2 pi.
     residual_px : float
         Root mean square corner residual.
+    left_out : tuple of int
+        Floor cards that were left out because they are no flat squares on the floor.
+    alone : Calibration or None
+        What the robot's rotation gives without the cards, where these took part.
     """
 
     p: FloatArray
@@ -91,6 +97,8 @@ class Calibration:
     headings_rad: FloatArray
     turned_rad: float
     residual_px: float
+    left_out: tuple[int, ...] = ()
+    alone: Calibration | None = None
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -132,8 +140,14 @@ def learned_prior(p: FloatArray, cov: FloatArray, units: Units) -> Prior:
     return Prior(prior.mean, precision)
 
 
-def calibrate(track: CornerTrack) -> Calibration:
+def calibrate(track: CornerTrack, cards: CardSquares | None = None) -> Calibration:
     """Calibrate plane, lens and pair from the frames of a still camera.
+
+    Parameters
+    ----------
+    track : CornerTrack
+    cards : CardSquares, optional
+        Floor cards under the same camera: squares on a plane parallel to the deck.
 
     Raises
     ------
@@ -150,14 +164,17 @@ def calibrate(track: CornerTrack) -> Calibration:
     whiten = whitening(track.information[chosen])
     poses = start_poses(corners_px, p, units)
     units = replace(units, home=np.median(poses[:, 1:], axis=0))
-    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior(units))
+    repeats = len(chosen) / n_sectors(poses[:, 0])
+    if cards is not None:
+        cards = heavier(cards, float(np.sqrt(repeats)))  # frames count that often too, until the covariance is scaled
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, weak_prior(units), cards)
     repeats = len(chosen) / n_sectors(poses[:, 0])
     prior = learned_prior(p, cov * repeats, units)
-    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior)
+    p, poses, cov, misfit, residual_px = _adjust(p, poses, corners_px, whiten, units, prior, cards)
     left = _whiten(whiten, (corners_px - corners_at(p, poses, units))[..., None])[..., 0]
     return Calibration(
         p=p,
-        cov=cov * design_effect(left, poses[:, 0]),
+        cov=cov * max(design_effect(left, poses[:, 0]), float(np.sqrt(repeats))),
         units=units,
         misfit=misfit,
         n_frames=len(chosen),
@@ -247,20 +264,26 @@ def _whiten(whiten: FloatArray, columns: FloatArray) -> FloatArray:
 
 
 def _adjust(
-    p: FloatArray, poses: FloatArray, corners_px: FloatArray, whiten: FloatArray, units: Units, prior: Prior
+    p: FloatArray,
+    poses: FloatArray,
+    corners_px: FloatArray,
+    whiten: FloatArray,
+    units: Units,
+    prior: Prior,
+    cards: CardSquares | None,
 ) -> tuple[FloatArray, FloatArray, FloatArray, float, float]:
-    """Levenberg-Marquardt over all parameters, poses eliminated; Cauchy weights per marker and frame."""
+    """Levenberg-Marquardt over all parameters, poses eliminated; Cauchy weights per marker and frame, and per card."""
     damping, misfit = 1e-3, 1.0
     _, weight, misfit = _cost(p, poses, corners_px, whiten, units, misfit)
     for _ in range(MAX_STEPS):
         system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
-        system = _with_prior(system, p, prior)
+        system = _with_cards(_with_prior(system, p, prior), p, units, cards)
         step, pose_steps = _solve(system, damping)
         trial_p, trial_poses = p + step, poses + pose_steps
         trial_cost, _, _ = _cost(trial_p, trial_poses, corners_px, whiten, units, misfit, fixed=True)
         now_cost, _, _ = _cost(p, poses, corners_px, whiten, units, misfit, fixed=True)
-        trial_cost += prior.cost(trial_p)
-        now_cost += prior.cost(p)
+        trial_cost += prior.cost(trial_p) + _card_cost(trial_p, units, cards)
+        now_cost += prior.cost(p) + _card_cost(p, units, cards)
         if not np.isfinite(trial_cost) or trial_cost > now_cost:
             damping *= 8.0
             if damping > 1e6:
@@ -272,7 +295,7 @@ def _adjust(
         if now_cost - trial_cost < 1e-6 * max(trial_cost, 1.0):
             break
     system = _normal(p, poses, corners_px, whiten * np.sqrt(weight)[..., None, None], units, misfit)
-    system = _with_prior(system, p, prior)
+    system = _with_cards(_with_prior(system, p, prior), p, units, cards)
     cov: FloatArray = np.asarray(np.linalg.inv(_schur(system)[0]), dtype=np.float64)
     left = corners_at(p, poses, units) - corners_px
     kept = np.repeat(weight > 0.2, 8, axis=1).reshape(len(left), 16)
@@ -334,6 +357,20 @@ def _with_prior(system: _Normal, p: FloatArray, prior: Prior) -> _Normal:
         a=system.a + np.diag(prior.precision),
         g=system.g + prior.precision * (prior.mean - p),
     )
+
+
+def _with_cards(system: _Normal, p: FloatArray, units: Units, cards: CardSquares | None) -> _Normal:
+    if cards is None:
+        return system
+    own = card_normal(cards, p, units)
+    return replace(system, a=system.a + own.a, g=system.g + own.g)
+
+
+def _card_cost(p: FloatArray, units: Units, cards: CardSquares | None) -> float:
+    if cards is None:
+        return 0.0
+    cost = card_normal(cards, p, units).cost
+    return cost if np.isfinite(cost) else np.inf
 
 
 def _schur(system: _Normal, damping: float = 0.0) -> tuple[FloatArray, FloatArray, FloatArray]:

@@ -238,7 +238,7 @@ def project_pair(p: FloatArray, poses: FloatArray, units: Units, *, by_global: b
     by_pose_points[..., 1, 0] = around[..., 0]
     by_pose_points[:, 0, :, 0, 1] = by_pose_points[:, 0, :, 1, 2] = 1.0
     by_pose_points[:, 1, :, 0, 1] = by_pose_points[:, 1, :, 1, 2] = p[AFT_SIZE]
-    bent, by_point, by_camera = _through_camera(p, points)
+    bent, by_point, by_camera = through_camera(p, points)
     slopes = np.empty((n_frames, 2, 4, 2, 0))
     if by_global:
         to_points = np.zeros((n_frames, 2, 4, 2, N_GLOBAL - 7))  # by base, angles, size, lift, print
@@ -287,7 +287,7 @@ def _body_with_slopes(p: FloatArray, units: Units) -> tuple[FloatArray, dict[int
     return local, slopes
 
 
-def _through_camera(p: FloatArray, points: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+def through_camera(p: FloatArray, points: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return bent picture points (..., 2), their derivative by the plane point, and by shape and lens."""
     h = p[SHAPE]
     x, y = points[..., 0], points[..., 1]

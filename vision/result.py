@@ -12,6 +12,7 @@ from vision.card_check import CardCheck, check_cards
 from vision.cross_check import CrossCheck, cross_check
 from vision.observations import CornerTrack
 from vision.plane import AFT_RAD, AFT_SIZE, BASE, FORE_RAD, LENS, LIFT, SHAPE
+from vision.poses import solve_poses
 from vision.records import ClipInfo, ClipResult, Contribution, Event, FloatArray, MarkerSetup, PoseTrack, Turn
 from vision.redraw import FloorFrame, redraw_record
 from vision.self_check import SelfCheck
@@ -53,6 +54,7 @@ def assemble(
     warp = warp_px(corners, path, calibration.p[LENS])
     events = (*(event for event in split.events if not _view_lost(event, path)), *_moved(path))
     turns = tuple(_placed(_touched(turn, path, warp, views), frame) for turn in split.turns)
+    alone = check_cards(list(corners.looks), calibration.alone) if calibration.alone is not None else cards
     crossed = cross_check(corners, calibration, seen, split.rests) if not views else None
     turns = tuple(_flag_edges(turn, corners) for turn in turns)
     budget = budget_of(seen, split, calibration, cov, camera_still=not path.held)
@@ -64,6 +66,7 @@ def assemble(
         plane={
             **_plane_record(corners, calibration, cards, setup),
             "line_delay": _delay_record(delay, corners),
+            "cards_and_rotation": _agreement(corners, calibration, seen),
             "cross_check": asdict(crossed) if crossed is not None else None,
             "self_check": asdict(check) if check is not None else None,
             "typical_turn": asdict(combined_of(budget)) if budget else None,
@@ -73,9 +76,9 @@ def assemble(
         budget=budget,
         warnings=(
             *problems,
-            *_warnings(calibration, cards, path, warp, views),
+            *_warnings(calibration, alone, path, warp, views),
             *_unlike(check, budget),
-            *_crossed(crossed),
+            *_crossed(crossed, budget),
         ),
     )
 
@@ -176,7 +179,7 @@ def _plane_record(
     p, units = calibration.p, calibration.units
     u = np.sqrt(np.diag(calibration.cov))
     return {
-        "method": "rotation of the robot's two markers, still camera",
+        "method": f"rotation of the robot's two markers{', and floor cards' * (calibration.alone is not None)}",
         "frames_used": calibration.n_frames,
         "turned_deg": float(np.degrees(calibration.turned_rad)),
         "misfit": calibration.misfit,
@@ -252,7 +255,7 @@ def _warnings(
             f"the markers' corners miss a rigid pair on one plane by {calibration.residual_px:.2f} px: the camera "
             "moved (floor cards in view would hold it steady), a marker is loose, or the deck rocks"
         )
-    said.extend(_uneven(cards) if path.still else [])
+    said.extend(_uneven(cards, calibration) if path.still else [])
     said.extend(
         f"card {number} did not stay with the others and was left out; was it moved, or is it curled?"
         for number in path.strays
@@ -283,8 +286,25 @@ def _flag_edges(turn: Turn, corners: CornerTrack) -> Turn:
     return turn
 
 
-def _crossed(check: CrossCheck | None) -> list[str]:
-    if check is None or check.agree:
+def _agreement(corners: CornerTrack, calibration: Calibration, seen: Seen) -> dict[str, object] | None:
+    """Return by how much headings and places differ between the plane with the cards and that without; None without."""
+    if calibration.alone is None:
+        return None
+    poses = solve_poses(corners, calibration.alone)
+    turned = np.unwrap(poses.heading_rad[seen.index]) - np.deg2rad(seen.heading_deg)
+    apart = np.column_stack([poses.x_mm[seen.index] - seen.x_mm, poses.y_mm[seen.index] - seen.y_mm])
+    away = apart - np.nanmedian(apart, axis=0)
+    return {
+        "heading_change_deg": float(np.degrees(np.nanmax(turned) - np.nanmin(turned))),
+        "place_mm": float(np.nanmax(np.hypot(away[:, 0], away[:, 1]))),
+        "cards_left_out": list(calibration.left_out),
+    }
+
+
+def _crossed(check: CrossCheck | None, budget: tuple[Contribution, ...]) -> list[str]:
+    if check is None or check.agree or not budget:
+        return []
+    if check.largest_deg < combined_of(budget).expanded:
         return []
     return [
         f"heading changes from the markers' edges differ from those from their patterns by {check.mean_deg:+.3f} deg "
@@ -307,20 +327,22 @@ def _unlike(check: SelfCheck | None, budget: tuple[Contribution, ...]) -> list[s
     ]
 
 
-def _uneven(cards: list[CardCheck]) -> list[str]:
-    """Return what is to be said about cards that do not look square on the robot's plane: most of them accuse it."""
-    off = [card for card in cards if card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm]
+def _uneven(cards: list[CardCheck], calibration: Calibration) -> list[str]:
+    """Return what is to be said about cards that are not square: one accuses itself, most the robot's markers."""
+    out = [card for card in cards if card.card_id in calibration.left_out]
+    said = [
+        f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off) and was left out; "
+        "is it curled, or not lying on the floor?"
+        for card in out
+    ]
+    off = [card for card in cards if card.out_of_square_mm > OUT_OF_SQUARE * card.side_mm and card not in out]
     if len(off) > 1 and 2 * len(off) > len(cards):
         worst_mm = max(card.out_of_square_mm for card in off)
-        return [
-            f"{len(off)} of {len(cards)} floor cards do not look square on the plane that the robot's markers give (by "
-            f"up to {worst_mm:.1f} mm): a robot marker is creased, curled or loose; stick both on stiff card"
-        ]
-    return [
-        f"card {card.card_id} is not a flat square on the floor ({card.out_of_square_mm:.1f} mm off); is it "
-        "curled, or not lying on the floor?"
-        for card in off
-    ]
+        said.append(
+            f"{len(off)} of {len(cards)} floor cards do not look square on the plane that the robot's markers alone "
+            f"give (by up to {worst_mm:.1f} mm): a robot marker is creased, curled or loose; stick both on stiff card"
+        )
+    return said
 
 
 def _loose(path: CameraPath, views: tuple[View, ...]) -> list[str]:

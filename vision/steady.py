@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from vision.bundle import Calibration, calibrate
+from vision.card_squares import as_flat_as_they_are, curled, squares_of
 from vision.errors import PlaneError
 from vision.ground import GroundPath
 from vision.observations import CardLook, CornerTrack
@@ -34,6 +35,9 @@ OUTLIER_PX = 1.0
 """A card that misses the common motion by more than this, most of the time, was moved or is not flat."""
 
 FEWEST_TO_WARP = 3
+
+WELL_TURNED_RAD = 2.1
+"""With less rotation of the robot it matters how flat the cards show themselves to be."""
 
 ENOUGH_RAD = 1.4
 """A still stretch in which the robot turned through this much calibrates the plane by itself."""
@@ -276,7 +280,7 @@ def steady(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> CornerTr
 def calibrate_steadied(corners: CornerTrack, path: CameraPath) -> tuple[CornerTrack, Calibration]:
     """Return the steadied track and its calibration; lens and maps depend on each other and are found in turns."""
     if path.still:
-        return corners, calibrate(corners)
+        return corners, _calibrate_with_cards(corners, path)
     if path.loose:
         return corners, _calibrate_best(corners, path)
     lens = np.zeros(2)
@@ -285,6 +289,22 @@ def calibrate_steadied(corners: CornerTrack, path: CameraPath) -> tuple[CornerTr
         calibration = calibrate(steadied)
         lens = calibration.p[LENS]
     return steadied, calibration
+
+
+def _calibrate_with_cards(corners: CornerTrack, path: CameraPath) -> Calibration:
+    """Return the calibration by the robot's rotation and the floor cards, those left out that are curled or uneven."""
+    alone = calibrate(corners)
+    cards = squares_of(corners.looks, path.strays)
+    if cards is None:
+        return alone
+    together = calibrate(corners, cards)
+    bad = curled(cards, together.p, together.units)
+    cards = cards.without(bad)
+    if alone.turned_rad < WELL_TURNED_RAD:
+        together = calibrate(corners, as_flat_as_they_are(cards, together.p, together.units))
+    elif bad:
+        together = calibrate(corners, cards)
+    return replace(together, left_out=bad, alone=alone)
 
 
 def _calibrate_best(corners: CornerTrack, path: CameraPath) -> Calibration:
