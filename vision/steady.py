@@ -34,6 +34,10 @@ SLOW_PX = 0.6
 OUTLIER_PX = 1.0
 """A card that misses the common motion by more than this, most of the time, was moved or is not flat."""
 
+USUAL_MISSES = 10.0
+"""A corner is left out of the map of a look only if it misses by so many times what corners usually do: in a warped
+picture all miss by a pixel now and then, and leaving out now these, now those makes the view jump."""
+
 FEWEST_TO_WARP = 3
 
 WELL_TURNED_RAD = 2.1
@@ -175,12 +179,12 @@ def _strays(looks: _Looks) -> tuple[int, ...]:
     return tuple(number for number, miss in zip(looks.ids, far, strict=True) if miss > limit)
 
 
-def _map(seen_px: FloatArray, reference_px: FloatArray) -> FloatArray:
+def _map(seen_px: FloatArray, reference_px: FloatArray, outlier_px: float = OUTLIER_PX) -> FloatArray:
     """Return the map from a view to the reference: a homography from two cards on, a similarity from one."""
     source, target = seen_px.reshape(-1, 2), reference_px.reshape(-1, 2)
     found = None
     if len(seen_px) >= 3:
-        found, _ = cv2.findHomography(source, target, cv2.RANSAC, OUTLIER_PX * _px_of(target))
+        found, _ = cv2.findHomography(source, target, cv2.RANSAC, outlier_px * _px_of(target))
     if found is None and len(seen_px) >= 2:
         found, _ = cv2.findHomography(source, target, 0)
     if found is None:
@@ -235,16 +239,20 @@ def warp_px(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> float:
     units = units_for(corners.image_px, side_mm=1.0, length_mm=1.0)
     keep = [k for k, number in enumerate(looks.ids) if number not in path.strays]
     straight = undistort((looks.corners_px[:, keep] - units.centre_px) / units.half_px, lens)
-    reference = straight[_reference(looks)]
+    return units.half_px * _misfit(straight, straight[_reference(looks)])
+
+
+def _misfit(views: FloatArray, reference: FloatArray) -> float:
+    """Return how far card corners miss a homography to the reference, least squares: RMS, median over the looks."""
     misses = []
-    for seen in straight:
+    for seen in views:
         common = np.isfinite(seen[:, 0, 0]) & np.isfinite(reference[:, 0, 0])
         if common.sum() < FEWEST_TO_WARP:
             continue
         map_, _ = cv2.findHomography(seen[common].reshape(-1, 2), reference[common].reshape(-1, 2), 0)
         if map_ is not None:
             misses.append(float(np.sqrt(np.mean((project(map_, seen[common]) - reference[common]) ** 2))))
-    return units.half_px * float(np.median(misses)) if misses else 0.0
+    return float(np.median(misses)) if misses else 0.0
 
 
 def steady(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> CornerTrack:
@@ -265,7 +273,8 @@ def steady(corners: CornerTrack, path: CameraPath, lens: FloatArray) -> CornerTr
     straight = undistort((looks.corners_px[:, keep] - units.centre_px) / units.half_px, lens)
     smooth = _averaged(straight, looks.time_s, _step_px(looks, keep) / units.half_px, STILL_PX / units.half_px)
     reference = smooth[_reference(looks)]
-    maps = [_map_or_none(seen, reference) for seen in smooth]
+    outlier_px = max(OUTLIER_PX, USUAL_MISSES * units.half_px * _misfit(smooth, reference))
+    maps = [_map_or_none(seen, reference, outlier_px) for seen in smooth]
     moved = corners.corners_px.copy()
     for n, time_s in enumerate(corners.time_s):
         map_ = _map_at(float(time_s), looks.time_s, maps, smooth, units)
@@ -342,9 +351,9 @@ def _averaged(straight: FloatArray, time_s: FloatArray, step: FloatArray, limit:
     return out
 
 
-def _map_or_none(seen: FloatArray, reference: FloatArray) -> FloatArray | None:
+def _map_or_none(seen: FloatArray, reference: FloatArray, outlier_px: float) -> FloatArray | None:
     common = np.isfinite(seen[:, 0, 0]) & np.isfinite(reference[:, 0, 0])
-    return _map(seen[common], reference[common]) if common.any() else None
+    return _map(seen[common], reference[common], outlier_px) if common.any() else None
 
 
 def _map_at(
