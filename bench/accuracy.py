@@ -5,7 +5,8 @@ the Cramer-Rao bound of the same frames, with an ordinary detector's corners bes
 H.264 clips at 17 Mb/s against their truth, condition by condition, with the script that anybody would write beside
 them: detect in every frame, homography from four card centres, direction between the two marker centres.
 
-Clips are kept in the cache folder and are not rendered again; empty it after a change to the renderer.
+Clips are kept in the cache folder and are not rendered again; empty it after a change to the renderer. Interrupted, it
+prints the tables of what was done.
 """
 
 from __future__ import annotations
@@ -526,8 +527,9 @@ def main() -> None:
         run_turns(conditions, cache, options)
 
 
-def run_turns(conditions: Sequence[Condition], cache: Path, options: argparse.Namespace) -> None:
-    tallies: dict[str, list[Tally]] = {condition.name: [] for condition in conditions}
+def judge_all(
+    tallies: dict[str, list[Tally]], conditions: Sequence[Condition], cache: Path, options: argparse.Namespace
+) -> None:
     for number in range(options.clips):
         for condition in conditions:
             start = time.monotonic()
@@ -541,6 +543,14 @@ def run_turns(conditions: Sequence[Condition], cache: Path, options: argparse.Na
             tally = judge(case, condition, clip)
             tallies[condition.name].append(tally)
             print(clip_line(clip, tally, time.monotonic() - start), flush=True)
+
+
+def run_turns(conditions: Sequence[Condition], cache: Path, options: argparse.Namespace) -> None:
+    tallies: dict[str, list[Tally]] = {condition.name: [] for condition in conditions}
+    try:
+        judge_all(tallies, conditions, cache, options)
+    except KeyboardInterrupt:
+        print("\ninterrupted; what was done so far:")
     if options.render_only or not options.clips:
         return
     print_turns(tallies, conditions)
