@@ -28,6 +28,7 @@ import numpy as np
 
 from bench.clips import lengthen
 from bench.speed import HERE, decode, plain_script, setup_of
+from demo_videos.render import Camera, Drive, Scene, render_clip, spin_motion
 from floorswing.clip_job import ClipJob, SeenClip, do_clip
 from floorswing.pipeline import measure_clip
 from floorswing.workers import run_in_workers
@@ -39,7 +40,7 @@ from vision.steady import calibrate_steadied, camera_path
 from vision.track import track_pair
 from vision.turns import split_turns, usable_frames
 
-PARTS = ("clips", "start", "workers", "where", "length")
+PARTS = ("clips", "start", "workers", "sparse", "where", "length")
 N_CLIPS = 8
 
 
@@ -198,6 +199,40 @@ def workers_part(clip: Path, setup: MarkerSetup, runs: int, folder: Path) -> Non
     show(f"Workers: {N_CLIPS} clips (medians of {runs} turns; 2 workers {ratio:.2f} times as fast)", *rows)
 
 
+def rested_clip(folder: Path) -> tuple[Path, Path]:
+    """Render a clip at 17 Mbit/s, a key frame each second, in which the robot rests half of the time, 8 s at a time."""
+    path, trial = folder / "rested.mp4", folder / "rested.toml"
+    motion = spin_motion([2000.0, -2000.0], drive=Drive(rate_wheel_deg_s=250.0), rest_s=8.0, start_delay_s=0.5)
+    render_clip(Scene(camera=Camera(tilt_deg=12.0, k1=-0.05), seed=4), motion, path, bitrate=17_000_000, gop=30)
+    trial.write_text((HERE / "lino_mixed.toml").read_text(encoding="utf-8"), encoding="utf-8")
+    return path, trial
+
+
+def sparse_part(clip: Path, trial: Path, runs: int) -> None:
+    setup = setup_of(trial)
+    turns = [
+        (
+            cost(lambda: decode(clip)),
+            cost(lambda: measure_clip(clip, setup)),
+            cost(lambda: measure_clip(clip, setup, sparse=True)),
+        )
+        for _ in range(runs)
+    ]
+    whole, few = measure_clip(clip, setup), measure_clip(clip, setup, sparse=True)
+    u_ratio = [b.u_heading_change_deg / a.u_heading_change_deg for a, b in zip(whole.turns, few.turns, strict=False)]
+    rows = [("against decoding alone", "clock", "CPU")]
+    for name, place in (("measuring, every frame", 1), ("measuring, still stretches passed over", 2)):
+        ratios = [statistics.median(turn[place][k] / turn[0][k] for turn in turns) for k in (0, 1)]
+        rows.append((name, *(f"{ratio:.2f}" for ratio in ratios)))
+    n_frames = (len(whole.track.time_s), len(few.track.time_s))
+    same = "the same" if len(whole.turns) == len(few.turns) else "OTHER"
+    show(
+        f"Still stretches passed over: {clip.name}, {n_frames[1]} of {n_frames[0]} frames decoded, {same} "
+        f"{len(few.turns)} turns, u {statistics.median(u_ratio):.2f} times as large (medians of {runs} turns)",
+        *rows,
+    )
+
+
 def where_part(clip: Path, setup: MarkerSetup) -> None:
     """Run the stages of `floorswing.pipeline` one by one."""
     spent: list[tuple[str, float]] = []
@@ -231,6 +266,9 @@ def main() -> None:
     parser.add_argument("--runs", type=int, default=3)
     parser.add_argument("--minutes", default="1,10,60", help="lengths of the long clips")
     parser.add_argument("--also", nargs=2, type=Path, action="append", default=[], metavar=("CLIP", "TRIAL"))
+    parser.add_argument(
+        "--rested", nargs=2, type=Path, metavar=("CLIP", "TRIAL"), help="clip for the part sparse; default: rendered"
+    )
     options = parser.parse_args()
     clip, trial = HERE / "lino_mixed.mp4", HERE / "lino_mixed.toml"
     setup = setup_of(trial)
@@ -245,6 +283,8 @@ def main() -> None:
                 length_part(clip, trial, [float(value) for value in options.minutes.split(",")], Path(place))
             elif part == "workers":
                 workers_part(clip, setup, options.runs, Path(place))
+            elif part == "sparse":
+                sparse_part(*(options.rested or rested_clip(Path(place))), options.runs)
             elif part == "where":
                 where_part(clip, setup)
             else:
