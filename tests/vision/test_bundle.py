@@ -3,7 +3,7 @@ import pytest
 from numpy.testing import assert_allclose
 
 from tests.vision.synthetic import corner_track, profile, truth
-from vision.bundle import calibrate, covered_rad, n_sectors
+from vision.bundle import calibrate, covered_rad, design_effect, n_sectors
 from vision.plane import LENS, LIFT, N_GLOBAL
 from vision.poses import solve_poses
 
@@ -78,3 +78,15 @@ def test_arcs():
     assert_allclose(np.degrees(covered_rad(np.deg2rad([10.0, 350.0]))), 20.0)
     assert_allclose(np.degrees(covered_rad(np.deg2rad(np.arange(0.0, 360.0, 10.0)))), 350.0)
     assert n_sectors(np.deg2rad([1.0, 2.0, 11.0, 361.0])) == 2
+
+
+def test_frames_that_err_alike_count_as_fewer():
+    """Kish (1965), Survey Sampling: the design effect of m alike in a cluster is 1 + (m - 1) rho."""
+    rng = np.random.default_rng(5)
+    headings = np.repeat(np.deg2rad(np.arange(15.0, 360.0, 30.0)), 10)
+    own = rng.normal(0.0, 1.0, (120, 16))
+    shared = np.repeat(rng.normal(0.0, 1.0, (12, 16)), 10, axis=0)
+    assert_allclose(design_effect(own, headings), 1.0, atol=0.35)
+    assert_allclose(design_effect(shared, headings), 10.0, rtol=1e-9)
+    assert_allclose(design_effect(own + shared, headings), 1.0 + 9.0 * 0.5, rtol=0.3)
+    assert design_effect(own[:1], headings[:1]) == 1.0
