@@ -3,9 +3,9 @@
 Two dozen set-ups, from good to hopeless, are rendered and measured. For each, side by side: the standard uncertainty
 of a turn that the preview foresees from the first two seconds, the one that the whole measurement states (root mean
 square over its turns), their ratio, the root mean square of the true errors, and the verdict for wanted uncertainties
-of 0.02, 0.1 and 1 degree (plus or minus, k = 2). A verdict is right if what was stated is below (above) what was wanted
-where the preview said that it will do (will not do), and within its doubt of a factor 1.5 where it called the case
-close.
+of 0.02, 0.1 and 1 degree (plus or minus, about 95 %). A verdict is right if the expanded uncertainty that was stated is
+below (above) what was wanted where the preview said that it will do (will not do), and within its doubt of a factor 1.5
+where it called the case close.
 
 Clips in the cache folder are used again; empty it after a change to the renderer.
 """
@@ -37,7 +37,7 @@ from demo_videos.render.clip import truth_of
 from demo_videos.render.motion import Drive
 from demo_videos.render.scenes import phone_sensor, plain_scene
 from floorswing.pipeline import measure_clip
-from floorswing.previewing import EXPANDED, SURE, Preview, preview
+from floorswing.previewing import SURE, Preview, preview
 from floorswing.trial import Trial, read_trial
 from vision.errors import VisionError
 from vision.records import MarkerSetup
@@ -136,6 +136,7 @@ class Outcome:
     name: str
     foreseen: Preview
     stated_deg: float
+    expanded_deg: float
     error_deg: float
     n_turns: int
 
@@ -149,10 +150,9 @@ class Outcome:
     def verdict_is_right(self, want_deg: float) -> bool:
         """Return whether the verdict agrees with what measuring stated."""
         verdict = replace(self.foreseen, want_deg=want_deg).verdict
-        expanded_deg = EXPANDED * self.stated_deg
         if verdict == "close":
-            return want_deg / SURE**2 < expanded_deg < want_deg * SURE**2
-        return (expanded_deg <= want_deg) == (verdict == "will do")
+            return want_deg / SURE**2 < self.expanded_deg < want_deg * SURE**2
+        return (self.expanded_deg <= want_deg) == (verdict == "will do")
 
 
 def tried(set_up: SetUp, cache: Path) -> Outcome:
@@ -168,25 +168,33 @@ def tried(set_up: SetUp, cache: Path) -> Outcome:
     with tempfile.TemporaryDirectory() as folder:
         trial = trial_of(set_up.scene, Path(folder))
         foreseen = preview(clip, trial, rate_deg_s=95.0, rest_s=REST_S)
-    stated, errors, n_turns = measured(clip, trial.marker_setup(), truth_of(set_up.scene, motion).turns)
-    return Outcome(name=set_up.name, foreseen=foreseen, stated_deg=stated, error_deg=errors, n_turns=n_turns)
+    stated, expanded, errors, n_turns = measured(clip, trial.marker_setup(), truth_of(set_up.scene, motion).turns)
+    return Outcome(
+        name=set_up.name, foreseen=foreseen, stated_deg=stated, expanded_deg=expanded, error_deg=errors, n_turns=n_turns
+    )
 
 
-def measured(clip: Path, setup: MarkerSetup, turns: Sequence[object]) -> tuple[float, float, int]:
-    """Return the root mean squares of stated uncertainty and true error (deg), and the number of turns."""
+def measured(clip: Path, setup: MarkerSetup, turns: Sequence[object]) -> tuple[float, float, float, int]:
+    """Return the root mean squares of stated, expanded uncertainty and true error (deg), and the number of turns."""
     try:
         result = measure_clip(clip, setup)
     except VisionError:
-        return np.inf, np.nan, 0
-    us, errors = [], []
+        return np.inf, np.inf, np.nan, 0
+    known, errors = [], []
     for true in turns:
         found = [t for t in result.turns if t.start_s < true.end_s and t.end_s > true.start_s]
         if len(found) == 1 and np.isfinite(found[0].u_heading_change_deg):
-            us.append(found[0].u_heading_change_deg)
+            known.append(found[0])
             errors.append(found[0].heading_change_deg - true.heading_change_deg)
-    if len(us) < 0.5 * len(turns):
-        return np.inf, np.nan, len(us)
-    return float(np.sqrt(np.mean(np.square(us)))), float(np.sqrt(np.mean(np.square(errors)))), len(us)
+    if len(known) < 0.5 * len(turns):
+        return np.inf, np.inf, np.nan, len(known)
+    stated = root_mean_square([turn.u_heading_change_deg for turn in known])
+    expanded = root_mean_square([turn.expanded_deg for turn in known])
+    return stated, expanded, root_mean_square(errors), len(known)
+
+
+def root_mean_square(values: Sequence[float]) -> float:
+    return float(np.sqrt(np.mean(np.square(values))))
 
 
 def main() -> None:
@@ -202,8 +210,11 @@ def main() -> None:
 
 def show(chosen: list[SetUp], cache: Path) -> None:
     """Print the table and what it comes to."""
-    print("| set-up | side px | foreseen u deg | stated u deg | ratio | true error deg | turns | verdicts | advice |")
-    print("| :--- | ---: | ---: | ---: | ---: | ---: | ---: | :--- | :--- |")
+    print(
+        "| set-up | side px | foreseen u deg | stated u deg | ratio | foreseen, stated +/- deg | true error deg "
+        "| turns | verdicts | advice |"
+    )
+    print("| :--- | ---: | ---: | ---: | ---: | ---: | ---: | ---: | :--- | :--- |")
     outcomes = []
     for item in chosen:
         one = tried(item, cache)
@@ -216,7 +227,8 @@ def show(chosen: list[SetUp], cache: Path) -> None:
         kinds = ", ".join(advice.kind for advice in one.foreseen.advice) or "-"
         print(
             f"| {one.name} | {side} | {one.foreseen.u_deg:.4f} | {one.stated_deg:.4f} | {one.ratio:.2f} | "
-            f"{one.error_deg:.4f} | {one.n_turns} of {len(TURNS)} | {verdicts} | {kinds} |",
+            f"{one.foreseen.expanded_deg:.4f}, {one.expanded_deg:.4f} "
+            f"| {one.error_deg:.4f} | {one.n_turns} of {len(TURNS)} | {verdicts} | {kinds} |",
             flush=True,
         )
     near = sum(1.0 / SURE <= one.ratio <= SURE for one in outcomes)

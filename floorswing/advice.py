@@ -40,13 +40,13 @@ class Advice:
         A word for it.
     text : str
         What was found, and what to do.
-    u_after_deg : float or None
-        Standard uncertainty to expect of a turn once it is done; None where it gains something else.
+    after_deg : float or None
+        Expanded uncertainty (about 95 %) to expect of a turn once it is done; None where it gains something else.
     """
 
     kind: str
     text: str
-    u_after_deg: float | None = None
+    after_deg: float | None = None
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -62,21 +62,21 @@ class Sight:
     marker_ids: tuple[int, int]
 
 
-def advice_for(sight: Sight, u_deg: float) -> list[Advice]:
+def advice_for(sight: Sight, expanded_deg: float) -> list[Advice]:
     """Return what to change, what gains most first; what has no figure comes before, since it can spoil everything."""
     said = [
         *_in_view(sight),
-        *_camera(sight, u_deg),
-        *_light(sight, u_deg),
-        *_geometry(sight, u_deg),
+        *_camera(sight, expanded_deg),
+        *_light(sight, expanded_deg),
+        *_geometry(sight, expanded_deg),
     ]
-    return sorted(said, key=lambda item: -1.0 if item.u_after_deg is None else item.u_after_deg)
+    return sorted(said, key=lambda item: -1.0 if item.after_deg is None else item.after_deg)
 
 
-def _cured(sight: Sight, cure: Callable[[Prospect], Prospect], u_deg: float) -> float | None:
-    """Return the uncertainty after a cure; None where that is no gain worth a figure."""
-    after_deg = foresee(cure(sight.prospect), sight.plan).u_deg
-    return after_deg if after_deg < WORTH_SAYING * u_deg else None
+def _cured(sight: Sight, cure: Callable[[Prospect], Prospect], expanded_deg: float) -> float | None:
+    """Return the expanded uncertainty after a cure; None where that is no gain worth a figure."""
+    after_deg = foresee(cure(sight.prospect), sight.plan).expanded_deg
+    return after_deg if after_deg < WORTH_SAYING * expanded_deg else None
 
 
 def _sharper(factor: float) -> Callable[[Prospect], Prospect]:
@@ -104,7 +104,7 @@ def _in_view(sight: Sight) -> Iterator[Advice]:
         )
 
 
-def _camera(sight: Sight, u_deg: float) -> Iterator[Advice]:
+def _camera(sight: Sight, expanded_deg: float) -> Iterator[Advice]:
     glimpse, prospect = sight.glimpse, sight.prospect
     if glimpse.camera.loose:
         yield Advice(
@@ -115,7 +115,7 @@ def _camera(sight: Sight, u_deg: float) -> Iterator[Advice]:
         yield Advice(
             kind="unsteady",
             text=f"the camera moves (by up to {glimpse.camera.shift_px:.1f} px): lean or clamp the phone",
-            u_after_deg=_cured(sight, lambda p: replace(p, view_deg=0.0, fresh=min(p.fresh, 2.0)), u_deg),
+            after_deg=_cured(sight, lambda p: replace(p, view_deg=0.0, fresh=min(p.fresh, 2.0)), expanded_deg),
         )
     if sight.rate_hz < SLOW_FILM_HZ:
         yield Advice(
@@ -127,7 +127,7 @@ def _camera(sight: Sight, u_deg: float) -> Iterator[Advice]:
             kind="bit rate",
             text=f"the clip spends {sight.bits:.3f} bits on a pixel, so that coding hides the edges: choose the "
             "highest quality that the camera offers, and do not send the clip through a messenger",
-            u_after_deg=_cured(sight, free_of_coding, u_deg),
+            after_deg=_cured(sight, free_of_coding, expanded_deg),
         )
     smear_px = np.deg2rad(sight.plan.rate_deg_s) * _reach_px(prospect) * prospect.exposure_s
     if smear_px > SMEARED_SIDES * prospect.side_px:
@@ -144,7 +144,7 @@ def _reach_px(prospect: Prospect) -> float:
     return 0.5 * base_sides(prospect.p, prospect.units) * prospect.side_px
 
 
-def _light(sight: Sight, u_deg: float) -> Iterator[Advice]:
+def _light(sight: Sight, expanded_deg: float) -> Iterator[Advice]:
     glimpse = sight.glimpse
     contrast = min((look.contrast_grey for look in glimpse.markers), default=math.nan)
     noise = max((look.noise_grey / max(look.contrast_grey, 1.0) for look in glimpse.markers), default=math.nan)
@@ -153,13 +153,13 @@ def _light(sight: Sight, u_deg: float) -> Iterator[Advice]:
             kind="contrast",
             text=f"black and white of a marker differ by {contrast:.0f} grey values only: more light, no glare, a "
             "fresh print",
-            u_after_deg=_cured(sight, _sharper(GOOD_GREY / max(contrast, 10.0)), u_deg),
+            after_deg=_cured(sight, _sharper(GOOD_GREY / max(contrast, 10.0)), expanded_deg),
         )
     if noise > NOISY_SHARE:
         yield Advice(
             kind="noise",
             text=f"noise, dirt or a shadow is {100.0 * noise:.0f} % of a marker's contrast: more and more even light",
-            u_after_deg=_cured(sight, _sharper(noise / QUIET_SHARE), u_deg),
+            after_deg=_cured(sight, _sharper(noise / QUIET_SHARE), expanded_deg),
         )
     if any(look.full_share > FULL_SHARE for look in glimpse.markers):
         yield Advice(
@@ -178,11 +178,11 @@ def _light(sight: Sight, u_deg: float) -> Iterator[Advice]:
             kind="focus",
             text=f"edges are {blur_px:.1f} px wide (standard deviation): clean the lens, tap to focus, keep the focus "
             "locked",
-            u_after_deg=_cured(sight, _sharper(math.sqrt(blur_px / SHARP_PX)), u_deg),
+            after_deg=_cured(sight, _sharper(math.sqrt(blur_px / SHARP_PX)), expanded_deg),
         )
 
 
-def _geometry(sight: Sight, u_deg: float) -> Iterator[Advice]:
+def _geometry(sight: Sight, expanded_deg: float) -> Iterator[Advice]:
     prospect = sight.prospect
     if prospect.side_px < SMALL_SIDE_PX:
         factor = (GOOD_SIDE_PX / prospect.side_px) ** 1.5  # edges are longer, and a pixel is less of the robot
@@ -190,21 +190,21 @@ def _geometry(sight: Sight, u_deg: float) -> Iterator[Advice]:
             kind="closer",
             text=f"the markers are {prospect.side_px:.0f} px wide: come nearer, or print them larger, to "
             f"{GOOD_SIDE_PX:.0f} px",
-            u_after_deg=_cured(sight, _sharper(factor), u_deg),
+            after_deg=_cured(sight, _sharper(factor), expanded_deg),
         )
     tilt = tilt_deg(prospect.p, prospect.units, prospect.pose)
     if tilt > STEEP_DEG:
         yield Advice(
             kind="tilt",
             text=f"the camera looks at the deck {tilt:.0f} deg from straight down: bring it over the robot",
-            u_after_deg=_cured(sight, _sharper(1.0 / math.cos(np.deg2rad(min(tilt, 75.0)))), u_deg),
+            after_deg=_cured(sight, _sharper(1.0 / math.cos(np.deg2rad(min(tilt, 75.0)))), expanded_deg),
         )
     if base_sides(prospect.p, prospect.units) < NEAR_SIDES:
         yield Advice(
             kind="apart",
             text=f"the markers' middles are only {base_sides(prospect.p, prospect.units):.1f} marker sides apart: "
             "mount them farther apart",
-            u_after_deg=_cured(sight, _farther_apart, u_deg),
+            after_deg=_cured(sight, _farther_apart, expanded_deg),
         )
     out_px = swept_out_px(prospect.p, prospect.units, prospect.pose, prospect.image_px)
     if out_px > 0.0:

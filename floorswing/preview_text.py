@@ -6,7 +6,7 @@ import math
 from typing import Any
 
 from floorswing.files import plain
-from floorswing.previewing import EXPANDED, SURE, Preview
+from floorswing.previewing import SURE, Preview
 from vision.glimpse import base_sides, distance_sides, tilt_deg
 
 VERDICTS = {
@@ -23,14 +23,14 @@ def lines(found: Preview) -> list[str]:
     if found.advice:
         said += ["", "What to change, most gain first:" if len(found.advice) > 1 else "What to change:"]
         for number, item in enumerate(found.advice, 1):
-            said.append(f"  {number}. {item.text}{_gain(item.u_after_deg)}")
+            said.append(f"  {number}. {item.text}{_gain(item.after_deg)}")
     elif found.glimpse is not None:
         said += ["", "Nothing needs changing."]
     return said
 
 
-def _gain(u_after_deg: float | None) -> str:
-    return f" (then +/- {_shown(EXPANDED * u_after_deg)} deg)" if u_after_deg is not None else ""
+def _gain(after_deg: float | None) -> str:
+    return f" (then +/- {_shown(after_deg)} deg)" if after_deg is not None else ""
 
 
 def _figures(found: Preview) -> list[str]:
@@ -92,10 +92,10 @@ def _expected(found: Preview) -> list[str]:
     if not math.isfinite(found.u_deg):
         said = ["Turns cannot be measured like this."]
     else:
-        low, high = found.u_deg / SURE, found.u_deg * SURE
+        low, high = found.expanded_deg / SURE, found.expanded_deg * SURE
         said = [
-            f"Expect +/- {_shown(EXPANDED * found.u_deg)} deg on a single turn (about 95 %; the clip will state "
-            f"{_shown(EXPANDED * low)} to {_shown(EXPANDED * high)})."
+            f"Expect +/- {_shown(found.expanded_deg)} deg on a single turn (about 95 %; the clip will state "
+            f"{_shown(low)} to {_shown(high)})."
         ]
     if found.want_deg is not None:
         said.append(f"Wanted +/- {found.want_deg:g} deg: {VERDICTS[found.verdict]}.")
@@ -118,7 +118,7 @@ def as_document(found: Preview) -> dict[str, Any]:
         "key_s": found.key_s,
         "bits_per_pixel": found.bits,
         "u_heading_change_deg": found.u_deg,
-        "expanded_deg": EXPANDED * found.u_deg,
+        "expanded_deg": found.expanded_deg,
         "budget": found.foresight.budget if found.foresight is not None else (),
         "want_deg": found.want_deg,
         "verdict": found.verdict or None,

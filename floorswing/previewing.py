@@ -12,7 +12,7 @@ import numpy as np
 from floorswing.advice import Advice, Sight, advice_for
 from floorswing.errors import FloorswingError
 from floorswing.trial import DEFAULT_CARDS, Trial, read_trial
-from vision.errors import MarkersNotFound
+from vision.errors import MarkersNotFound, PlaneError
 from vision.foresight import Foresight, Plan, Prospect, foresee, prospect_of
 from vision.frames import Clip, key_interval_s
 from vision.glimpse import Glimpse, glimpse_of
@@ -26,7 +26,6 @@ DRAWS = 3
 """Imagined clips of which the mean variance is taken: where key frames fall among the rests is chance."""
 SURE = 1.5
 """What measuring states lies within this factor of what is foreseen, or of the verdict's doubt."""
-EXPANDED = 2.0
 USUAL_KEY_S = 1.0
 """Interval of a phone's key frames; common practice, no source."""
 USUAL_REST_S = 1.2
@@ -44,7 +43,7 @@ class Preview:
     reduced : float
         Factor by which a photo was made smaller.
     glimpse : Glimpse or None
-        None where the robot's markers were not found; `complaint` then says why.
+        None where the robot's markers were not found, or are seen too poorly; `complaint` then says why.
     prospect : Prospect or None
     plan : Plan
     foresight : Foresight or None
@@ -75,12 +74,17 @@ class Preview:
         return self.foresight.u_deg if self.foresight is not None else np.inf
 
     @property
+    def expanded_deg(self) -> float:
+        """Expanded uncertainty (about 95 %) to expect of a turn; infinite where nothing can be measured."""
+        return self.foresight.expanded_deg if self.foresight is not None else np.inf
+
+    @property
     def verdict(self) -> str:
-        """``will do``, ``will not do`` or ``close``, for the wanted expanded uncertainty (k = 2); empty without one."""
+        """``will do``, ``will not do`` or ``close``, for the wanted expanded uncertainty; empty without one."""
         if self.want_deg is None:
             return ""
-        expanded_deg = EXPANDED * self.u_deg
-        if any(item.kind == "unsteady" and item.u_after_deg is None for item in self.advice) and self._loose:
+        expanded_deg = self.expanded_deg
+        if any(item.kind == "unsteady" and item.after_deg is None for item in self.advice) and self._loose:
             return "will not do"
         if expanded_deg > SURE * self.want_deg:
             return "will not do"
@@ -111,7 +115,7 @@ def preview(
     seconds : float
         How much of a clip is looked at.
     want_deg : float, optional
-        Wanted expanded uncertainty (k = 2) of a single turn.
+        Wanted expanded uncertainty (about 95 %) of a single turn.
     rate_deg_s, rest_s : float
         How fast the robot will turn, and how long it will rest between turns.
 
@@ -139,9 +143,9 @@ def preview(
                 glimpse = glimpse_of(itertools.takewhile(lambda frame: frame.time_s < seconds, clip.frames()), setup)
             rate_hz, bits = _rate_and_bits(glimpse, place, clip.info.duration_s)
             key_s = key_interval_s(place)
-    except MarkersNotFound as error:
+        prospect = prospect_of(glimpse.track, glimpse.ground, key_s=USUAL_KEY_S if still else key_s)
+    except (MarkersNotFound, PlaneError) as error:
         return replace(blank, reduced=reduced, complaint=str(error))
-    prospect = prospect_of(glimpse.track, glimpse.ground, key_s=USUAL_KEY_S if still else key_s)
     foreseen = foresee_often(prospect, plan)
     sight = Sight(
         glimpse=glimpse, prospect=prospect, plan=plan, bits=bits, rate_hz=rate_hz, dictionary=setup.dictionary,
@@ -149,7 +153,7 @@ def preview(
     )  # fmt: skip
     return replace(
         blank, reduced=reduced, glimpse=glimpse, prospect=prospect, foresight=foreseen, rate_hz=rate_hz, key_s=key_s,
-        bits=bits, advice=tuple(advice_for(sight, foreseen.u_deg)),
+        bits=bits, advice=tuple(advice_for(sight, foreseen.expanded_deg)),
     )  # fmt: skip
 
 
@@ -160,7 +164,8 @@ def foresee_often(prospect: Prospect, plan: Plan) -> Foresight:
         for number in range(DRAWS)
     ]
     u_deg = float(np.sqrt(np.mean([draw.u_deg**2 for draw in draws])))
-    return replace(draws[1], u_deg=u_deg)
+    expanded_deg = float(np.sqrt(np.mean([draw.expanded_deg**2 for draw in draws])))
+    return replace(draws[1], u_deg=u_deg, expanded_deg=expanded_deg)
 
 
 def _usual_setup() -> MarkerSetup:

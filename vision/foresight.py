@@ -124,14 +124,20 @@ class Foresight:
     u_deg : float
         Standard uncertainty of a heading change, root mean square over the turns; infinite where no turn could be
         measured.
+    expanded_deg : float
+        Expanded uncertainty (about 95 %), likewise; each turn has its own coverage factor.
     n_turns : int
         Turns found, of those imagined.
     budget : tuple of Contribution
     """
 
     u_deg: float
+    expanded_deg: float
     n_turns: int
     budget: tuple[Contribution, ...]
+
+
+NOTHING = Foresight(u_deg=np.inf, expanded_deg=np.inf, n_turns=0, budget=())
 
 
 def prospect_of(track: CornerTrack, ground: GroundPath | None = None, *, key_s: float | None = None) -> Prospect:
@@ -324,14 +330,17 @@ def foresee(prospect: Prospect, plan: Plan | None = None, *, seed: int = 0) -> F
         calibration = calibrate(track)
         seen = usable_frames(track, solve_poses(track, calibration))
     except (PlaneError, np.linalg.LinAlgError):
-        return Foresight(u_deg=np.inf, n_turns=0, budget=())
+        return NOTHING
     if len(seen.index) < 3:
-        return Foresight(u_deg=np.inf, n_turns=0, budget=())
+        return NOTHING
     split = split_turns(seen, calibration.cov, camera_still=still, knocks=())
-    us = [turn.u_heading_change_deg for turn in split.turns if np.isfinite(turn.u_heading_change_deg)]
+    known = [turn for turn in split.turns if np.isfinite(turn.u_heading_change_deg)]
+    if len(known) < 0.5 * len(plan.turns_deg):
+        return replace(NOTHING, n_turns=len(known))
     return Foresight(
-        u_deg=float(np.sqrt(np.mean(np.square(us)))) if len(us) >= 0.5 * len(plan.turns_deg) else np.inf,
-        n_turns=len(us),
+        u_deg=float(np.sqrt(np.mean([turn.u_heading_change_deg**2 for turn in known]))),
+        expanded_deg=float(np.sqrt(np.mean([turn.expanded_deg**2 for turn in known]))),
+        n_turns=len(known),
         budget=budget_of(seen, split, calibration, calibration.cov, camera_still=still),
     )
 
