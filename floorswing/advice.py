@@ -115,7 +115,7 @@ def _camera(sight: Sight, expanded_deg: float) -> Iterator[Advice]:
         yield Advice(
             kind="unsteady",
             text=f"the camera moves (by up to {glimpse.camera.shift_px:.1f} px): lean or clamp the phone",
-            after_deg=_cured(sight, lambda p: replace(p, view_deg=0.0, fresh=min(p.fresh, 2.0)), expanded_deg),
+            after_deg=_cured(sight, _held_firmly, expanded_deg),
         )
     if sight.rate_hz < SLOW_FILM_HZ:
         yield Advice(
@@ -213,6 +213,10 @@ def _geometry(sight: Sight, expanded_deg: float) -> Iterator[Advice]:
             text=f"turning on the spot a marker leaves the picture by up to {out_px:.0f} px: bring the robot to the "
             "middle",
         )
+
+
+def _held_firmly(prospect: Prospect) -> Prospect:
+    return replace(prospect, view_fresh_deg=0.0, view_deg=0.0, fresh=min(prospect.fresh, 2.0))
 
 
 def _farther_apart(prospect: Prospect) -> Prospect:

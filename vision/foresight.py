@@ -38,7 +38,7 @@ FEWEST_MOVING = 5
 """So many moving frames tell how well corners are known while the pair turns."""
 
 VIEW_S = 0.3
-"""A view held steady by cards errs in one direction for about so long."""
+"""The slow part of the error of a view that cards hold steady keeps its direction for about so long."""
 
 ONE_VIEW = 8.0
 """Parameters of plane and pair that one view of sixteen corner coordinates settles besides its pose."""
@@ -89,8 +89,9 @@ class Prospect:
         Variance of the corners' errors against their own, lesser information while the pair turns.
     moving_kept : float or None
         Share of the information that is left while the pair turns; None where no turn was seen.
-    view_deg : float
-        Scatter of the heading from a moving camera that cards hold steady; 0 for one that stands.
+    view_fresh_deg, view_deg : float
+        Scatter of the heading from a moving camera that cards hold steady, from frame to frame and slow; both 0 for one
+        that stands.
     frame_s, key_s : float
         Intervals of frames and of key frames.
     exposure_s, side_px, explained : float
@@ -104,6 +105,7 @@ class Prospect:
     frozen: float
     moving: float
     moving_kept: float | None
+    view_fresh_deg: float
     view_deg: float
     frame_s: float
     key_s: float
@@ -176,6 +178,7 @@ def prospect_of(track: CornerTrack, ground: GroundPath | None = None, *, key_s: 
         -poses.y_mm[middle] / calibration.units.length_mm,
     ])  # fmt: skip
     frame_s = _frame_s(corners.time_s)
+    view_fresh_deg, view_deg = _view_scatter_deg(poses.heading_rad[still], path)
     return Prospect(
         p=calibration.p,
         units=calibration.units,
@@ -185,7 +188,8 @@ def prospect_of(track: CornerTrack, ground: GroundPath | None = None, *, key_s: 
         frozen=frozen,
         moving=_moving_share(poses.left[moving], n_views) if turned else fresh + frozen,
         moving_kept=_kept(corners, moving, still) if turned else None,
-        view_deg=_view_scatter_deg(poses.heading_rad[still], path),
+        view_fresh_deg=view_fresh_deg,
+        view_deg=view_deg,
         frame_s=frame_s,
         key_s=key_s if key_s is not None else _key_s(corners),
         exposure_s=corners.exposure_s or UNSEEN_EXPOSURE * frame_s,
@@ -302,10 +306,14 @@ def _settled(n_views: int) -> float:
     return ONE_VIEW + min(2.0 * (n_views - 1), 4.0)
 
 
-def _view_scatter_deg(heading_rad: FloatArray, path: CameraPath) -> float:
+def _view_scatter_deg(heading_rad: FloatArray, path: CameraPath) -> tuple[float, float]:
+    """Return the scatter of the heading at rest, from frame to frame and slow, told apart as `view_noise` does."""
     if not path.held or len(heading_rad) < 3:
-        return 0.0
-    return float(np.degrees(np.std(np.unwrap(heading_rad), ddof=1)))
+        return 0.0, 0.0
+    heading_deg = np.degrees(np.unwrap(heading_rad))
+    fresh = 0.5 * float(np.mean(np.diff(heading_deg) ** 2))
+    slow = max(float(np.var(heading_deg, ddof=1)) - fresh, 0.0)
+    return float(np.sqrt(fresh)), float(np.sqrt(slow))
 
 
 def _side_px(corners_px: FloatArray) -> float:
@@ -325,7 +333,7 @@ def foresee(prospect: Prospect, plan: Plan | None = None, *, seed: int = 0) -> F
     """
     plan = plan or Plan()
     track = imagined(prospect, plan, np.random.default_rng([seed, 31]))
-    still = prospect.view_deg == 0.0
+    still = prospect.view_deg == prospect.view_fresh_deg == 0.0
     try:
         calibration = calibrate(track)
         seen = usable_frames(track, solve_poses(track, calibration))
@@ -351,6 +359,8 @@ def imagined(prospect: Prospect, plan: Plan, rng: np.random.Generator) -> Corner
     n_frames = len(time_s)
     is_key = _keys(time_s, prospect.key_s)
     shown_deg = heading_deg + prospect.view_deg * _slow_noise(n_frames, VIEW_S / prospect.frame_s, rng)
+    if prospect.view_fresh_deg:
+        shown_deg += prospect.view_fresh_deg * rng.normal(size=n_frames)
     poses = np.repeat(prospect.pose[None], n_frames, axis=0)
     poses[:, 0] -= np.deg2rad(shown_deg)
     corners_px = corners_at(prospect.p, poses, prospect.units)

@@ -51,7 +51,7 @@ def test_figures_of_the_view_agree_with_the_scene(glimpse, prospect):
 def test_fresh_noise_of_raw_frames_is_told_from_what_stays(prospect):
     assert 0.6 < prospect.fresh < 1.5  # the frames were never coded: their noise is that of the information
     assert prospect.frozen < 2.5  # one view has five degrees of freedom to tell it by
-    assert prospect.view_deg == 0.0
+    assert prospect.view_fresh_deg == prospect.view_deg == 0.0
 
 
 def test_the_uncertainty_of_an_imagined_clip_is_true(prospect):
@@ -84,6 +84,8 @@ def test_cures_lower_the_uncertainty_as_they_should(prospect):
     assert but_edges_deg(foresee(with_sharper_corners(bad, 2.0))) < 0.7 * but_edges_deg(foresee(bad))
     assert but_edges_deg(foresee(free_of_coding(bad))) < 0.6 * but_edges_deg(foresee(bad))
     assert foresee(replace(bad, view_deg=0.05)).u_deg > 1.5 * now
+    # What changes from frame to frame is averaged away; what is slow is not.
+    assert foresee(replace(bad, view_fresh_deg=0.05)).u_deg < 0.7 * foresee(replace(bad, view_deg=0.05)).u_deg
 
 
 def test_one_frame_is_enough(glimpse):
