@@ -28,7 +28,7 @@ WORTH = 0.98
 """A rendering with tone curve and halo is kept if it leaves less than this share of what plain blur leaves."""
 
 
-ENOUGH_PX = 300.0
+ENOUGH_PX = 400.0
 """So many compared pixels on a marker are enough while the pair moves: rests are what counts."""
 
 THINNED = ((1, 1), (2, 1), (2, 2), (3, 2), (3, 3), (4, 3), (4, 4), (5, 4), (5, 5))
