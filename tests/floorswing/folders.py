@@ -39,6 +39,7 @@ def measured(out: Path, name: str, seed: int, *, surface: str = "cork tile", rob
 
 def _turn(table: TurnTable, n: int) -> MeasuredTurn:
     like = dataclasses.asdict(clip_result([1.0]).turns[0])
+    del like["degrees_of_freedom"], like["expanded_deg"]  # these are in measurement.json, not in the table
     start, change = float(table.start_heading_deg[n]), float(table.turns.heading_deg[n])
     like |= {
         "start_s": 3.0 * n + 1.0,
