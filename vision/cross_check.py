@@ -11,6 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy import stats
 
 from vision.budget import RestHeading
 from vision.bundle import Calibration
@@ -19,8 +20,8 @@ from vision.poses import solve_poses
 from vision.records import FloatArray
 from vision.turns import Seen
 
-SURE = 3.0
-"""The mean difference is worth a warning beyond so many of its standard uncertainties."""
+CHANCE = 0.002
+"""A mean or a slope that scatter alone reaches this often is no disagreement."""
 
 FEWEST_CHANGES = 4
 
@@ -55,8 +56,9 @@ class CrossCheck:
         if self.n_changes < FEWEST_CHANGES:
             return True
         u_mean_deg = self.spread_deg / np.sqrt(self.n_changes)
-        mean_agrees = abs(self.mean_deg) <= SURE * u_mean_deg
-        return bool(mean_agrees and abs(self.gain_share) <= SURE * self.u_gain_share)
+        sure = float(stats.t.ppf(1.0 - 0.5 * CHANCE, self.n_changes - 1))
+        mean_agrees = abs(self.mean_deg) <= sure * u_mean_deg
+        return bool(mean_agrees and abs(self.gain_share) <= sure * self.u_gain_share)
 
 
 def cross_check(

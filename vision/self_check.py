@@ -23,7 +23,7 @@ from vision.records import FloatArray
 FEWEST_SECTORS = 24
 """Sectors of heading that must be covered to tell the harmonics from each other (144 degrees)."""
 
-CHANCE = 0.05
+CHANCE = 0.01
 """Amplitudes that noise alone reaches this often bound the error by their uncertainty alone."""
 
 
@@ -88,8 +88,8 @@ def check_rotation(track: CornerTrack, calibration: Calibration, poses: Poses) -
         squareness_second=square,
         u_distance=u_distance,
         u_squareness=u_square,
-        beyond_chance=_beyond_chance(first, second, u_distance),
-        bound_deg=2.0 * float(np.degrees(_bound(first, second, u_distance))),
+        beyond_chance=_beyond_chance(first, second, u_distance, len(headings)),
+        bound_deg=2.0 * float(np.degrees(_bound(first, second, u_distance, len(headings)))),
         n_sectors=len(headings),
     )
 
@@ -130,12 +130,13 @@ def _waves(heading_rad: FloatArray, values: FloatArray) -> tuple[float, float, f
     return float(np.hypot(found[1], found[2])), float(np.hypot(found[3], found[4])), u
 
 
-def _beyond_chance(first: float, second: float, u: float) -> bool:
-    return bool(first**2 + second**2 > stats.chi2.ppf(1.0 - CHANCE, 4) * u**2)
+def _beyond_chance(first: float, second: float, u: float, n_sectors: int) -> bool:
+    limit = 4.0 * float(stats.f.ppf(1.0 - CHANCE, 4, n_sectors - 5))  # four amplitudes, five parameters
+    return bool(first**2 + second**2 > limit * u**2)
 
 
-def _bound(first: float, second: float, u: float) -> float:
+def _bound(first: float, second: float, u: float, n_sectors: int) -> float:
     """Return the amplitude of both waves, less what noise puts into it; their uncertainty where noise explains them."""
-    if not _beyond_chance(first, second, u):
+    if not _beyond_chance(first, second, u, n_sectors):
         return u
     return float(np.sqrt(first**2 + second**2 - 4.0 * u**2))
