@@ -79,7 +79,7 @@ def edge_corners(image: LumaImage, corners_px: FloatArray, n_modules: int) -> Ed
         return None
     offset, step = _steps(greys.reshape(4 * PROFILES, -1), across)
     offset, step = offset.reshape(4, PROFILES), step.reshape(4, PROFILES)
-    good = np.isfinite(offset) & (step > max(LEAST_STEP_GREY, 0.4 * float(np.nanmedian(step))))
+    good = np.isfinite(offset) & (step > max(LEAST_STEP_GREY, 0.4 * float(np.median(step))))
     if good.sum(axis=1).min() < FEWEST_PROFILES:
         return None
     return _meet(corners_px, normals, *_lines(share, np.where(good, offset, 0.0), good.astype(np.float64)))
@@ -116,7 +116,8 @@ def _steps(greys: FloatArray, across: FloatArray) -> tuple[FloatArray, FloatArra
     The slope's middle is taken about its own place twice over, within a window that is even about it: the pull of
     whatever lies at the ends of the profile then cancels.
     """
-    slope = np.maximum(np.gradient(greys, across, axis=1), 0.0)
+    slope = np.zeros_like(greys)
+    slope[:, 1:-1] = np.maximum(greys[:, 2:] - greys[:, :-2], 0.0) / (2.0 * STEP_PX)
     half = 0.6 * float(across[-1])
     offset = np.zeros(len(greys))
     for _ in range(4):
@@ -142,13 +143,16 @@ def _lines(share: FloatArray, offset: FloatArray, good: FloatArray) -> tuple[Flo
     design = np.column_stack([1.0 - share, share])
     products = design[:, :, None] * design[:, None, :]
     weight = good
-    for _ in range(5):
+    middle = (good.sum(axis=1, keepdims=True) // 2).astype(np.intp)  # place of the median among the good ones
+    for _ in range(4):
         normal = np.einsum("kp,pij->kij", weight, products)
         ends = np.linalg.solve(normal, np.einsum("kp,pi->ki", weight * offset, design)[..., None])[..., 0]
-        left = np.where(good > 0.0, offset - ends @ design.T, np.nan)
-        scale = 1.4826 * np.nanmedian(np.abs(left), axis=1, keepdims=True) + 1e-4
-        weight = good * np.minimum(1.0, HUBER * scale / np.maximum(np.nan_to_num(np.abs(left)), 1e-12))
-    variance = np.nansum(weight * left**2, axis=1) / np.maximum(weight.sum(axis=1) - 2.0, 1.0)
+        left = offset - ends @ design.T
+        far = np.abs(left)
+        ordered = np.sort(np.where(good > 0.0, far, np.inf), axis=1)
+        scale = 1.4826 * np.take_along_axis(ordered, middle, axis=1) + 1e-4
+        weight = good * np.minimum(1.0, HUBER * scale / np.maximum(far, 1e-12))
+    variance = (weight * left**2).sum(axis=1) / np.maximum(weight.sum(axis=1) - 2.0, 1.0)
     cov: FloatArray = np.linalg.inv(normal) * variance[:, None, None]
     return ends, cov
 
