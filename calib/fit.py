@@ -12,12 +12,14 @@ named, and a fit that they pull little at stands beside. What a plan cannot tell
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
+from calib.at_once import search_scatter
 from calib.errors import CalibError, NotEnoughTurns
 from calib.intervals import Estimate, t_estimate
 from calib.linear import TINY
@@ -27,7 +29,9 @@ from calib.models import (
     Candidate,
     Model,
     aicc,
+    all_columns,
     can_tell_dead_band,
+    columns_taken,
     design_of,
     possible_models,
     sides_of,
@@ -38,8 +42,11 @@ from calib.scatter import (
     ScatterFit,
     average_over_laws,
     average_over_sets,
+    fit_at_scatter,
     fit_with_scatter,
     scatter_variance_deg2,
+    shape_of,
+    typical_size,
 )
 from calib.strays import (
     FEWEST_DOF,
@@ -222,13 +229,13 @@ class _Choice:
     Parameters
     ----------
     turns : Turns
-    ranked : tuple of (Candidate, ScatterFit)
+    ranked : tuple of Candidate
     best, full : tuple of (Model, ScatterFit)
         The one chosen, and that with every term; laws averaged.
     """
 
     turns: Turns
-    ranked: tuple[tuple[Candidate, ScatterFit], ...]
+    ranked: tuple[Candidate, ...]
     best: tuple[Model, ScatterFit]
     full: tuple[Model, ScatterFit]
 
@@ -331,41 +338,88 @@ def _choose(turns: Turns, kept: NDArray[np.bool_], drop_terms: bool) -> tuple[_C
     known = kept & np.isfinite(turns.reversed_)
     can_tell = can_tell_dead_band(turns.take(known)) if known.any() else False
     chosen = known if can_tell else kept
-    ranked = _ranked(turns.take(chosen), dead_band=can_tell)
-    full = _averaged(ranked, _fullest(ranked))
-    best = _averaged(ranked, ranked[0][0].model) if drop_terms else full
+    rows = turns.take(chosen)
+    ranked = _ranked(rows, dead_band=can_tell)
+    full = _averaged(rows, ranked, _fullest(ranked))
+    best = _averaged(rows, ranked, ranked[0].model) if drop_terms else full
     if can_tell and not best[0].dead_band:  # turns with unknown slack count again
         chosen = kept
         again = [_fit_model(turns.take(kept), replace(best[0], law=one.law)) for one in best[1].shares]
         fits = [one for one in again if one is not None]
         best = (best[0], average_over_laws(fits)) if len(fits) == len(again) else best
-    choice = _Choice(turns=turns.take(chosen), ranked=ranked, best=best, full=full)
+    choice = _Choice(
+        turns=turns.take(chosen), ranked=tuple(one.candidate for one in ranked), best=best, full=full
+    )
     return choice, np.flatnonzero(chosen)
 
 
-def _averaged(ranked: tuple[tuple[Candidate, ScatterFit], ...], model: Model) -> tuple[Model, ScatterFit]:
+@dataclass(frozen=True, kw_only=True, slots=True)
+class _Tried:
+    """A model that was tried, with the scatter found for it."""
+
+    candidate: Candidate
+    scatter_deg: float
+
+    @property
+    def model(self) -> Model:
+        return self.candidate.model
+
+
+def _averaged(turns: Turns, ranked: Sequence[_Tried], model: Model) -> tuple[Model, ScatterFit]:
     """Return a model's terms under all laws that were tried, averaged; the law named is the most likely one."""
-    alike = [found for one, found in ranked if replace(one.model, law=model.law) == model]
+    size = nominal_size_deg(turns)
+    design, along = design_of(turns, model), turns.heading_deg * turns.side
+    alike = [
+        fit_at_scatter(design, along, turns.u_deg, size, one.model.law, one.scatter_deg)
+        for one in ranked
+        if replace(one.model, law=model.law) == model
+    ]
     mean = average_over_laws(alike)
     return replace(model, law=mean.law), mean
 
 
-def _ranked(turns: Turns, *, dead_band: bool) -> tuple[tuple[Candidate, ScatterFit], ...]:
-    tried = [(model, _fit_model(turns, model)) for model in possible_models(turns, dead_band=dead_band)]
-    fitted = [
-        (Candidate(model=model, aicc=aicc(found, len(turns))), found) for model, found in tried if found is not None
-    ]
-    if not fitted:
+def _ranked(turns: Turns, *, dead_band: bool) -> tuple[_Tried, ...]:
+    """Return all models that the turns tell, each with its scatter, best by the criterion first."""
+    columns, n = all_columns(turns), len(turns)
+    models = possible_models(turns, dead_band=dead_band)
+    told = {terms: _is_told(columns[:, np.array(terms)]) for terms in {columns_taken(one) for one in models}}
+    models = [one for one in models if told[columns_taken(one)]]
+    if not models:
         raise CalibError("no model can be fitted to these turns; more turns, or more different ones, are needed")
-    return tuple(sorted(fitted, key=lambda one: one[0].aicc))
+    size = nominal_size_deg(turns)
+    found = search_scatter(
+        np.nan_to_num(columns) if not dead_band else columns,
+        np.array([columns_taken(one) for one in models]),
+        turns.heading_deg * turns.side,
+        turns.u_deg,
+        np.array([shape_of(size, typical_size(size), one.law) for one in models]),
+    )
+    criterion = [
+        aicc(float(likelihood), sum(columns_taken(one)), n)
+        for one, likelihood in zip(models, found.log_likelihood, strict=True)
+    ]
+    tried = [
+        _Tried(candidate=Candidate(model=one, aicc=value), scatter_deg=float(scatter))
+        for one, value, scatter in zip(models, criterion, found.scatter_deg, strict=True)
+    ]
+    return tuple(sorted(tried, key=lambda one: one.candidate.aicc))
 
 
-def _fullest(ranked: tuple[tuple[Candidate, ScatterFit], ...]) -> Model:
+def _is_told(columns: FloatArray) -> bool:
+    """Return whether columns depend neither on each other nor fit everything."""
+    n, p = columns.shape
+    if n <= p:
+        return False
+    diagonal = np.abs(np.diag(np.linalg.qr(columns / np.maximum(np.abs(columns).max(axis=0), TINY), mode="r")))
+    return bool(diagonal.min() > 1e-11 * diagonal.max())
+
+
+def _fullest(ranked: Sequence[_Tried]) -> Model:
     """Return the model with every term; an offset only where the turns leave no doubt of it."""
-    best = ranked[0][0]
-    without = [one for one in ranked if not one[0].model.offset]
-    offset = best.model.offset and without[0][0].aicc - best.aicc > STRONG
-    pool = [one.model for one, _ in ranked if one.model.offset == offset]
+    best = ranked[0]
+    without = [one for one in ranked if not one.model.offset]
+    offset = best.model.offset and without[0].candidate.aicc - best.candidate.aicc > STRONG
+    pool = [one.model for one in ranked if one.model.offset == offset]
     return max(pool, key=lambda one: one.separate_gains + one.dead_band)
 
 
@@ -428,7 +482,7 @@ def _concluded(
         laws=scatter.shares,
         n_turns=len(choice.turns),
         tried_wheel_deg=(float(size.min()), float(size.max())),
-        candidates=tuple(candidate for candidate, _ in choice.ranked),
+        candidates=choice.ranked,
         notes=(*_notes(choice.turns), *doubts),
         residuals_deg=scatter.linear.residuals,
         standardised=scatter.linear.residuals / np.sqrt(scatter.variance_deg2),

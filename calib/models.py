@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from calib.scatter import LAWS, ScatterFit
+from calib.scatter import LAWS
 from calib.turns import Turns
 
 FloatArray = NDArray[np.float64]
@@ -99,15 +99,26 @@ def design_of(turns: Turns, model: Model) -> FloatArray:
     return np.column_stack(columns)
 
 
-def aicc(found: ScatterFit, n_turns: int) -> float:
+def all_columns(turns: Turns) -> FloatArray:
+    """Return columns of which every model's terms are some, shape (N, 4); see `columns_taken`."""
+    size, side = np.abs(turns.wheel_deg), turns.side
+    return np.column_stack([size, size * side, -turns.reversed_, side])
+
+
+def columns_taken(model: Model) -> tuple[bool, bool, bool, bool]:
+    """Return which of `all_columns` span a model's terms."""
+    return True, model.separate_gains, model.dead_band, model.offset
+
+
+def aicc(log_likelihood: float, n_terms: int, n_turns: int) -> float:
     """Return the corrected information criterion; infinite where too few turns are left to correct it.
 
     References
     ----------
     Hurvich and Tsai (1989), Regression and time series model selection in small samples, Biometrika 76, 297-307.
     """
-    n_free = len(found.linear.coefficients) + 1
+    n_free = n_terms + 1
     spare = n_turns - n_free - 1
     if spare <= 0:
         return np.inf
-    return -2.0 * found.log_likelihood + 2.0 * n_free + 2.0 * n_free * (n_free + 1) / spare
+    return -2.0 * log_likelihood + 2.0 * n_free + 2.0 * n_free * (n_free + 1) / spare

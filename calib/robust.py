@@ -40,7 +40,9 @@ class RobustFit:
 
 
 def robust_fit(design: FloatArray, data: FloatArray, variance: FloatArray) -> RobustFit:
-    """Fit a linear model by maximum likelihood with Student-t errors (expectation-maximisation).
+    """Fit a linear model by maximum likelihood with Student-t errors.
+
+    By expectation-maximisation with an expanded parameter, which goes to the same maximum in fewer rounds.
 
     Parameters
     ----------
@@ -52,20 +54,31 @@ def robust_fit(design: FloatArray, data: FloatArray, variance: FloatArray) -> Ro
     References
     ----------
     Lange, Little and Taylor (1989), Robust statistical modeling using the t distribution, JASA 84, 881-896.
+    Kent, Tyler and Vardi (1994), A curious likelihood identity for the multivariate t-distribution,
+    Communications in Statistics - Simulation and Computation 23, 441-453.
     """
-    fit = least_squares(design, data, 1.0 / variance)
-    floor = 1e-12 * max(float(np.abs(data).max()), 1e-300) / float(np.sqrt(variance.min()))
-    spread = np.abs(fit.residuals) / np.sqrt(variance)
-    scale = max(1.4826 * float(np.median(spread)), floor)
-    weight = np.ones(len(data))
+    start = least_squares(design, data, 1.0 / variance)
+    root = 1.0 / np.sqrt(variance)
+    basis, triangle = np.linalg.qr(design * root[:, None])
+    values = data * root
+    floor = 1e-12 * max(float(np.abs(data).max()), 1e-300) * float(root.max())
+    away = values - basis @ (basis.T @ values)
+    scale = max(1.4826 * float(np.median(np.abs(away))), floor)
+    weight, along = np.ones(len(data)), basis.T @ values
     for _ in range(200):
-        weight = (TAIL_DOF + 1.0) / (TAIL_DOF + (fit.residuals**2 / variance) / scale**2)
-        fit = least_squares(design, data, weight / variance)
-        moved = max(float(np.sqrt(np.mean(weight * fit.residuals**2 / variance))), floor)
+        weight = (TAIL_DOF + 1.0) / (TAIL_DOF + (away / scale) ** 2)
+        weighted = basis * weight[:, None]
+        along = np.linalg.solve(weighted.T @ basis, weighted.T @ values)
+        away = values - basis @ along
+        moved = max(float(np.sqrt(np.sum(weight * away**2) / np.sum(weight))), floor)
         done = abs(moved - scale) <= 1e-10 * scale
         scale = moved
         if done:
             break
-    normal = least_squares(design, data, 1.0 / variance).unscaled_cov
-    widen = (TAIL_DOF + 3.0) / (TAIL_DOF + 1.0) * len(data) / fit.dof
-    return RobustFit(coefficients=fit.coefficients, cov=normal * scale**2 * widen, scale=scale, weight=weight)
+    widen = (TAIL_DOF + 3.0) / (TAIL_DOF + 1.0) * len(data) / start.dof
+    return RobustFit(
+        coefficients=np.linalg.solve(triangle, along),
+        cov=start.unscaled_cov * scale**2 * widen,
+        scale=scale,
+        weight=weight,
+    )

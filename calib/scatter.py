@@ -8,7 +8,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from calib.linear import TINY, LinearFit, least_squares
+from calib.at_once import search_scatter
+from calib.linear import LinearFit, least_squares
 from calib.mixture import worth
 
 FloatArray = NDArray[np.float64]
@@ -90,34 +91,24 @@ def fit_with_scatter(design: FloatArray, data: FloatArray, u: FloatArray, size: 
     law : str
         A key of `LAWS`.
     """
-    u = np.maximum(u, 1e-3 * float(u.max()))
-    typical = float(np.exp(np.mean(np.log(size))))
-    shape = shape_of(size, typical, law)
-    first = least_squares(design, data, 1.0 / shape)
-    if not np.any(u > 0.0):
-        return _made(first, first.residual_sd, typical, law, shape * first.residual_sd**2, design, data)
-    scatter = _best_scatter(design, data, u, shape, first.residual_sd)
-    variance = u**2 + scatter**2 * shape
-    return _made(first, scatter, typical, law, variance, design, data)
+    least_squares(design, data)  # refuses what cannot be told apart
+    shape = shape_of(size, typical_size(size), law)
+    taken = np.ones((1, design.shape[1]), dtype=bool)
+    found = search_scatter(design, taken, data, u, shape[None, :])
+    return fit_at_scatter(design, data, u, size, law, float(found.scatter_deg[0]))
 
 
-def _best_scatter(design: FloatArray, data: FloatArray, u: FloatArray, shape: FloatArray, first_guess: float) -> float:
-    """Return the scatter with the greatest residual likelihood, by grids each inside the last, then a parabola."""
-    low, high = 0.0, 3.0 * max(first_guess, 1e-12)
-    grid = np.linspace(low, high, 25)
-    for _ in range(2):
-        found = _residual_likelihood(design, data, u**2 + np.outer(grid**2, shape))
-        best = int(np.argmax(found))
-        low, high = grid[max(best - 1, 0)], grid[min(best + 1, len(grid) - 1)]
-        grid = np.linspace(low, high, 25)
-    found = _residual_likelihood(design, data, u**2 + np.outer(grid**2, shape))
-    best = int(np.argmax(found))
-    if best in (0, len(grid) - 1):
-        return float(grid[best])
-    below, at, above = found[best - 1 : best + 2]
-    curve = below - 2.0 * at + above
-    shift = 0.5 * (below - above) / curve if curve < 0.0 else 0.0
-    return float(grid[best] + shift * (grid[1] - grid[0]))
+def fit_at_scatter(
+    design: FloatArray, data: FloatArray, u: FloatArray, size: FloatArray, law: str, scatter_deg: float
+) -> ScatterFit:
+    """Fit a line with a scatter that was found before; parameters as of `fit_with_scatter`."""
+    u, typical = np.maximum(u, 1e-3 * float(u.max())), typical_size(size)
+    return _made(scatter_deg, typical, law, u**2 + scatter_deg**2 * shape_of(size, typical, law), design, data)
+
+
+def typical_size(size: FloatArray) -> float:
+    """Return the geometric mean of sizes."""
+    return float(np.exp(np.mean(np.log(size))))
 
 
 def shape_of(size: FloatArray, typical: float, law: str) -> FloatArray:
@@ -126,13 +117,7 @@ def shape_of(size: FloatArray, typical: float, law: str) -> FloatArray:
 
 
 def _made(
-    linear: LinearFit,
-    scatter: float,
-    typical: float,
-    law: str,
-    variance: FloatArray,
-    design: FloatArray,
-    data: FloatArray,
+    scatter: float, typical: float, law: str, variance: FloatArray, design: FloatArray, data: FloatArray
 ) -> ScatterFit:
     variance = np.maximum(variance, (1e-15 * max(float(np.abs(data).max()), 1e-100)) ** 2)
     final = least_squares(design, data, 1.0 / variance)
@@ -153,7 +138,7 @@ def _made(
         ),
         variance_deg2=variance,
         log_likelihood=likelihood,
-        residual_likelihood=float(_residual_likelihood(design, data, variance[None, :])[0]),
+        residual_likelihood=_residual_likelihood(final, variance),
     )
 
 
@@ -218,19 +203,9 @@ def scatter_variance_deg2(shares: Sequence[LawShare], size: FloatArray, typical:
     return np.asarray(sum(parts), dtype=np.float64)
 
 
-def _residual_likelihood(design: FloatArray, data: FloatArray, variance: FloatArray) -> FloatArray:
-    """Return the logarithm of the residual likelihood up to a constant, for each row of `variance`, shape (K,).
-
-    By normal equations, with the columns at a common size, since it is only searched.
-    """
-    matrix = design / np.maximum(np.abs(design).max(axis=0), TINY)
-    weight = 1.0 / np.maximum(variance, TINY)
-    n, p = matrix.shape
-    products = (matrix[:, :, None] * matrix[:, None, :]).reshape(n, p * p)
-    normal = (weight @ products).reshape(-1, p, p)
-    right = weight @ (matrix * data[:, None])
-    coefficients = np.linalg.solve(normal, right[..., None])[..., 0]
-    left = data - coefficients @ matrix.T
-    _, log_det = np.linalg.slogdet(normal)
-    squares = np.sum(weight * left**2, axis=1)
-    return np.asarray(0.5 * (np.sum(np.log(weight), axis=1) - squares - log_det))
+def _residual_likelihood(fit: LinearFit, variance: FloatArray) -> float:
+    """Return the logarithm of the residual likelihood, up to a constant that is the same for all laws."""
+    size = np.sqrt(np.diag(fit.unscaled_cov))
+    _, log_det = np.linalg.slogdet(fit.unscaled_cov / np.outer(size, size))
+    log_det_cov = log_det + 2.0 * float(np.sum(np.log(size)))
+    return float(0.5 * (log_det_cov - np.sum(np.log(variance) + fit.residuals**2 / variance)))

@@ -10,6 +10,11 @@ import numpy as np
 from scipy import special, stats
 from scipy.optimize import brentq
 
+_NODES, _WEIGHTS = (np.asarray(one) for one in np.polynomial.legendre.leggauss(96))
+CENTRE_NODES = 4.5 * (_NODES + 1.0)
+CENTRE_WEIGHTS = 9.0 * _WEIGHTS * np.exp(-0.5 * CENTRE_NODES**2) / math.sqrt(2.0 * math.pi)
+"""Where the centre may lie, in its standard uncertainties either way, and how likely."""
+
 
 def tolerance_factor(n: float, dof: float, coverage: float, confidence: float) -> float:
     """Return the exact two-sided factor for a normal population.
@@ -51,17 +56,12 @@ def tolerance_half_width(laws: Sequence[HalfBand], dof: float, coverage: float, 
     coverage, confidence : float
     """
     _check(coverage, confidence)
-    nodes, weights = np.polynomial.legendre.leggauss(96)
-    z = 4.5 * (nodes + 1.0)
-    density = 4.5 * weights * 2.0 * stats.norm.pdf(z)
-    reach2 = [stats.ncx2.ppf(coverage, 1, (z * one.u_centre / one.sd) ** 2) * one.sd**2 for one in laws]
+    weight, centre, sd = (np.array([getattr(one, name) for one in laws]) for name in ("weight", "u_centre", "sd"))
+    reach2 = special.chndtrix(coverage, 1.0, np.outer(centre / sd, CENTRE_NODES) ** 2) * sd[:, None] ** 2
 
     def short(log_half: float) -> float:
-        sure = [
-            one.weight * float(density @ special.chdtrc(dof, dof * reach * math.exp(-2.0 * log_half)))
-            for one, reach in zip(laws, reach2, strict=True)
-        ]
-        return sum(sure) - confidence
+        sure = special.chdtrc(dof, dof * reach2 * math.exp(-2.0 * log_half)) @ CENTRE_WEIGHTS
+        return float(weight @ sure) - confidence
 
     middle = math.log(max(one.sd for one in laws))
     return math.exp(float(brentq(short, middle + math.log(1e-3), middle + math.log(1e6), xtol=1e-12)))
